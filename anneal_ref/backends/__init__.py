@@ -1,0 +1,1 @@
+"""Interchangeable solvers of the Schrodinger equation."""

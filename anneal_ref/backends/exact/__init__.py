@@ -1,0 +1,1 @@
+"""The exact state vector."""

@@ -1,0 +1,1 @@
+"""The ground floor: errors, border checks, estimates, identities, run settings, storage, provenance."""

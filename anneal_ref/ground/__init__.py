@@ -1,0 +1,1 @@
+"""Exact classical ground energies: always a value and a bound."""

@@ -1,0 +1,1 @@
+"""What a processor's samples are worth against the truth."""

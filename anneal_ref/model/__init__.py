@@ -1,0 +1,1 @@
+"""What gets solved: lattices, disorder, instances, schedules, anneals."""

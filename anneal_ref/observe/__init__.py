@@ -1,0 +1,1 @@
+"""Moments, observables and a processor's samples."""

@@ -1,0 +1,1 @@
+"""The archive, the study file, and a study's verdict."""

@@ -1,0 +1,1 @@
+"""Truth with error bars."""

@@ -1,0 +1,1 @@
+"""Command line, tables, plots, page and demo: thin layers over the floors above."""
