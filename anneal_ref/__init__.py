@@ -43,7 +43,7 @@ _MODULES = {
 }
 _HOME = {name: module for module, names in _ROOMS.items() for name in names}
 
-__all__ = ["__version__", *sorted([*_HOME, *_MODULES])]  # noqa: PLE0604
+__all__ = ["__version__", *sorted([*_HOME, *_MODULES])]
 
 
 def __getattr__(name: str) -> Any:

@@ -50,7 +50,12 @@ def finite(
     if shape is not None and (
         array.ndim != len(shape) or any(want not in (None, got) for want, got in zip(shape, array.shape, strict=True))
     ):
-        wanted = "(" + ", ".join("any" if want is None else str(want) for want in shape) + ("," if len(shape) == 1 else "") + ")"
+        wanted = (
+            "("
+            + ", ".join("any" if want is None else str(want) for want in shape)
+            + ("," if len(shape) == 1 else "")
+            + ")"
+        )
         raise InputError(f"{name} must have shape {wanted}; got shape {array.shape}")
     bad = ~np.isfinite(array)
     if bad.any():
@@ -89,7 +94,9 @@ def positive(name: str, value: Any, unit: str = "") -> float:
 def integer(name: str, value: Any, low: int | None = None, high: int | None = None) -> int:
     """Return an int within [low, high], or raise `InputError`; a float is taken only if it is whole."""
     allowed = f"a whole number{_range(low, high)}"
-    whole = isinstance(value, int | np.integer) or (isinstance(value, float | np.floating) and float(value).is_integer())
+    whole = isinstance(value, int | np.integer) or (
+        isinstance(value, float | np.floating) and float(value).is_integer()
+    )
     if isinstance(value, bool | np.bool_) or not whole:
         raise InputError(f"{name} must be {allowed}; got {_short(value)}")
     result = int(value)

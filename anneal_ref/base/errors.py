@@ -20,11 +20,7 @@ class AnnealRefError(Exception):
 
 
 def _rebuild(kind: type[AnnealRefError], message: str, carried: dict[str, Any]) -> AnnealRefError:
-    error = kind.__new__(kind)
-    Exception.__init__(error, message)
-    for name, value in carried.items():
-        setattr(error, name, value)
-    return error
+    return kind(message, **carried)
 
 
 class InputError(AnnealRefError, ValueError):

@@ -67,4 +67,6 @@ def _plain(value: Any) -> Any:
         return {key: _plain(item) for key, item in value.items()}
     if isinstance(value, Sequence) and not isinstance(value, bytes):
         return [_plain(item) for item in value]
-    raise InputError(f"a {type(value).__name__} has no canonical form; use numbers, strings, arrays, lists and mappings")
+    raise InputError(
+        f"a {type(value).__name__} has no canonical form; use numbers, strings, arrays, lists and mappings"
+    )

@@ -62,5 +62,10 @@ class Run:
             return
         from tqdm import tqdm
 
-        with tqdm(total=total, desc=label, leave=False, bar_format="{desc}: {percentage:3.0f}%|{bar}| {remaining} left {postfix}") as inner:
+        with tqdm(
+            total=total,
+            desc=label,
+            leave=False,
+            bar_format="{desc}: {percentage:3.0f}%|{bar}| {remaining} left {postfix}",
+        ) as inner:
             yield Bar(inner)
