@@ -1,0 +1,205 @@
+"""The command line: `anneal-ref demo | plan | reference | assess | compare | audit`, thin layers over the library.
+
+Exit codes
+----------
+0    the command did its work; `assess` also when the verdict is "reject" or "inconclusive"
+1    `assess --strict`: the verdict is "reject"; `audit`: a file of the archive cannot be trusted
+2    the input is not allowed; one paragraph on standard error says why
+3    `assess --strict`: the verdict is "inconclusive"
+130  interrupted; finished references stay in the archive
+
+Everything heavy is imported inside the commands, so that `--help` answers at once.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+import textwrap
+import warnings
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any, NoReturn
+
+from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning
+from anneal_ref.base.provenance import library_version
+
+OK, REJECTED, BAD_INPUT, INCONCLUSIVE, INTERRUPTED = 0, 1, 2, 3, 130
+
+
+def main(argv: Sequence[str] | None = None) -> int:
+    """Run one command and return its exit code.
+
+    Parameters
+    ----------
+    argv : sequence of str, optional
+        The arguments; by default those of the process.
+    """
+    options = _parser().parse_args(argv)
+    with warnings.catch_warnings():
+        warnings.showwarning = _note
+        warnings.simplefilter("always", AnnealRefWarning)
+        try:
+            return int(options.command(options))
+        except AnnealRefError as error:
+            print(f"anneal-ref {options.name}: {error}", file=sys.stderr)
+            return BAD_INPUT
+        except KeyboardInterrupt:
+            print(_farewell(options), file=sys.stderr)
+            return INTERRUPTED
+        except BrokenPipeError:
+            # the reader of our output went away; keep the interpreter from complaining at exit
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+            return OK
+
+
+def entry() -> NoReturn:
+    """Run as `python -m anneal_ref.views.cli`."""
+    sys.exit(main())
+
+
+def _demo(options: argparse.Namespace) -> int:
+    from anneal_ref.views.demo import copy_demo
+
+    folder = copy_demo(options.demo, options.into)
+    print(f"The demo study is in {folder}{os.sep}. It holds a schedule, a study file and the samples of an invented processor.")
+    print(f"Next:  anneal-ref plan {folder / 'study.toml'}     what the work will cost")
+    print(f"       anneal-ref assess {folder / 'study.toml'}   the verdict, with a page of tables and plots")
+    return OK
+
+
+def _plan(options: argparse.Namespace) -> int:
+    from anneal_ref.studies.archive import Archive
+    from anneal_ref.studies.assess import plan
+    from anneal_ref.studies.study import Study
+    from anneal_ref.views.tables import plan_table
+
+    study = Study.read(options.study)
+    archive = Archive(_archive(options), create=False)
+    print(plan_table(study, plan(study, archive), archive.folder))
+    return OK
+
+
+def _reference(options: argparse.Namespace) -> int:
+    from anneal_ref.base.run import Run
+    from anneal_ref.studies.archive import Archive
+    from anneal_ref.studies.assess import solve
+    from anneal_ref.studies.study import Study
+
+    study = Study.read(options.study)
+    archive = Archive(_archive(options))
+    solve(study, archive, run=Run(threads=options.threads))
+    print(archive.table())
+    return OK
+
+
+def _assess(options: argparse.Namespace) -> int:
+    from anneal_ref.base.run import Run
+    from anneal_ref.studies.archive import Archive
+    from anneal_ref.studies.assess import assess
+    from anneal_ref.studies.study import Study
+
+    study = Study.read(options.study)
+    archive = Archive(_archive(options))
+    verdict = assess(study, archive, run=Run(threads=options.threads))
+    print(verdict)
+    if not options.no_page:
+        from anneal_ref.views.report import write_page
+
+        page = options.page or Path(options.study).with_suffix(".html")
+        write_page(verdict, page)
+        print(f"\nPage with plots: {page}\nReferences:      {archive.folder}{os.sep}")
+    return {"accept": OK, "reject": REJECTED, "inconclusive": INCONCLUSIVE}[verdict.outcome] if options.strict else OK
+
+
+def _compare(options: argparse.Namespace) -> int:
+    from anneal_ref.judgement.compare import compare
+    from anneal_ref.observe.samples import Samples
+    from anneal_ref.studies.archive import read_reference
+
+    reference = read_reference(options.reference)
+    read = [Samples.read(file, readout=options.readout).for_instance(reference.anneal.instance) for file in options.samples]
+    print(compare(reference, Samples.concatenate(read)))
+    return OK
+
+
+def _audit(options: argparse.Namespace) -> int:
+    from anneal_ref.base.run import Run
+    from anneal_ref.studies.archive import Archive
+
+    report = Archive(options.archive, create=False).audit(
+        recompute=options.recompute, seed=options.seed, run=Run(threads=options.threads)
+    )
+    print(report)
+    return OK if report.sound else REJECTED
+
+
+def _archive(options: argparse.Namespace) -> Path:
+    """Folder of the references: the one given, or `truth` beside the study file."""
+    return Path(options.archive) if options.archive else Path(options.study).parent / "truth"
+
+
+def _note(message: Warning | str, category: type[Warning], filename: str, lineno: int, *rest: Any) -> None:
+    if issubclass(category, AnnealRefWarning):
+        print(f"note: {message}", file=sys.stderr)
+    else:
+        print(warnings.formatwarning(message, category, filename, lineno), end="", file=sys.stderr)
+
+
+def _farewell(options: argparse.Namespace) -> str:
+    kept = ""
+    if options.name in ("assess", "reference"):
+        kept = f" References that were finished are in {_archive(options)}{os.sep}; the same command goes on from there."
+    return f"\nanneal-ref {options.name}: interrupted.{kept}"
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="anneal-ref",
+        description="Ground truth with error bars for programmable analog Ising processors.",
+        epilog=textwrap.dedent("""\
+            exit codes: 0 done; 1 rejected (assess --strict) or archive unsound (audit); 2 input not allowed;
+            3 inconclusive (assess --strict); 130 interrupted.
+            first steps: anneal-ref demo saltmarsh && anneal-ref assess saltmarsh/study.toml"""),
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    parser.add_argument("-V", "--version", action="version", version=f"anneal-ref {library_version()}")
+    commands = parser.add_subparsers(dest="name", required=True, metavar="command")
+
+    demo = commands.add_parser("demo", help="copy a demo study to a folder")
+    demo.add_argument("demo", metavar="NAME", help="saltmarsh")
+    demo.add_argument("--into", metavar="DIR", help="folder to make (default: ./NAME); nothing in it is overwritten")
+    demo.set_defaults(command=_demo)
+
+    plan = commands.add_parser("plan", help="check a study and show what its references will cost, before any work")
+    plan.set_defaults(command=_plan)
+    reference = commands.add_parser("reference", help="compute the missing references of a study and archive them")
+    reference.set_defaults(command=_reference)
+    assess = commands.add_parser("assess", help="judge a processor's samples: references, comparison, verdict, page")
+    assess.set_defaults(command=_assess)
+    for command in (plan, reference, assess):
+        command.add_argument("study", metavar="STUDY", help="study file (TOML)")
+        command.add_argument("--archive", metavar="DIR", help="folder of references (default: truth/ beside the study)")
+    assess.add_argument("--page", metavar="FILE", type=Path, help="where the HTML page goes (default: beside the study)")
+    assess.add_argument("--no-page", action="store_true", help="print the table only")
+    assess.add_argument("--strict", action="store_true", help="exit 1 on reject and 3 on inconclusive")
+
+    compare = commands.add_parser("compare", help="compare samples with one archived reference")
+    compare.add_argument("reference", metavar="REFERENCE.h5")
+    compare.add_argument("samples", metavar="SAMPLES", nargs="+", help="files of one instance; each a gauge or batch")
+    compare.add_argument("--readout", choices=("pm", "01"), help="what the files hold (default: what they say)")
+    compare.set_defaults(command=_compare)
+
+    audit = commands.add_parser("audit", help="verify every file of an archive, and recompute some")
+    audit.add_argument("archive", metavar="DIR")
+    audit.add_argument("--recompute", metavar="F", type=float, default=0.0, help="fraction of references to solve again")
+    audit.add_argument("--seed", type=int, default=0, help="which ones are drawn")
+    audit.set_defaults(command=_audit)
+    for command in (reference, assess, audit):
+        command.add_argument("--threads", type=int, default=1, metavar="N", help="threads of the back-end (default: 1)")
+    return parser
+
+
+if __name__ == "__main__":
+    entry()
