@@ -1,0 +1,142 @@
+"""The step rule: how many time steps a tolerance needs, told before the run from norms alone.
+
+The error of a splitting over a step is a sum of nested commutators of the two parts of H. Their size follows from two local
+frequencies, 2 G w (transverse) and 2 P f (problem), where w is the root-mean-square transverse weight and
+f^2 = sum_j J_ij^2 + h_i^2 averaged over the sites. Steps are equally long in the phase that `step_rate` accumulates,
+which weighs the commutator of degree seven that matters most, and their number per unit of phase is
+
+    density = margin * (level + slope * tolerance^(-1/order)) * (phase / 50)^exponent
+
+for each splitting. The constants were fitted by `benchmarks/step_rule.py` on one set of anneals, and hold on another that
+has other sizes, graphs, fields, weights and schedules.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from anneal_ref.backends.exact.splitting import BLANES_MOAN_4, BLANES_MOAN_6, STRANG, Floats, Splitting
+
+if TYPE_CHECKING:
+    from anneal_ref.model.anneal import Anneal
+
+_MESH = 512
+
+
+@dataclass(frozen=True, slots=True)
+class Rule:
+    """Constants of the step density of one splitting."""
+
+    level: float
+    slope: float
+    exponent: float
+    margin: float
+
+
+RULES = {
+    STRANG.name: Rule(0.0, 0.06, -0.2, 1.5),
+    BLANES_MOAN_4.name: Rule(0.2, 0.0495, -0.2, 1.5),
+    BLANES_MOAN_6.name: Rule(0.09, 0.092, -0.2, 1.4),
+}
+
+
+def step_rate(anneal: Anneal, times: Floats) -> Floats:
+    """Return the phase per unit of time at the given times; steps are equally long in this phase.
+
+    Parameters
+    ----------
+    anneal : Anneal
+    times : ndarray
+        Times within the duration.
+
+    Returns
+    -------
+    ndarray, shape of `times`
+        Angular frequency, in the unit of the schedule.
+    """
+    instance = anneal.instance
+    couplings = instance.coupling_matrix()
+    weight = np.sqrt(np.mean(np.square(instance.transverse)))
+    local = np.sqrt(np.mean(np.square(couplings).sum(axis=1) + np.square(instance.fields)))
+    a = 2 * weight * np.abs(anneal.transverse(times))
+    b = 2 * local * np.abs(anneal.problem(times))
+    both = a + b
+    return np.asarray((a * b * both**5) ** (1 / 7) + 0.05 * both)
+
+
+def phase_mesh(anneal: Anneal) -> tuple[Floats, Floats]:
+    """Return times over the duration and the phase accumulated up to each of them."""
+    knots = np.asarray(anneal.knots)
+    count = max(2, -(-_MESH // (len(knots) - 1)))
+    fractions = np.arange(count) / count
+    times = np.append((knots[:-1, None] + np.diff(knots)[:, None] * fractions).ravel(), knots[-1])
+    rate = step_rate(anneal, times)
+    phase = np.concatenate([[0.0], np.cumsum((rate[1:] + rate[:-1]) / 2 * np.diff(times))])
+    return times, phase
+
+
+def step_density(splitting: Splitting, tolerance: float, phase: float) -> float:
+    """Return the steps per unit of phase that keep all <Z> and <ZZ> within the tolerance."""
+    rule = RULES[splitting.name]
+    need = rule.level + rule.slope * tolerance ** (-1 / splitting.order)
+    return rule.margin * need * (max(phase, 1.0) / 50) ** rule.exponent
+
+
+def choose_splitting(tolerance: float, phase: float) -> Splitting:
+    """Return the splitting that needs the fewest layers."""
+    return min((BLANES_MOAN_6, BLANES_MOAN_4), key=lambda s: s.stages * step_density(s, tolerance, phase))
+
+
+def time_grid(anneal: Anneal, density: float, marks: Sequence[float] = ()) -> Floats:
+    """Return step ends from 0 to the duration, equally long in phase between the times that must be met.
+
+    Met are the marks, the corners of the waveform, and those knots of the schedule that lie next to an interval of at least a
+    step; runs of shorter intervals are straddled (see `splitting`).
+
+    Parameters
+    ----------
+    anneal : Anneal
+    density : float
+        Steps per unit of phase.
+    marks : sequence of float
+        Times that must be step ends.
+
+    Returns
+    -------
+    ndarray, shape (steps + 1,)
+    """
+    times, phase = phase_mesh(anneal)
+    knots = np.asarray(anneal.knots)
+    long = np.diff(np.interp(knots, times, phase)) * density >= 1
+    kept = knots[np.append(long, True) | np.append(True, long)]
+    corners = () if anneal.waveform is None else np.asarray(anneal.waveform.u) * anneal.duration
+    ends = _distinct(np.concatenate([kept, corners, marks]), marks, 1e-12 * anneal.duration)
+    at_ends = np.interp(ends, times, phase)
+    counts = np.maximum(1, np.ceil(np.diff(at_ends) * density - 1e-9)).astype(np.intp)
+    first = np.concatenate([[0], np.cumsum(counts)])
+    owner = np.repeat(np.arange(len(counts)), counts)
+    fraction = (np.arange(first[-1]) - first[owner]) / counts[owner]
+    grid = np.append(np.interp(at_ends[owner] + fraction * np.diff(at_ends)[owner], phase, times), ends[-1])
+    grid[first] = ends
+    return grid
+
+
+def halved(grid: Floats, times: int = 1) -> Floats:
+    """Return the grid with every step cut in half, the given number of times."""
+    for _ in range(times):
+        finer = np.empty(2 * len(grid) - 1)
+        finer[::2] = grid
+        finer[1::2] = (grid[1:] + grid[:-1]) / 2
+        grid = finer
+    return grid
+
+
+def _distinct(ends: Floats, marks: Sequence[float], slack: float) -> Floats:
+    """Sort and drop near-doubles; a mark takes the place of the knot that it nearly meets."""
+    others = ends[np.min(np.abs(ends[:, None] - np.asarray([*marks, np.inf])), axis=1) > slack]
+    ends = np.unique(np.concatenate([others, np.asarray(marks, dtype=np.float64)]))
+    return ends[np.concatenate([[True], np.diff(ends) > slack])]
