@@ -29,10 +29,11 @@ def unpack(bits: NDArray[np.uint8], n_sites: int) -> NDArray[np.int8]:
     """
     if bits.dtype != np.uint8 or bits.ndim == 0 or bits.shape[-1] != -(-n_sites // 8):
         raise InputError(
-            f"packed bits of {n_sites} sites are bytes with {-(-n_sites // 8)} to a shot; got {bits.dtype} of shape {bits.shape}"
+            f"packed bits of {n_sites} sites are {-(-n_sites // 8)} bytes to a shot; "
+            f"got {bits.dtype} of shape {bits.shape}"
         )
     spare = 8 * bits.shape[-1] - n_sites
     if spare and np.any(bits[..., -1] >> (8 - spare)):
-        raise InputError(f"packed bits of {n_sites} sites have no bits beyond the last site; got some, so the number of sites is wrong")
+        raise InputError(f"{n_sites} sites leave the last bits of a shot unset; some are set, so the number is wrong")
     flags = np.unpackbits(bits, axis=-1, count=n_sites, bitorder="little")
     return np.asarray(1 - 2 * flags.view(np.int8), dtype=np.int8)

@@ -30,7 +30,8 @@ class Manifest:
     gauge : array_like of +1 and -1, shape (n_columns,), optional
         The signs g with which the run was programmed (J_ij g_i g_j, h_i g_i), in the order of the columns.
     undone : bool
-        Whether the spins have been multiplied by `gauge` already. Samples with a gauge that is not undone give no moments.
+        Whether the spins have been multiplied by `gauge` already. Samples with a gauge that is not undone give no
+        moments.
     batch : int, optional
         Which submission or calibration period the run belongs to.
     sites : array_like of int, shape (n_columns,), optional
@@ -87,7 +88,8 @@ class Manifest:
         put(self, "source", source)
         if self.gauge is not None and self.sites is not None and len(self.gauge) != len(self.sites):
             raise InputError(
-                f"gauge and sites must have one entry for each column; got {len(self.gauge)} signs and {len(self.sites)} sites"
+                "gauge and sites must have one entry for each column; "
+                f"got {len(self.gauge)} signs and {len(self.sites)} sites"
             )
 
     @property

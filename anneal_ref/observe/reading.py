@@ -1,8 +1,9 @@
 """Sample files: read with every doubt refused, written so that they read back the same.
 
-CSV (.csv, .txt, .dat) is described in `anneal_ref.observe.text`. NPY holds the array alone. NPZ holds `spins` and optionally
-`counts`, `groups`, `values` ("spins" or "bits") and `manifest` (JSON text). HDF5 (.h5, .hdf5) has the attributes `format`, `n_sites` and
-`manifest` (JSON text) and the datasets `bits` (see `anneal_ref.observe.bits`) and optionally `groups`, with checksums. Beside any of them a sidecar
+CSV (.csv, .txt, .dat) is described in `anneal_ref.observe.text`. NPY holds the array alone. NPZ holds `spins` and
+optionally `counts`, `groups`, `values` ("spins" or "bits") and `manifest` (JSON text). HDF5 (.h5, .hdf5) is a record of
+`anneal_ref.base.storage` with the attributes `kind`, `version`, `n_sites` and `manifest` (JSON text), the array
+`bits` (packed spins, see `anneal_ref.observe.bits`) and optionally `groups`. Beside any of them a sidecar
 `<file>.manifest.json` is read; NPY needs it to keep its manifest.
 """
 
@@ -14,16 +15,18 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import IO, Any, Literal
 
-import h5py
 import numpy as np
 from numpy.typing import NDArray
 
 from anneal_ref.base.checks import choice
 from anneal_ref.base.errors import InputError
+from anneal_ref.base.storage import PART, Record, read_record, write_record
 from anneal_ref.observe import text
 from anneal_ref.observe.bits import pack, unpack
-from anneal_ref.observe.manifest import FORMAT, VERSION, Manifest, check_format
+from anneal_ref.observe.manifest import VERSION, Manifest
 from anneal_ref.observe.table import Table, expand, to_spins
+
+_KIND = "samples"
 
 Contents = tuple[NDArray[np.int8], Manifest, NDArray[np.int64] | None]
 
@@ -39,7 +42,10 @@ def read(path: Path, values: Literal["spins", "bits"] | None = None, manifest: M
         raise InputError(f"{path}: the file is empty; a sample file holds at least one shot")
     table = reader(path)
     if values is not None and table.values not in (None, values):
-        raise InputError(f"{path}: the file says that it holds {table.values}, the caller says {values}; drop the argument if the file is right")
+        raise InputError(
+            f"{path}: the file says that it holds {table.values}, the caller says {values}; "
+            "drop the argument if the file is right"
+        )
     spins, groups = expand(to_spins(table, values or table.values), table)
     found = table.manifest
     sidecar = _sidecar(path)
@@ -49,7 +55,9 @@ def read(path: Path, values: Literal["spins", "bits"] | None = None, manifest: M
     if manifest is not None:
         found = found.merged(manifest, (str(path), "the manifest given by the caller"))
     if found.n_columns not in (None, spins.shape[1]):
-        raise InputError(f"{path}: the manifest speaks of {found.n_columns} sites; the file has {spins.shape[1]} columns of spins")
+        raise InputError(
+            f"{path}: the manifest speaks of {found.n_columns} sites; the file has {spins.shape[1]} columns of spins"
+        )
     return spins, found, groups
 
 
@@ -71,7 +79,7 @@ def _sidecar(path: Path) -> Path:
 
 def _aside(path: Path, fill: Callable[[IO[bytes]], None]) -> None:
     """Write beside the file, sync, and put it in place in one step."""
-    part = path.with_name(path.name + ".part")
+    part = path.with_name(path.name + PART)
     try:
         with part.open("w+b") as file:
             fill(file)
@@ -89,7 +97,8 @@ def _write_text(path: Path, spins: NDArray[np.int8], manifest: Manifest, groups:
 def _array(value: Any, path: Path, name: str, ndim: int) -> NDArray[Any]:
     if value.dtype.kind not in "biuf" or value.ndim != ndim or 0 in value.shape:
         shape = "(n_shots, n_sites)" if ndim == 2 else "(n_shots,)"
-        raise InputError(f"{path}: {name} must be numbers of shape {shape}; got dtype {value.dtype}, shape {value.shape}")
+        given = f"dtype {value.dtype}, shape {value.shape}"
+        raise InputError(f"{path}: {name} must be numbers of shape {shape}; got {given}")
     return np.asarray(value)
 
 
@@ -100,7 +109,8 @@ def _whole(value: Any, path: Path, name: str, low: int | None, length: int) -> N
     bad = ~np.isfinite(array) | (array != np.round(array)) | ((array < low) if low is not None else False)
     if bad.any():
         k = int(bad.argmax())
-        raise InputError(f"{path}: {name}[{k}] must be a whole number{'' if low is None else f' of at least {low}'}; got {array[k]}")
+        limit = "" if low is None else f" of at least {low}"
+        raise InputError(f"{path}: {name}[{k}] must be a whole number{limit}; got {array[k]}")
     return array.astype(np.int64)
 
 
@@ -131,13 +141,15 @@ def _read_npz(path: Path) -> Table:
     known = ("spins", "counts", "groups", "values", "manifest")
     unknown = sorted(set(arrays) - set(known))
     if "spins" not in arrays or unknown:
-        raise InputError(f"{path}: an NPZ file holds spins and optionally {', '.join(known[1:])}; got {', '.join(arrays) or 'nothing'}")
+        given = ", ".join(arrays) or "nothing"
+        raise InputError(f"{path}: an NPZ file holds spins and optionally {', '.join(known[1:])}; got {given}")
     spins = _array(arrays["spins"], path, "spins", 2)
+    manifest = str(arrays["manifest"]) if "manifest" in arrays else "{}"
     return Table(
         spins,
         str(path),
         values=choice(f"{path}: values", str(arrays["values"]), ("spins", "bits")) if "values" in arrays else None,
-        manifest=Manifest.from_json(str(arrays["manifest"]), f"{path}: manifest") if "manifest" in arrays else Manifest(),
+        manifest=Manifest.from_json(manifest, f"{path}: manifest"),
         counts=_whole(arrays["counts"], path, "counts", 0, len(spins)) if "counts" in arrays else None,
         groups=_whole(arrays["groups"], path, "groups", None, len(spins)) if "groups" in arrays else None,
     )
@@ -151,39 +163,30 @@ def _write_npz(path: Path, spins: NDArray[np.int8], manifest: Manifest, groups: 
 
 
 def _read_hdf5(path: Path) -> Table:
-    try:
-        with h5py.File(path, "r") as file:
-            check_format(file.attrs.get("format", "none"), str(path))
-            n_sites = int(file.attrs["n_sites"])
-            bits = np.asarray(file["bits"])
-            groups = np.asarray(file["groups"]) if "groups" in file else None
-            manifest = Manifest.from_json(str(file.attrs["manifest"]), f"{path}: manifest")
-    except (OSError, KeyError) as error:
-        raise InputError(f"{path}: not readable as an HDF5 sample file: {error}") from error
-    try:
-        spins = unpack(bits, n_sites)
-    except InputError as error:
-        raise InputError(f"{path}: {error}") from error
+    record = read_record(path)
+    kind = (record.attributes.get("kind"), record.attributes.get("version"))
+    if kind != (_KIND, VERSION):
+        given = f"{kind[0]!r} and {kind[1]!r}"
+        raise InputError(f"{path}: a sample file has kind {_KIND!r} and version {VERSION}; got {given}")
+    groups = record.arrays.get("groups")
+    spins = unpack(record.arrays["bits"], int(record.attributes["n_sites"]))
     return Table(
-        _array(spins, path, "bits", 2),
+        spins,
         str(path),
         values="spins",
-        manifest=manifest,
-        groups=None if groups is None else _whole(groups, path, "groups", None, len(spins)),
+        manifest=Manifest.from_json(str(record.attributes["manifest"]), f"{path}: manifest"),
+        groups=None if groups is None else groups.astype(np.int64),
     )
 
 
 def _write_hdf5(path: Path, spins: NDArray[np.int8], manifest: Manifest, groups: NDArray[np.int64] | None) -> None:
-    def fill(part: IO[bytes]) -> None:
-        with h5py.File(part, "w") as file:
-            file.attrs["format"] = f"{FORMAT} {VERSION}"
-            file.attrs["n_sites"] = spins.shape[1]
-            file.attrs["manifest"] = manifest.to_json()
-            file.create_dataset("bits", data=pack(spins), fletcher32=True, chunks=True)
-            if groups is not None:
-                file.create_dataset("groups", data=groups, fletcher32=True, compression="gzip", chunks=True)
-
-    _aside(path, fill)
+    attributes: dict[str, str | int | float] = {"kind": _KIND, "version": VERSION, "n_sites": spins.shape[1]}
+    arrays: dict[str, NDArray[Any]] = {"bits": pack(spins)}
+    dims: dict[str, tuple[str, ...]] = {"bits": ("shot", "byte")}
+    if groups is not None:
+        arrays["groups"] = groups
+        dims["groups"] = ("shot",)
+    write_record(path, Record(attributes | {"manifest": manifest.to_json()}, arrays, dims))
 
 
 _TEXT = (text.read, _write_text)

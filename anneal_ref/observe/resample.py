@@ -1,13 +1,14 @@
 """Errors of anything computed from samples: jackknife and bootstrap over shots or over whole groups of shots.
 
-A square of a noisy number is too large on average: for shots, E[c^2] = <c>^2 + (1 - <c>^2)/n. Both methods measure such a
-bias of order 1/n and take it away; for a function that is quadratic in the moments the jackknife does so exactly, so
-that c^2 becomes (n c^2 - 1)/(n - 1).
+A square of a noisy number is too large on average: for shots, E[c^2] = <c>^2 + (1 - <c>^2)/n. Both methods measure
+such a bias of order 1/n and take it away; for a function that is quadratic in the moments the jackknife does so
+exactly, so that c^2 becomes (n c^2 - 1)/(n - 1).
 
 References
 ----------
-B. Efron, Ann. Stat. 7, 1 (1979); B. Efron and R. J. Tibshirani, An Introduction to the Bootstrap (1993): jackknife, bootstrap.
-F. M. T. A. Busing, E. Meijer and R. van der Leeden, Stat. Comput. 9, 3 (1999): jackknife over groups of unequal size.
+B. Efron, Ann. Stat. 7, 1 (1979); B. Efron and R. J. Tibshirani, An Introduction to the Bootstrap (1993): jackknife,
+bootstrap. F. M. T. A. Busing, E. Meijer and R. van der Leeden, Stat. Comput. 9, 3 (1999): jackknife over groups of
+unequal size.
 """
 
 from __future__ import annotations
@@ -54,7 +55,7 @@ class Blocks:
         return np.diff(self.edges)
 
     def __len__(self) -> int:
-        """Number of blocks."""
+        """Return the number of blocks."""
         return len(self.edges) - 1
 
     def __iter__(self) -> Iterator[NDArray[np.intp]]:
@@ -96,13 +97,13 @@ def warn_if_few(groups: NDArray[Any] | None) -> None:
     count = len(np.unique(groups))
     if count == 1:
         message = (
-            "all shots belong to one group; errors are those of independent shots and hold nothing of the spread between "
-            "gauges or batches"
+            "all shots belong to one group; errors are those of independent shots and hold nothing of the spread "
+            "between gauges or batches"
         )
     elif count < FEW_GROUPS:
         message = (
-            f"only {count} groups (gauges or batches) of shots; errors taken from their spread are themselves uncertain by "
-            f"about {100 / np.sqrt(2 * (count - 1)):.0f} %"
+            f"only {count} groups (gauges or batches) of shots; errors taken from their spread are themselves "
+            f"uncertain by about {100 / np.sqrt(2 * (count - 1)):.0f} %"
         )
     else:
         return
@@ -152,8 +153,8 @@ def bootstrap(
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return bias-corrected value and standard error from replicas of `n_blocks` blocks drawn with replacement.
 
-    Bias and variance are scaled by n_blocks/(n_blocks - 1): drawing from the sample sees its variance, which is that much
-    too small.
+    Bias and variance are scaled by n_blocks/(n_blocks - 1): drawing from the sample sees its variance, which is that
+    much too small.
 
     Parameters
     ----------
@@ -187,7 +188,7 @@ def sums(spins: NDArray[np.int8]) -> tuple[NDArray[np.float64], NDArray[np.float
 
 
 def block_sums(spins: NDArray[np.int8], parts: Blocks) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Return the sums of s_i, shape (n_blocks, n_sites), and of s_i s_j, shape (n_blocks, n_sites, n_sites), in each block."""
+    """Return the sums over each block: of s_i, (n_blocks, n_sites), of s_i s_j, (n_blocks, n_sites, n_sites)."""
     n = spins.shape[1]
     z, zz = np.empty((len(parts), n)), np.empty((len(parts), n, n))
     for k, shots in enumerate(parts):
@@ -198,7 +199,7 @@ def block_sums(spins: NDArray[np.int8], parts: Blocks) -> tuple[NDArray[np.float
 def estimate_of_moments(
     f: Callable[[Moments], ArrayLike], spins: NDArray[np.int8], parts: Blocks, draws: NDArray[np.int64] | None
 ) -> Estimate:
-    """Return f of the moments of the spins, by jackknife, or by bootstrap where `draws` (see `multiplicities`) are given."""
+    """Return f of the moments of the spins, by jackknife, or by bootstrap where `draws` are given."""
     n = len(spins)
     z, zz = block_sums(spins, parts)
     z_all, zz_all = z.sum(axis=0), zz.sum(axis=0)
@@ -212,7 +213,8 @@ def estimate_of_moments(
     if draws is None:
         replicas = (value(z_all - z[k], zz_all - zz[k], n - size) for k, size in enumerate(parts.sizes))
     else:
-        replicas = (value(row @ z, np.tensordot(row, zz, axes=1), float(row @ parts.sizes)) for row in draws.astype(np.float64))
+        rows = draws.astype(np.float64)
+        replicas = (value(row @ z, np.tensordot(row, zz, axes=1), float(row @ parts.sizes)) for row in rows)
     return _estimate(full, list(replicas), value(z_all, zz_all, n + PSEUDO_SHOTS), parts, draws is not None)
 
 
@@ -244,12 +246,14 @@ def _estimate(
 ) -> Estimate:
     for k, replica in enumerate([full, *replicas]):
         if replica.shape != full.shape:
-            raise InputError(f"f must give the same shape for all shots and for each part of them; got {full.shape} and {replica.shape}")
+            raise InputError(
+                f"f must give one shape for all shots and for each part of them; got {full.shape} and {replica.shape}"
+            )
         if not np.isfinite(replica).all():
             part = "all shots" if k == 0 else "a resampled part of the shots"
             raise InputError(f"f must give finite values; got {replica[~np.isfinite(replica)].flat[0]} from {part}")
     stack = np.array(replicas)
     value, stat = bootstrap(full, stack, len(parts)) if drawn else jackknife(full, stack, parts.sizes)
-    # replicas that all agree have not seen the scatter there is; four random shots among the measured ones show its scale
+    # replicas that all agree have not seen the scatter there is; four random shots beside the measured show its scale
     blind = np.abs(stack - full).max(axis=0) <= 1e-12 * np.maximum(1.0, np.abs(full))
     return Estimate(value, np.where(blind, np.abs(with_pseudo - full) / np.sqrt(2.0), stat), 0.0, "samples")

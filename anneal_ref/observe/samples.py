@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from anneal_ref.model.anneal import Anneal
     from anneal_ref.model.instances import Instance
 
+
 @dataclass(frozen=True, slots=True, eq=False)
 class Samples:
     """Spin configurations, a shot a row; immutable.
@@ -46,7 +47,7 @@ class Samples:
     >>> from anneal_ref.observe.observables import q2
     >>> samples = Samples(1 - 2 * np.random.default_rng(1).integers(0, 2, (500, 6)))
     >>> print(samples.estimate(q2))      # the plain square would be 0.002 too large
-    -0.00009 ± 0.0007 (stat)
+    0.0013 ± 0.0013 (stat)
     """
 
     spins: NDArray[np.int8]
@@ -65,12 +66,12 @@ class Samples:
     @property
     def n_shots(self) -> int:
         """Number of shots."""
-        return self.spins.shape[0]
+        return int(self.spins.shape[0])
 
     @property
     def n_sites(self) -> int:
         """Number of spins in a shot."""
-        return self.spins.shape[1]
+        return int(self.spins.shape[1])
 
     @property
     def n_groups(self) -> int:
@@ -83,7 +84,7 @@ class Samples:
         return pack(self.spins)
 
     def __len__(self) -> int:
-        """Number of shots."""
+        """Return the number of shots."""
         return self.n_shots
 
     def __repr__(self) -> str:
@@ -145,12 +146,14 @@ class Samples:
         first = plain[0]
         for k, run in enumerate(plain):
             if run.n_sites != first.n_sites:
-                raise InputError(f"runs must have the same number of spins; run 0 has {first.n_sites}, run {k} {run.n_sites}")
+                sizes = f"run 0 has {first.n_sites}, run {k} has {run.n_sites}"
+                raise InputError(f"runs must have the same number of spins; {sizes}")
             for key in ("instance", "duration", "sites"):
                 mine, yours = first.manifest.to_dict().get(key), run.manifest.to_dict().get(key)
                 if mine != yours:
                     raise InputError(f"runs must agree in {key}; run 0 has {mine}, run {k} has {yours}")
-        by = next((key for key in ("gauge", "batch") if any(getattr(run.manifest, key) is not None for run in plain)), None)
+        marks = (key for key in ("gauge", "batch") if any(getattr(run.manifest, key) is not None for run in plain))
+        by = next(marks, None)
         names: dict[Any, int] = {}
         groups = [_origin(run, k, by, names) for k, run in enumerate(plain)]
         sources = {run.manifest.source for run in plain}
@@ -164,14 +167,16 @@ class Samples:
         return cls(np.concatenate([run.spins for run in plain]), manifest, np.concatenate(groups))
 
     def ungauged(self) -> Samples:
-        """Return the samples with the gauge of the manifest undone: s_i -> g_i s_i. Done already or no gauge: unchanged."""
+        """Return the samples with the gauge of the manifest undone, s_i -> g_i s_i, if there is one to undo."""
         gauge = self.manifest.gauge
         if gauge is None or self.manifest.undone:
             return self
         return Samples(self.spins * gauge, self.manifest.replace(undone=True), self.groups)
 
     def select(self, sites: ArrayLike) -> Samples:
-        """Return the columns with the given device labels, in that order (column numbers where the manifest has no sites).
+        """Return the columns with the given device labels, in that order.
+
+        Where the manifest has no sites, the numbers of the columns count as their labels.
 
         Raises
         ------
@@ -187,7 +192,9 @@ class Samples:
         place = {label: column for column, label in enumerate(own.tolist())}
         columns = np.array([place[label] for label in wanted.tolist()], dtype=np.intp)
         gauge = self.manifest.gauge
-        manifest = self.manifest.replace(sites=wanted, gauge=None if gauge is None else gauge[columns])
+        manifest = self.manifest.replace(
+            sites=None if self.manifest.sites is None else wanted, gauge=None if gauge is None else gauge[columns]
+        )
         return Samples(self.spins[:, columns], manifest, self.groups)
 
     def for_instance(self, instance: Instance, duration: float | None = None) -> Samples:
@@ -210,13 +217,14 @@ class Samples:
         if known.instance is not None and known.instance != instance.identity:
             programmed = known.gauge is not None and known.instance == instance.gauge(known.gauge).identity
             hint = (
-                "; it is this instance as programmed with the gauge, but the manifest must name the instance before the gauge"
+                "; it is this instance as programmed with the gauge, but the manifest must name it before the gauge"
                 if programmed
                 else "; pair the file with its own instance"
             )
-            raise InputError(f"samples of another instance: manifest {known.instance[:12]}, this {instance.identity[:12]}{hint}")
-        if duration is not None and known.duration is not None and not np.isclose(known.duration, duration, rtol=1e-9, atol=0):
-            raise InputError(f"samples of another anneal: their duration is {known.duration:g}, this one is {duration:g}")
+            names = f"manifest {known.instance[:12]}, this {instance.identity[:12]}"
+            raise InputError(f"samples of another instance: {names}{hint}")
+        if duration is not None and known.duration is not None and abs(known.duration - duration) > 1e-9 * duration:
+            raise InputError(f"samples of another anneal: their duration is {known.duration:g}, not {duration:g}")
         labels = np.asarray(instance.lattice.labels)
         if known.sites is None:
             if self.n_sites != instance.n_sites:
@@ -239,8 +247,8 @@ class Samples:
 
         The error is sqrt((1 - c^2)/(n - 1)) for independent shots, and comes from the spread between groups where there
         are groups. In both, c is drawn towards 0 as if four uniformly random shots had been seen beside the n: a
-        correlation measured as exactly +1 or -1 gets an error of about sqrt(8)/n instead of 0. The diagonal of `zz` is an
-        identity and exact; `num` is 0 because counting spins involves no numerical approximation.
+        correlation measured as exactly +1 or -1 gets an error of about sqrt(8)/n instead of 0. The diagonal of `zz`
+        is an identity and exact; `num` is 0 because counting spins involves no numerical approximation.
 
         Raises
         ------
@@ -276,7 +284,8 @@ class Samples:
     def sample(self, shots: int, seed: int) -> Samples:
         """Return shots drawn with replacement: the samples as a source of their own empirical distribution.
 
-        The draws know nothing of what was not measured, so errors computed from more draws than there were shots are too small.
+        The draws know nothing of what was not measured, so errors computed from more draws than there were shots are
+        too small.
         """
         shots = integer("shots", shots, low=1)
         index = np.random.default_rng(integer("seed", seed, low=0)).integers(0, self.n_shots, size=shots)
@@ -290,12 +299,13 @@ class Samples:
         replicas: int = 1000,
         seed: int = 0,
     ) -> Estimate:
-        """Return f with its bias of order 1/n taken away, and its standard error; correlations between entries are kept.
+        """Return f with its bias of order 1/n taken away, and its standard error; correlations between entries are
+        kept.
 
         A square of measured moments is biased; this is the way to an unbiased one. For every f that is quadratic in
-        the moments (q2, connected correlations, squared deviations from a truth) the jackknife is unbiased exactly; for others,
-        such as ratios, the rest is of order 1/n^2. The jackknife does not hold for functions that are not smooth (medians,
-        quantiles, largest values): use the bootstrap there.
+        the moments (q2, connected correlations, squared deviations from a truth) the jackknife is unbiased exactly;
+        for others, such as ratios, the rest is of order 1/n^2. The jackknife does not hold for functions that are not
+        smooth (medians, quantiles, largest values): use the bootstrap there.
 
         Parameters
         ----------
@@ -304,7 +314,8 @@ class Samples:
         of : {"moments", "spins"}
             What f takes.
         method : {"jackknife", "bootstrap"}
-            The bootstrap repeats shots: a function that sums over distinct pairs of shots (overlaps) must take the jackknife.
+            The bootstrap repeats shots: a function that sums over distinct pairs of shots (overlaps) must take the
+            jackknife.
         replicas : int
             Bootstrap: number of replicas. Jackknife without groups: largest number of blocks; more shots than
             this are left out a stretch at a time (spins: at most 100 blocks, for f costs more there).
@@ -314,8 +325,9 @@ class Samples:
         Returns
         -------
         Estimate
-            Where all replicas agree, as on samples that never left the ground state, resampling sees no error; `stat` is then
-            the change of f when four uniformly random shots join the measured ones, over sqrt(2), the rule of `moments`.
+            Where all replicas agree, as on samples that never left the ground state, resampling sees no error; `stat`
+            is then the change of f when four uniformly random shots join the measured ones, over sqrt(2), the rule of
+            `moments`.
 
         Raises
         ------
@@ -341,7 +353,9 @@ class Samples:
 
     def _require_ungauged(self) -> None:
         if self.manifest.gauge is not None and not self.manifest.undone:
-            raise InputError("the gauge of these samples has not been undone; call .ungauged() or .for_instance(instance) first")
+            raise InputError(
+                "the gauge of these samples has not been undone; call .ungauged() or .for_instance(instance) first"
+            )
 
 
 def _spins(spins: ArrayLike) -> NDArray[np.int8]:
@@ -354,7 +368,8 @@ def _spins(spins: ArrayLike) -> NDArray[np.int8]:
     if bad.any():
         shot, site = (int(k) for k in np.argwhere(bad)[0])
         raise InputError(
-            f"spins must hold +1 and -1 only; got {array[shot, site]} in shot {shot}, site {site} (bits b are spins 1 - 2 b)"
+            f"spins must hold +1 and -1 only; got {array[shot, site]} in shot {shot}, site {site} "
+            "(bits b are spins 1 - 2 b)"
         )
     return frozen(array.astype(np.int8))
 

@@ -62,14 +62,16 @@ def to_spins(table: Table, values: str | None) -> NDArray[np.int8]:
     if values is None and not np.any(rows == -1) and np.all((rows == 0) | (rows == 1)):
         what = "0 and 1 only" if np.any(rows == 0) else "ones only, which may be all up (spins) or all down (bits)"
         raise InputError(
-            f"{table.path}: the file holds {what}, and does not say what they mean; say values='bits' (0 is +1, 1 is -1) or "
-            "values='spins', or put a line '# values: bits' or '# values: spins' at its head"
+            f"{table.path}: the file holds {what}, and does not say what they mean; say values='bits' (0 is +1, 1 is "
+            "-1) or values='spins', or put a line '# values: bits' or '# values: spins' at its head"
         )
     low, high = (0, 1) if is_bits else (-1, 1)
     bad = (rows != low) & (rows != high)
     if bad.any():
         row, column = np.unravel_index(int(bad.argmax()), bad.shape)
-        hint = "" if is_bits or rows[row, column] != 0 else "; a file of bits is read with values='bits' or a line '# values: bits' at its head"
+        hint = ""
+        if rows[row, column] == 0 and not is_bits:
+            hint = "; a file of bits is read with values='bits' or a line '# values: bits' at its head"
         raise InputError(
             f"{table.path}: {table.place(int(row), int(column))}: {rows[row, column]:g} is not allowed; "
             f"a file of {'bits holds 0 (for +1) and 1 (for -1)' if is_bits else 'spins holds +1 and -1'} only{hint}"

@@ -3,7 +3,8 @@
 Values stand between commas, semicolons or white space. Lines that begin with # are comments; before the data,
 `# key: value` gives an entry of the manifest, and `# values: bits` or `# values: spins` says what the numbers are. One
 line of names may come before the data: for each site a word with its device label (`s12`, `site 12`), or `spin`
-throughout where there are no labels; `count` for how often a line was seen; `group` for the gauge, batch or run of the shot.
+throughout where there are no labels; `count` for how often a line was seen; `group` for the gauge, batch or run of
+the shot.
 """
 
 from __future__ import annotations
@@ -173,8 +174,8 @@ def _check_names(head: _Head, number: int) -> None:
         if name not in (*_COUNTED, "spin") and not _SITE.fullmatch(name):
             head.fail(
                 number,
-                f"{name!r} is neither a value nor the name of a column; names are a word with a device label such as s12 "
-                "for a site (or spin for every site), count and group",
+                f"{name!r} is neither a value nor the name of a column; names are a word with a device label such as "
+                "s12 for a site (or spin for every site), count and group",
                 column,
             )
     for name in _COUNTED:
@@ -197,7 +198,8 @@ def _manifest(head: _Head, names: list[str]) -> tuple[Manifest, str | None]:
     values = entries.pop("values", None)
     if values not in (None, "spins", "bits"):
         raise InputError(f"{head.path}: values must be spins (+1 and -1) or bits (0 and 1); got {values!r}")
-    manifest = Manifest.from_dict({key: _plain(key, value, head.path) for key, value in entries.items()}, str(head.path))
+    plain = {key: _plain(key, value, head.path) for key, value in entries.items()}
+    manifest = Manifest.from_dict(plain, str(head.path))
     labels = [int(found.group(1)) for name in names if (found := _SITE.fullmatch(name))]
     if labels:
         named = Manifest.from_dict({"sites": labels}, f"{head.path}: names of the columns")
@@ -258,6 +260,6 @@ def _refuse_late_entries(head: _Head) -> None:
         if number > head.lines and (found := _ENTRY.match(line)) and found.group(1) in _WORDS:
             head.fail(
                 number,
-                f"an entry of the manifest ({found.group(1)}) among the data; read the runs from files of their own and join "
-                "them with Samples.concatenate",
+                f"an entry of the manifest ({found.group(1)}) among the data; read the runs from files of their own "
+                "and join them with Samples.concatenate",
             )
