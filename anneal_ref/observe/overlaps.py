@@ -1,8 +1,8 @@
 """Observables of spins: functions of single shots, or of pairs of different shots.
 
 Spins have shape (n_shots, n_sites) and hold +1 and -1. Errors come from `samples.estimate(f, of="spins")` by the
-jackknife over shots. Pairs of shots share shots, so an error taken from the scatter of pairs would be too small; and a bootstrap
-puts a shot beside its own copy, which is no pair.
+jackknife over shots. Pairs of shots share shots, so an error taken from the scatter of pairs would be too small; and a
+bootstrap puts a shot beside its own copy, which is no pair.
 """
 
 from __future__ import annotations

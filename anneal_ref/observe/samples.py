@@ -299,13 +299,13 @@ class Samples:
         replicas: int = 1000,
         seed: int = 0,
     ) -> Estimate:
-        """Return f with its bias of order 1/n taken away, and its standard error; correlations between entries are
-        kept.
+        """Return f with its bias of order 1/n taken away, and its standard error.
 
-        A square of measured moments is biased; this is the way to an unbiased one. For every f that is quadratic in
-        the moments (q2, connected correlations, squared deviations from a truth) the jackknife is unbiased exactly;
-        for others, such as ratios, the rest is of order 1/n^2. The jackknife does not hold for functions that are not
-        smooth (medians, quantiles, largest values): use the bootstrap there.
+        Shots are resampled as a whole, so f may combine entries that vary together. A square of measured moments is
+        biased; this is the way to an unbiased one. For every f that is quadratic in the moments (q2, connected
+        correlations, squared deviations from a truth) the jackknife is unbiased exactly; for others, such as ratios,
+        the rest is of order 1/n^2. The jackknife does not hold for functions that are not smooth (medians, quantiles,
+        largest values): use the bootstrap there.
 
         Parameters
         ----------
