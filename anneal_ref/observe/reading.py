@@ -116,7 +116,8 @@ def _whole(value: Any, path: Path, name: str, low: int | None, length: int) -> N
 
 def _read_npy(path: Path) -> Table:
     try:
-        array = np.load(path, allow_pickle=False)
+        with path.open("rb") as file:
+            array = np.load(file, allow_pickle=False)
     except (ValueError, EOFError, OSError) as error:
         raise InputError(f"{path}: not readable as NPY: {error}") from error
     if not isinstance(array, np.ndarray):
@@ -134,8 +135,8 @@ def _write_npy(path: Path, spins: NDArray[np.int8], manifest: Manifest, groups: 
 
 def _read_npz(path: Path) -> Table:
     try:
-        with np.load(path, allow_pickle=False) as file:
-            arrays = {name: file[name] for name in file.files}
+        with path.open("rb") as file, np.load(file, allow_pickle=False) as archive:
+            arrays = {name: archive[name] for name in archive.files}
     except (ValueError, EOFError, OSError, zipfile.BadZipFile, AttributeError) as error:
         raise InputError(f"{path}: not readable as NPZ: {error}") from error
     known = ("spins", "counts", "groups", "values", "manifest")

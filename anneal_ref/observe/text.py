@@ -170,14 +170,16 @@ def _is_number(cell: str) -> bool:
 
 def _check_names(head: _Head, number: int) -> None:
     names = head.names or []
-    for column, name in enumerate(names, start=1):
-        if name not in (*_COUNTED, "spin") and not _SITE.fullmatch(name):
-            head.fail(
-                number,
-                f"{name!r} is neither a value nor the name of a column; names are a word with a device label such as "
-                "s12 for a site (or spin for every site), count and group",
-                column,
-            )
+    wrong = [k for k, name in enumerate(names) if name not in (*_COUNTED, "spin") and not _SITE.fullmatch(name)]
+    if wrong:
+        # a word among numbers is more likely the slip than the numbers are
+        column = min(wrong, key=lambda k: _is_number(names[k]))
+        head.fail(
+            number,
+            f"{names[column]!r} is neither a value nor the name of a column; names are a word with a device label such "
+            "as s12 for a site (or spin for every site), count and group",
+            column + 1,
+        )
     for name in _COUNTED:
         if names.count(name) > 1:
             head.fail(number, f"there are {names.count(name)} columns {name!r}; at most one is allowed")
