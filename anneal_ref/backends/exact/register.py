@@ -2,18 +2,60 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+import math
+from collections.abc import Callable, Iterator
+from concurrent.futures import ThreadPoolExecutor
+from itertools import count
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from anneal_ref.backends.exact import measure
+from anneal_ref.backends.exact.layout import ITEM_BYTES, Layout, aligned, layout, smallest, tilings
+from anneal_ref.backends.exact.sweeps import run
+from anneal_ref.base.checks import choice, finite, integer, signs
+from anneal_ref.base.errors import AnnealRefError, InputError
 
-def _spins(n: int) -> NDArray[np.int8]:
-    return (1 - 2 * ((np.arange(1 << n)[:, None] >> np.arange(n)) & 1)).astype(np.int8)
+Floats = NDArray[np.float64]
+
+SHARED_BITS = 17
+"""Threads share a state of at least so many stored bits; below, handing out work costs more than it brings."""
+CALL_AMPLITUDES = 1 << 26
+"""Amplitudes treated in one compiled call, so that Ctrl-C is heard within a fraction of a second."""
+CHUNK_BITS = 9
+"""Pieces of a chunk of a read-out (a power of two); fixed, so that sums do not depend on threads."""
 
 
 class Register:
-    """Amplitudes of N spins under layers psi <- prod_k X(theta_k) D(phi_k) psi."""
+    """Amplitudes of N spins under layers psi <- prod_k X(theta_k) D(phi_k) psi.
+
+    D(phi) = exp(-i phi E) with E = sum J_ij Z_i Z_j + sum h_i Z_i, X(theta) = exp(i theta sum w_i X_i). It is stored
+    as phi(z) = (-i)^popcount(z) psi(z), in which X(theta) is real, and up to Pauli operators that cost nothing to
+    carry: psi = phase Z^b X^a chi. Right angles of X go to a (so tangents never exceed 1), kicks go to b.
+
+    Parameters
+    ----------
+    couplings : array_like, shape (N, N)
+        Symmetric, zero diagonal.
+    fields, weights : array_like, shape (N,)
+    symmetric : bool
+        Store the half with the last spin up; needs zero fields and states of a definite spin-flip parity.
+    precision : {"double", "single"}
+    threads : int
+
+    Raises
+    ------
+    InputError
+        Shapes, NaN, infinity, couplings that are not symmetric, fields in the symmetric half.
+
+    Examples
+    --------
+    >>> register = Register([[0, 1], [1, 0]], [0, 0], [1, 1])
+    >>> register.layers([0.3], [0.2])
+    >>> round(register.norm(), 12)
+    1.0
+    """
 
     def __init__(
         self,
@@ -23,83 +65,428 @@ class Register:
         symmetric: bool = False,
         precision: str = "double",
         threads: int = 1,
+        _low_bits: int | None = None,
+        _piece_bits: int | None = None,
     ) -> None:
-        self.couplings = np.array(couplings, float)
-        self.fields = np.array(fields, float)
-        self.weights = np.array(weights, float)
-        self.n_sites = n = len(self.fields)
-        self.symmetric, self.precision, self.threads = symmetric, precision, threads
-        s = _spins(n).astype(float)
-        self._energy = np.einsum("zi,zi->z", s @ np.triu(self.couplings, 1), s) + s @ self.fields
+        self.couplings = finite("couplings", couplings, (None, None))
+        self.n_sites = n = len(self.couplings)
+        if n == 0 or self.couplings.shape != (n, n):
+            raise InputError(f"couplings must be a square matrix of at least one site; got {self.couplings.shape}")
+        self.fields, self.weights = finite("fields", fields, (n,)), finite("weights", weights, (n,))
+        if (self.couplings != self.couplings.T).any() or self.couplings.diagonal().any():
+            raise InputError("couplings must be symmetric with a zero diagonal; give J_ij at [i, j] and at [j, i]")
+        if symmetric and self.fields.any():
+            raise InputError("the symmetric half needs zero fields; got fields; use symmetric=False")
+        self.precision = choice("precision", precision, ITEM_BYTES)
+        self.threads = integer("threads", threads, low=1)
+        self.symmetric = bool(symmetric)
+        self._half = _is_half(n, self.symmetric, precision)
+        self._layout = place = layout(_stored_bits(n, self.symmetric, precision), precision, _low_bits, _piece_bits)
+        self._tilings, space = tilings(place, self._half, n % 2 == 1)
+        self._groups = 2 if place.rows > 1 else 1
+        dtype = np.float64 if precision == "double" else np.float32
+        self._x = aligned(place.floats, dtype)
+        bits, kept = place.bits, min(n, place.bits)
+        self._coupling, self._field = np.zeros((2, bits, bits)), np.zeros((2, bits))
+        self._coupling[0, :kept, :kept] = self.couplings[:kept, :kept]
+        self._field[0, :kept] = self.couplings[:kept, -1] if self._half else self.fields
+        self._shares = self.threads if place.bits >= SHARED_BITS and self._groups == 2 else 1
+        self._scratch = [
+            (
+                aligned(space.work, dtype),
+                aligned(2 * space.energies, np.float64).reshape(2, -1),
+                np.empty(TANGENT_SCRATCH),
+                *(aligned(space.tables, np.float64) for _ in range(3)),
+                self._coupling.copy(),
+                self._field.copy(),
+                np.empty(bits + 1),
+            )
+            for _ in range(self._shares)
+        ]
         self.load_plus()
 
     @staticmethod
     def bytes_needed(n_sites: int, symmetric: bool = False, precision: str = "double") -> int:
-        """Bytes of the stored state and of the work space."""
-        return (16 if precision == "double" else 8) << (n_sites - symmetric)
+        """Bytes of the stored state, and of the work space of one thread and of read-outs."""
+        n = integer("n_sites", n_sites, low=1)
+        place = layout(_stored_bits(n, symmetric, precision), choice("precision", precision, ITEM_BYTES))
+        _, space = tilings(place, _is_half(n, symmetric, precision), n % 2 == 1)
+        chunks = max(1, place.rows * place.pieces >> CHUNK_BITS)
+        readout = 8 * (chunks * (place.bits + 1) ** 2 + 3 * place.rows * place.pieces)
+        work = ITEM_BYTES[precision] * space.work + 8 * (2 * space.energies + 3 * space.tables)
+        return ITEM_BYTES[precision] * place.floats + work + readout
 
+    # -------------------------------------------------------------------------------------------- states
     def load_plus(self) -> None:
         """Set |+...+>."""
-        self._psi = np.full(1 << self.n_sites, 2.0 ** (-self.n_sites / 2), complex)
+        self._fresh(1)
+        place, kept = self._layout, min(self.n_sites, self._layout.bits)
+        low = np.arange(1 << place.low_bits, dtype=np.int64)
+        value = np.where(low >> kept == 0, 2.0 ** (-self.n_sites / 2), 0.0)
+        patterns = [self._packed(value * _gauge(low) * (-1j) ** k) for k in range(4)]
+        for row in range(place.rows):
+            place.blocks(self._x, row)[:] = patterns[row.bit_count() & 3]
+        self._whole = True
 
     def load(self, psi: ArrayLike) -> None:
-        """Set the state to psi (2^N,), taken as it is."""
-        self._psi = np.array(psi, complex)
+        """Set the state to psi (2^N,), taken as it is.
 
+        Raises
+        ------
+        InputError
+            Wrong shape, NaN, infinity; in the symmetric half a state without definite spin-flip parity.
+        """
+        n, place = self.n_sites, self._layout
+        state = finite("psi", psi, (1 << n,), np.complex128)
+        parity = 1
+        if self._half:
+            flipped = state[::-1]
+            parity = 1 if np.vdot(flipped, state).real >= 0 else -1
+            if np.linalg.norm(state - parity * flipped) > 1e-6 * np.linalg.norm(state):
+                raise InputError("the symmetric half needs psi even or odd under flipping all spins; got neither")
+            state = (state[: 1 << place.bits] + parity * flipped[: 1 << place.bits]) / 2
+        self._fresh(parity)
+        size = 1 << place.low_bits
+        for row in range(place.rows):
+            part = np.zeros(size, np.complex128)
+            given = state[row * size : (row + 1) * size]
+            part[: len(given)] = given
+            index = np.arange(row * size, (row + 1) * size, dtype=np.int64)
+            place.blocks(self._x, row)[:] = self._packed(part * _gauge(index))
+        self._whole = True
+
+    def _fresh(self, parity: int) -> None:
+        self._whole = False
+        self._parity, self._turns, self._flips, self._signs = parity, 0, 0, 0
+        self._group = 0
+        self._owed: Floats | None = None
+
+    def _packed(self, values: NDArray[np.complex128]) -> NDArray[Any]:
+        parts = np.stack([values.real, values.imag]).reshape(2, self._layout.pieces, -1, self._layout.lanes)
+        return parts.transpose(1, 2, 0, 3).astype(self._x.dtype)
+
+    # -------------------------------------------------------------------------------------------- layers
     def layers(
         self,
         problem_angles: ArrayLike,
         transverse_angles: ArrayLike,
         kick: int | None = None,
-        progress: Callable[[int], None] | None = None,
+        progress: Callable[[int], object] | None = None,
     ) -> None:
-        """Apply layers k = 0, 1, ...: first exp(-i phi_k E), then exp(+i theta_k sum w_i X_i); then Z on `kick`; progress(layers done since the last call)."""
-        phis, thetas = np.atleast_1d(np.asarray(problem_angles, float)), np.atleast_1d(np.asarray(transverse_angles, float))
-        for phi, theta in zip(phis, thetas, strict=True):
-            self._psi *= np.exp(-1j * phi * self._energy)
-            for i in range(self.n_sites):
-                a = self._psi.reshape(-1, 2, 1 << i)
-                t = theta * self.weights[i]
-                self._psi = (np.cos(t) * a + 1j * np.sin(t) * a[:, ::-1]).reshape(-1)
+        """Apply layers k = 0, 1, ...: first exp(-i phi_k E), then exp(i theta_k sum w_i X_i).
+
+        Parameters
+        ----------
+        problem_angles, transverse_angles : array_like, shape (L,)
+            phi_k and theta_k, of any size.
+        kick : int, optional
+            Site that gets a Z after the last layer.
+        progress : callable, optional
+            Called now and then with the number of layers done since its last call.
+        """
+        phi = finite("problem_angles", problem_angles, (None,))
+        theta = finite("transverse_angles", transverse_angles, phi.shape)
+        self._settled_or_raise()
+        place = self._layout
+        block = max(1, min(4096, CALL_AMPLITUDES >> place.bits))
+        for start in range(0, len(phi), block):
+            part = slice(start, start + block)
+            self._advance(phi[part], *self._angles(theta[part]))
             if progress is not None:
-                progress(1)
+                progress(len(phi[part]))
         if kick is not None:
             self.kick(kick)
 
     def kick(self, site: int) -> None:
-        """Z on one site."""
-        self._psi *= _spins(self.n_sites)[:, site]
+        """Apply Z to one site (carried as a sign; no pass over the amplitudes)."""
+        self._signs ^= 1 << integer("site", site, low=0, high=self.n_sites - 1)
 
+    def _angles(self, theta: Floats) -> tuple[Floats, Floats, Floats]:
+        """Cosine products, frames and tangents of layers; right angles join the frame."""
+        n, bits = self.n_sites, self._layout.bits
+        behind = np.where(_bits(self._signs, n), -1.0, 1.0)
+        angle = theta[:, None] * (self.weights * behind)
+        turns = np.rint(angle / (math.pi / 2))
+        # fmod is exact where the quotient is large
+        rest = angle - turns * (math.pi / 2)
+        turns = turns.astype(np.int64)
+        before = np.zeros_like(turns)
+        np.cumsum(turns[:-1], axis=0, out=before[1:])
+        frame = np.where((before + _bits(self._flips, n)) & 1, -1.0, 1.0)
+        total = turns.sum(axis=0)
+        self._flips ^= int(((total & 1) << np.arange(n)).sum())
+        self._turns += int(total.sum())
+        frames, tangents = np.ones((len(theta), bits + 1)), np.zeros((len(theta) + 1, bits + 1))
+        kept = min(n, bits)
+        frames[:, :kept], tangents[1:, :kept] = frame[:, :kept], np.tan(rest[:, :kept])
+        if self._half:
+            frames[:, bits] = frame[:, -1]
+            tangents[1:, bits] = np.tan(rest[:, -1]) * self._parity * (1 - 2 * (n // 2 % 2))
+        if self._owed is not None:
+            tangents[0] = self._owed
+        self._owed = tangents[-1].copy() if self._groups == 2 else None
+        return np.cos(rest).prod(axis=1), frames, tangents
+
+    def _advance(self, phi: Floats, scales: Floats, frames: Floats, tangents: Floats) -> None:
+        """Sweep; with two groups the rotations of the group not swept last stay owed."""
+        self._whole = False
+        amplitudes = 1 << self._layout.bits
+        if self._shares == 1 and amplitudes <= CALL_AMPLITUDES:
+            self._run(0, self._group, frames, phi, scales, tangents, 0, amplitudes)
+        else:
+            for k in range(len(phi)):
+                one = slice(k, k + 1)
+                group = (self._group + k) % self._groups
+                self._share(group, frames[one], phi[one], scales[one], tangents[k : k + 2])
+        self._group = (self._group + len(phi)) % self._groups
+        self._whole = True
+
+    def _run(self, share: int, group: int, frames: Floats, phi: Floats, scales: Floats, *rest: Any) -> None:
+        work, e, f, u, c, s, coupling, field, signs = self._scratch[share]
+        tangents, start, stop = rest
+        run(
+            self._x, work, e, f, u, c, s, self._tilings, self._groups, group, coupling, field, signs, frames, phi,
+            scales, tangents, start, stop,
+        )  # fmt: skip
+
+    def _share(self, group: int, frames: Floats, phi: Floats, scales: Floats, tangents: Floats) -> None:
+        """One sweep, its tiles handed out in small chunks to whichever thread is free."""
+        tiles = self._tilings[group].tiles
+        parts = max(16 * self._shares, (1 << self._layout.bits) // CALL_AMPLITUDES)
+        step = max(1, tiles // parts)
+
+        def work(share: int, start: int) -> None:
+            self._run(share, group, frames, phi, scales, tangents, start, min(tiles, start + step))
+
+        self._spread(work, -(-tiles // step), step)
+
+    def _spread(self, work: Callable[[int, int], None], jobs: int, step: int = 1) -> None:
+        """Call work(share, job * step) for all jobs, on the threads of the register."""
+        if self._shares == 1 or jobs == 1:
+            for job in range(jobs):
+                work(0, job * step)
+            return
+        ticket = count()
+
+        def loop(share: int) -> None:
+            while (job := next(ticket)) < jobs:
+                work(share, job * step)
+
+        with ThreadPoolExecutor(self._shares - 1) as pool:
+            others = [pool.submit(loop, share) for share in range(1, self._shares)]
+            try:
+                loop(0)
+            finally:
+                for _ in range(jobs):
+                    next(ticket)
+            for other in others:
+                other.result()
+
+    def _settle(self) -> None:
+        """Apply the rotations still owed."""
+        self._settled_or_raise()
+        if self._owed is None:
+            return
+        tangents = np.zeros((2, len(self._owed)))
+        tangents[0] = self._owed
+        self._owed = None
+        self._advance(np.zeros(1), np.ones(1), np.ones((1, tangents.shape[1])), tangents)
+
+    def _settled_or_raise(self) -> None:
+        if not self._whole:
+            raise AnnealRefError("the register was interrupted in the middle of a layer; load a state and start again")
+
+    # -------------------------------------------------------------------------------------------- read-outs
     def amplitudes(self) -> NDArray[np.complex128]:
-        """Amplitudes (2^N,)."""
-        return self._psi.copy()
+        """Amplitudes psi, shape (2^N,); site 0 is the least significant bit of the index."""
+        self._settle()
+        place, n = self._layout, self.n_sites
+        size = 1 << place.low_bits
+        stored = np.empty(1 << place.bits, np.complex128)
+        for row in range(place.rows):
+            view = place.blocks(self._x, row)
+            index = np.arange(row * size, (row + 1) * size, dtype=np.int64)
+            values = view[:, :, 0].astype(np.complex128).reshape(-1)
+            values += 1j * view[:, :, 1].reshape(-1)
+            stored[row * size : (row + 1) * size] = values * _gauge(index).conj()
+        full = np.concatenate([stored, self._parity * stored[::-1]]) if self._half else stored[: 1 << n]
+        cube = full.reshape((2,) * n)  # axis n - 1 - i is site i
+        cube = np.flip(cube, [n - 1 - i for i in range(n) if self._flips >> i & 1])
+        full = np.ascontiguousarray(cube).reshape(-1)
+        full *= 1j ** (self._turns % 4)
+        if self._signs:
+            full *= 1 - 2.0 * (np.bitwise_count(np.arange(1 << n, dtype=np.int64) & self._signs) & 1)
+        return full
 
-    def probabilities(self) -> NDArray[np.float64]:
-        """Probabilities (2^N,)."""
-        return np.abs(self._psi) ** 2
+    def probabilities(self) -> Floats:
+        """Probabilities, shape (2^N,)."""
+        psi = self.amplitudes()
+        return psi.real**2 + psi.imag**2
+
+    def amplitude_of(self, spins: ArrayLike) -> NDArray[np.complex128]:
+        """Amplitudes of the configurations spins (shots, N) of +-1."""
+        rows = signs("spins", spins, (None, self.n_sites))
+        self._settle()
+        n, place = self.n_sites, self._layout
+        z = ((rows < 0).astype(np.int64) << np.arange(n)).sum(axis=1)
+        sign = 1.0 - 2.0 * (np.bitwise_count(z & self._signs) & 1)
+        y = z ^ self._flips
+        if self._half:
+            down = y >> place.bits & 1
+            sign = np.where(down, self._parity * sign, sign)
+            y = np.where(down, y ^ ((1 << n) - 1), y)
+        o = place.offsets(y)
+        values = self._x[o].astype(np.complex128) + 1j * self._x[o + place.lanes]
+        result: NDArray[np.complex128] = values * _gauge(y).conj() * sign * 1j ** (self._turns % 4)
+        return result
+
+    def log_probability(self, spins: ArrayLike) -> Floats:
+        """Natural logarithms of the probabilities of spins (shots, N); -inf where a probability is 0."""
+        with np.errstate(divide="ignore"):
+            values: Floats = 2 * np.log(np.abs(self.amplitude_of(spins)))
+        return values
 
     def norm(self) -> float:
         """Sum of the probabilities."""
-        return float(self.probabilities().sum())
+        return float(self._weights().sum()) * (2 if self._half else 1)
 
-    def moments(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-        """<Z_i> (N,), <Z_i Z_j> (N, N), <X_i> (N,)."""
-        p, s = self.probabilities(), _spins(self.n_sites).astype(float)
-        x = [2 * np.vdot(a[:, 0], a[:, 1]).real for a in (self._psi.reshape(-1, 2, 1 << i) for i in range(self.n_sites))]
-        return p @ s, s.T @ (s * p[:, None]), np.array(x)
+    def moments(self) -> tuple[Floats, Floats, Floats]:
+        """<Z_i> (N,), <Z_i Z_j> (N, N) and <X_i> (N,), not divided by the norm."""
+        self._settle()
+        z, zz = self._spin_moments()
+        x = self._transverse_moments()
+        n, bits = self.n_sites, self._layout.bits
+        if self._half:
+            zz = np.pad(2 * zz, (0, 1))
+            zz[bits, :bits] = zz[:bits, bits] = 2 * z[:bits]
+            zz[bits, bits] = 2 * z[bits]
+            z = np.zeros(n)
+        frame = np.where(_bits(self._flips, n), -1.0, 1.0)
+        behind = np.where(_bits(self._signs, n), -1.0, 1.0)
+        return z[:n] * frame, zz[:n, :n] * np.outer(frame, frame), x[:n] * behind
 
     def sample(self, shots: int, seed: int) -> NDArray[np.int8]:
-        """Configurations (shots, N) of +-1 drawn from the probabilities."""
-        c = np.cumsum(self.probabilities())
-        z = np.searchsorted(c, np.random.default_rng(seed).random(shots) * c[-1], side="right")
-        return (1 - 2 * ((z[:, None] >> np.arange(self.n_sites)) & 1)).astype(np.int8)
+        """Configurations (shots, N) of +-1 drawn from the probabilities; the same for the same seed."""
+        shots = integer("shots", shots, low=0)
+        generator = np.random.PCG64(integer("seed", seed, low=0))
+        weights = self._weights()
+        place, n = self._layout, self.n_sites
+        uniform = (generator.random_raw(shots) >> np.uint64(11)) * 2.0**-53
+        flip = (generator.random_raw(shots) >> np.uint64(63)).astype(np.int64)
+        edges = np.cumsum(weights)
+        order = np.argsort(uniform, kind="stable")
+        target = uniform[order] * edges[-1]
+        piece = np.searchsorted(edges, target, side="right")
+        piece = np.minimum(piece, np.flatnonzero(weights)[-1])
+        target -= np.where(piece > 0, edges[piece - 1], 0.0)
+        drawn, z = np.empty(shots, np.int64), np.empty(shots, np.int64)
+        measure.draw(self._x, self._shape, piece, target, self._piece(), drawn)
+        z[order] = drawn
+        z ^= self._flips & ((1 << place.bits) - 1)
+        if self._half:
+            last = self._flips >> place.bits & 1
+            z = (z | last << place.bits) ^ (flip * ((1 << n) - 1))
+        return (1 - 2 * (z[:, None] >> np.arange(n) & 1)).astype(np.int8)
 
-    def amplitude_of(self, spins: ArrayLike) -> NDArray[np.complex128]:
-        """Amplitudes of the configurations spins (shots, N)."""
-        z = ((1 - np.asarray(spins, np.int64)) // 2) @ (1 << np.arange(self.n_sites))
-        return self._psi[z]
+    @property
+    def _shape(self) -> tuple[int, int, int, int]:
+        place = self._layout
+        return place.low_bits - place.piece_bits, place.row, place.piece, place.piece_bits
 
-    def log_probability(self, spins: ArrayLike) -> NDArray[np.float64]:
-        """Natural logarithms of the probabilities of spins (shots, N)."""
-        with np.errstate(divide="ignore"):
-            return np.log(np.abs(self.amplitude_of(spins)) ** 2)
+    def _piece(self) -> Floats:
+        return aligned(1 << self._layout.piece_bits, np.float64)
+
+    def _chunks(self) -> tuple[int, int]:
+        """Number of chunks of a read-out, and pieces in each (as bits)."""
+        bits = self._layout.bits - self._layout.piece_bits
+        inside = min(bits, CHUNK_BITS)
+        return 1 << (bits - inside), inside
+
+    def _weights(self) -> Floats:
+        """Weights of the pieces."""
+        self._settle()
+        chunks, inside = self._chunks()
+        weights = np.empty(chunks << inside)
+
+        def work(share: int, k: int) -> None:
+            measure.chunk_weights(self._x, self._shape, k << inside, (k + 1) << inside, self._piece(), weights)
+
+        self._spread(work, chunks)
+        return weights
+
+    def _spin_moments(self) -> tuple[Floats, Floats]:
+        """Moments of the stored bits: z (bits + 1,), the weight last, and zz (bits, bits)."""
+        chunks, inside = self._chunks()
+        low = self._layout.piece_bits
+        b = low + inside
+        z, zz = np.empty((chunks, b + 1)), np.empty((chunks, b, b))
+
+        def work(share: int, k: int) -> None:
+            total, first = np.empty((1 << low, 1)), np.empty((1 << inside, low + 1))
+            measure.chunk_moments(self._x, self._shape, k, inside, self._piece(), total, first, z[k], zz[k])
+
+        self._spread(work, chunks)
+        top = self._layout.bits - b
+        spins = 1.0 - 2.0 * (np.arange(chunks)[:, None] >> np.arange(top) & 1)
+        first, second = np.zeros(b + top + 1), np.zeros((b + top, b + top))
+        weight = z[:, b]
+        first[:b], first[b : b + top], first[b + top] = z[:, :b].sum(0), weight @ spins, weight.sum()
+        second[:b, :b] = zz.sum(0)
+        second[b:, :b] = spins.T @ z[:, :b]
+        second[:b, b:] = second[b:, :b].T
+        second[b:, b:] = spins.T @ (spins * weight[:, None])
+        return first, second
+
+    def _transverse_moments(self) -> Floats:
+        """<X> of the stored bits and, in the symmetric half, of the last spin."""
+        place = self._layout
+        chunks, inside = self._chunks()
+        groups = np.array(
+            list(_triples(place.lane_bits, place.piece_bits))
+            + list(_triples(place.piece_bits, place.low_bits))
+            + list(_triples(place.low_bits, place.bits)),
+            np.int64,
+        )
+        out = np.empty((chunks, place.bits + 1))
+        odd = place.bits % 2
+
+        def work(share: int, k: int) -> None:
+            scratch = aligned(place.lanes * place.lane_bits, self._x.dtype)
+            start, stop = k << inside, (k + 1) << inside
+            measure.chunk_currents(
+                self._x, self._shape, place.bits, start, stop, groups, scratch, self._half, odd, out[k]
+            )
+
+        self._spread(work, chunks)
+        x: Floats = -2 * out.sum(0)
+        if self._half:
+            x *= 2
+            x[-1] *= -0.5 * self._parity * (1 - 2 * (place.bits // 2 % 2))
+        return x
+
+
+TANGENT_SCRATCH = 80
+
+
+def _stored_bits(n: int, symmetric: bool, precision: str) -> int:
+    return n - 1 if _is_half(n, symmetric, precision) else max(n, smallest(precision))
+
+
+def _is_half(n: int, symmetric: bool, precision: str) -> bool:
+    """Whether the half is stored; small systems are stored whole, padded by idle spins that stay up."""
+    return symmetric and n - 1 >= smallest(precision)
+
+
+def _bits(mask: int, n: int) -> NDArray[np.int64]:
+    return np.array([mask >> i & 1 for i in range(n)], np.int64)
+
+
+def _gauge(index: NDArray[np.int64]) -> NDArray[np.complex128]:
+    """(-i)^popcount(index)."""
+    return np.array([1, -1j, -1, 1j])[np.bitwise_count(index) & 3]
+
+
+def _triples(first: int, last: int) -> Iterator[tuple[int, int]]:
+    while first < last:
+        yield first, min(3, last - first)
+        first += 3

@@ -386,3 +386,81 @@ def times(typingctx: Any, re: Any, im: Any, t: Any, i: Any, d: Any, j: Any, r: A
         return _pack(context, builder, both, [_pack(context, builder, re, x), _pack(context, builder, re, y)])
 
     return both(re, im, t, types.intp, d, types.intp, r, types.intp), codegen
+
+
+# ------------------------------------------------------------------------------------------------ sums for read-outs
+@intrinsic
+def squares(typingctx: Any, x: Any, i: Any, p: Any, j: Any) -> Any:
+    """squares(x, i, p, j): p[j : j + lanes] = re^2 + im^2 of the block at i, in double precision."""
+
+    def codegen(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        lanes = VECTORS[sig.args[0].dtype].lanes
+        wide = ir.VectorType(ir.DoubleType(), lanes)
+        re = _load(context, builder, sig.args[0], args[0], args[1])
+        index = builder.add(args[1], ir.Constant(args[1].type, lanes))
+        im = _load(context, builder, sig.args[0], args[0], index)
+        if sig.args[0].dtype == types.float32:
+            re, im = builder.fpext(re, wide), builder.fpext(im, wide)
+        _store(context, builder, sig.args[2], args[2], args[3], _fma(builder, re, re, builder.fmul(im, im)))
+        return context.get_dummy_value()
+
+    return types.void(x, types.intp, p, types.intp), codegen
+
+
+@intrinsic
+def fold(typingctx: Any, bundle: Any) -> Any:
+    """fold(bundle): the sum of the vectors, then for every index bit the sum with its sign (bit 0 counts +)."""
+    bits = bundle.count.bit_length() - 1
+    result = types.UniTuple(bundle.dtype, bits + 1)
+
+    def codegen(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        values, signed = _unpack(builder, args[0], bundle.count), []
+        for _ in range(bits):
+            even, odd = values[::2], values[1::2]
+            signed.append(_total(builder, [builder.fsub(a, b) for a, b in zip(even, odd, strict=True)]))
+            values = [builder.fadd(a, b) for a, b in zip(even, odd, strict=True)]
+        return _pack(context, builder, result, [values[0], *signed])
+
+    return result(bundle), codegen
+
+
+def _total(builder: Any, values: list[Any]) -> Any:
+    while len(values) > 1:
+        values = [builder.fadd(a, b) for a, b in zip(values[::2], values[1::2], strict=True)]
+    return values[0]
+
+
+@intrinsic
+def add_currents(typingctx: Any, re: Any, im: Any, sums: Any) -> Any:
+    """add_currents(re, im, sums): for every index bit add the sum over pairs of re im' - im re' (bit 0 unprimed)."""
+
+    def codegen(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        x, y = _unpack(builder, args[0], re.count), _unpack(builder, args[1], re.count)
+        totals = _unpack(builder, args[2], sums.count)
+        for bit in range(sums.count):
+            for k in range(re.count):
+                if not k >> bit & 1:
+                    other = k | 1 << bit
+                    totals[bit] = _fma(builder, x[k], y[other], totals[bit])
+                    totals[bit] = _fma(builder, builder.fneg(y[k]), x[other], totals[bit])
+        return _pack(context, builder, sums, totals)
+
+    return sums(re, im, sums), codegen
+
+
+@intrinsic
+def lane_currents(typingctx: Any, re: Any, im: Any, x: Any, i: Any) -> Any:
+    """lane_currents(re, im, x, i): add re im' - im re' to x[i:], a vector for each lane bit (bit 1: minus that)."""
+    lanes = re.lanes
+
+    def codegen(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        for bit in range(lanes.bit_length() - 1):
+            index = builder.add(args[3], ir.Constant(args[3].type, bit * lanes))
+            order = [lane ^ 1 << bit for lane in range(lanes)]
+            total = _load(context, builder, sig.args[2], args[2], index)
+            total = _fma(builder, args[0], _shuffle(builder, args[1], order), total)
+            total = _fma(builder, builder.fneg(args[1]), _shuffle(builder, args[0], order), total)
+            _store(context, builder, sig.args[2], args[2], index, total)
+        return context.get_dummy_value()
+
+    return types.void(re, im, x, types.intp), codegen

@@ -31,6 +31,10 @@ from anneal_ref.backends.exact.simd import (
 )
 
 
+TANGENTS = 64
+"""Room for the tangents of all bits of a tile, below the tables of the lanes."""
+
+
 class Tiling(NamedTuple):
     """How a group of bits is swept; all numbers are integers known before the run."""
 
@@ -38,7 +42,8 @@ class Tiling(NamedTuple):
     tiles: int  # tiles, or pairs of tiles
     chunk_bits: int  # high tiles: lowest bits, one piece of a memory row, not rotated; low tiles: 0
     piece_bits: int  # bits of a padded piece of memory that fits the first-level cache
-    piece: int  # distance of pieces in floats
+    piece: int  # distance of pieces of memory in floats
+    stride: int  # distance of pieces of a tile in floats
     row: int  # distance of memory rows in floats
     half: int  # distance of the two tiles of a pair in the buffer, in floats
     pairs: int  # 1: the left-out spin is rotated in the edge pass
@@ -120,15 +125,15 @@ def rows_high(y, o, n, first, w, t, d, r, levels, b, a, x, ahead, count, step, c
 
 @njit(cache=True)
 def tangents(tans, k, p, w, o, lane_bits):  # type: ignore[no-untyped-def]
-    """Tables at w[o:]: signed lanes; at w[o-4:] the three bits above them; at w[o-36:] all bits of the tile."""
+    """Tables at w[o:]: signed lanes; at w[o-4:] the three bits above them; at w[o-TANGENTS:] all bits of the tile."""
     lanes = 1 << lane_bits
     for b in range(p.bits):
-        w[o - 36 + b] = 0.0 if b < p.chunk_bits else tans[k, p.sites[b]]
+        w[o - TANGENTS + b] = 0.0 if b < p.chunk_bits else tans[k, p.sites[b]]
     for b in range(lane_bits):
         for j in range(lanes):
-            w[o + b * lanes + j] = w[o - 36 + b] * (1.0 if j >> b & 1 else -1.0)
+            w[o + b * lanes + j] = w[o - TANGENTS + b] * (1.0 if j >> b & 1 else -1.0)
     for b in range(3):
-        w[o - 4 + b] = w[o - 36 + lane_bits + b] if lane_bits + b < p.edge else 0.0
+        w[o - 4 + b] = w[o - TANGENTS + lane_bits + b] if lane_bits + b < p.edge else 0.0
 
 
 @njit(cache=True)
@@ -148,12 +153,12 @@ def signed_lanes(t, w, o, lanes):  # type: ignore[no-untyped-def]
 def in_place(x, o, p, bit, count, w, t):  # type: ignore[no-untyped-def]
     """Turn `count` bits from `bit` on, anywhere above the row, in a tile or a piece at o."""
     if bit >= p.piece_bits:
-        step = p.piece << (bit - p.piece_bits)
+        step = p.stride << (bit - p.piece_bits)
         chunk = 2 << p.piece_bits
         for g in range(1 << (p.bits - bit - count)):
             h = o + g * (step << count)
             n = 1 << (bit - p.piece_bits)
-            rotate(x, h, 0, p.piece, 0, step, x, h, 0, p.piece, 0, step, n, chunk, w, t + bit, count)
+            rotate(x, h, 0, p.stride, 0, step, x, h, 0, p.stride, 0, step, n, chunk, w, t + bit, count)
     else:
         n = 1 << (min(p.bits, p.piece_bits) - bit - count)
         s = 2 << bit
@@ -166,11 +171,11 @@ def edge_in_place(x, o, p, w, t, f):  # type: ignore[no-untyped-def]
     if p.pairs:
         bit = p.bits - 3
         if bit >= p.piece_bits:
-            n, chunk, u = 1 << (bit - p.piece_bits), 2 << p.piece_bits, p.piece << (bit - p.piece_bits)
+            n, chunk, u = 1 << (bit - p.piece_bits), 2 << p.piece_bits, p.stride << (bit - p.piece_bits)
         else:
             n, chunk, u = 1, 2 << bit, 2 << bit
-        q = 2 << (bit + 1) if bit + 1 < p.piece_bits else p.piece << (bit + 1 - p.piece_bits)
-        a = p.piece
+        q = 2 << (bit + 1) if bit + 1 < p.piece_bits else p.stride << (bit + 1 - p.piece_bits)
+        a = p.stride
         rotate_pairs(
             x, o, o + u, 0, a, 0, q, x, o, o + u, 0, a, 0, q, n, chunk, w, t + bit + 1, w, f, 0, p.odd
         )
@@ -193,7 +198,7 @@ def edge_copy(x, y, o, p, c, last, w, t, f, out):  # type: ignore[no-untyped-def
     bit = p.bits - 2 if p.pairs else p.edge
     n = 1 << (bit - p.chunk_bits)
     q = p.row << (bit - p.chunk_bits)
-    g = 2 << bit if bit < p.piece_bits else p.piece << (bit - p.piece_bits)
+    g = 2 << bit if bit < p.piece_bits else p.stride << (bit - p.piece_bits)
     a = column(p, c)
     if p.pairs:
         b = column(p, last - c)
@@ -204,16 +209,16 @@ def edge_copy(x, y, o, p, c, last, w, t, f, out):  # type: ignore[no-untyped-def
             c >>= 1
         if out:
             rotate_pairs(
-                y, o, v, s, p.piece, chunk, g, x, a, b, 0, p.row, 0, q, n, chunk, w, t + bit, w, f, even, p.odd
+                y, o, v, s, p.stride, chunk, g, x, a, b, 0, p.row, 0, q, n, chunk, w, t + bit, w, f, even, p.odd
             )
         else:
             rotate_pairs(
-                x, a, b, 0, p.row, 0, q, y, o, v, s, p.piece, chunk, g, n, chunk, w, t + bit, w, f, even, p.odd
+                x, a, b, 0, p.row, 0, q, y, o, v, s, p.stride, chunk, g, n, chunk, w, t + bit, w, f, even, p.odd
             )
     elif out:
-        rotate(y, o, s, p.piece, chunk, g, x, a, 0, p.row, 0, q, n, chunk, w, t + bit, p.bits - bit)
+        rotate(y, o, s, p.stride, chunk, g, x, a, 0, p.row, 0, q, n, chunk, w, t + bit, p.bits - bit)
     else:
-        rotate(x, a, 0, p.row, 0, q, y, o, s, p.piece, chunk, g, n, chunk, w, t + bit, p.bits - bit)
+        rotate(x, a, 0, p.row, 0, q, y, o, s, p.stride, chunk, g, n, chunk, w, t + bit, p.bits - bit)
 
 
 @njit(cache=True)
@@ -238,12 +243,12 @@ def sweep(x, w, e, f, u, c, s, p, start, stop, coupling, field, phi, scale, lane
     count = p.passes.shape[0]
     for tile in range(start, stop):
         if high:
-            edge_copy(x, w, buffer, p, tile, last, w, b - 36, sb, False)
+            edge_copy(x, w, buffer, p, tile, last, w, b - TANGENTS, sb, False)
             y, o = w, buffer
         else:
             y, o = x, tile * p.row
             if p.before:
-                edge_in_place(x, o, p, w, b - 36, sb)
+                edge_in_place(x, o, p, w, b - TANGENTS, sb)
         for side in range(2 if high and p.pairs else 1):
             index = last - tile if side else tile
             here = o + side * p.half
@@ -252,12 +257,12 @@ def sweep(x, w, e, f, u, c, s, p, start, stop, coupling, field, phi, scale, lane
             )
             if p.before:
                 for k in range(count - 1, above - 1, -1):
-                    in_place(y, here, p, p.passes[k, 0], p.passes[k, 1], w, b - 36)
+                    in_place(y, here, p, p.passes[k, 0], p.passes[k, 1], w, b - TANGENTS)
             for piece in range(pieces):
-                h = here + piece * p.piece
+                h = here + piece * p.stride
                 if p.before:
                     for k in range(above - 1, -1, -1):
-                        in_place(y, h, p, p.passes[k, 0], p.passes[k, 1], w, b - 36)
+                        in_place(y, h, p, p.passes[k, 0], p.passes[k, 1], w, b - TANGENTS)
                 if high:
                     step = p.row
                     inside = 1 << (row_bits - p.chunk_bits)
@@ -270,13 +275,13 @@ def sweep(x, w, e, f, u, c, s, p, start, stop, coupling, field, phi, scale, lane
                 else:
                     rows_after(y, h, rows, piece * rows, w, t, d, r, levels, b, a)
                 for k in range(above):
-                    in_place(y, h, p, p.passes[k, 0], p.passes[k, 1], w, a - 36)
+                    in_place(y, h, p, p.passes[k, 0], p.passes[k, 1], w, a - TANGENTS)
             for k in range(above, count):
-                in_place(y, here, p, p.passes[k, 0], p.passes[k, 1], w, a - 36)
+                in_place(y, here, p, p.passes[k, 0], p.passes[k, 1], w, a - TANGENTS)
         if high:
-            edge_copy(x, w, buffer, p, tile, last, w, a - 36, sa, True)
+            edge_copy(x, w, buffer, p, tile, last, w, a - TANGENTS, sa, True)
         else:
-            edge_in_place(x, o, p, w, a - 36, sa)
+            edge_in_place(x, o, p, w, a - TANGENTS, sa)
 
 
 @njit(cache=True, nogil=True)
