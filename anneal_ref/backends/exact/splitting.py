@@ -31,8 +31,8 @@ if TYPE_CHECKING:
 
 Floats = NDArray[np.float64]
 
-_MOMENTS = 6
-# exact for pieces of degree 6 against the highest Legendre polynomial; tables are cubic at most
+_MOMENTS = 4
+# exact for pieces of degree 8 against the highest Legendre polynomial; tables are cubic at most
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(6)
 
 

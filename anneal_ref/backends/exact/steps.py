@@ -3,11 +3,11 @@
 The error of a splitting over a step is a sum of nested commutators of the two parts of H. Their size follows from two local
 frequencies, 2 G w (transverse) and 2 P f (problem), where w is the root-mean-square transverse weight and
 f^2 = sum_j J_ij^2 + h_i^2 averaged over the sites. Steps are equally long in the phase that `step_rate` accumulates,
-which weighs the commutator of degree seven that matters most, and their number per unit of phase is
+which weighs the commutator of degree seven that matters most, and their number is
 
-    density = margin * (level + slope * tolerance^(-1/order)) * (phase / 50)^exponent
+    steps = slope * tolerance^(-1/order) * (phase + offset)
 
-for each splitting. The constants were fitted by `benchmarks/step_rule.py` on one set of anneals, and hold on another that
+for each splitting. The two constants were fitted by `benchmarks/step_rule.py` on one set of anneals, and hold on another that
 has other sizes, graphs, fields, weights and schedules.
 """
 
@@ -29,19 +29,19 @@ _MESH = 512
 
 @dataclass(frozen=True, slots=True)
 class Rule:
-    """Constants of the step density of one splitting."""
+    """Constants of the number of steps of one splitting."""
 
-    level: float
     slope: float
-    exponent: float
-    margin: float
+    offset: float
 
 
 RULES = {
-    STRANG.name: Rule(0.0, 0.06, -0.2, 1.5),
-    BLANES_MOAN_4.name: Rule(0.2, 0.0495, -0.2, 1.5),
-    BLANES_MOAN_6.name: Rule(0.09, 0.092, -0.2, 1.4),
+    STRANG.name: Rule(0.17, 1.8),
+    BLANES_MOAN_4.name: Rule(0.115, 1.2),
+    BLANES_MOAN_6.name: Rule(0.163, 1.8),
 }
+# above this the errors no longer follow the power law, and steps cannot be longer
+_LOOSEST = 1e-3
 
 
 def step_rate(anneal: Anneal, times: Floats) -> Floats:
@@ -82,8 +82,7 @@ def phase_mesh(anneal: Anneal) -> tuple[Floats, Floats]:
 def step_density(splitting: Splitting, tolerance: float, phase: float) -> float:
     """Return the steps per unit of phase that keep all <Z> and <ZZ> within the tolerance."""
     rule = RULES[splitting.name]
-    need = rule.level + rule.slope * tolerance ** (-1 / splitting.order)
-    return rule.margin * need * (max(phase, 1.0) / 50) ** rule.exponent
+    return rule.slope * min(tolerance, _LOOSEST) ** (-1 / splitting.order) * (1 + rule.offset / max(phase, 1e-12))
 
 
 def choose_splitting(tolerance: float, phase: float) -> Splitting:
