@@ -76,8 +76,8 @@ class Manifest:
             raise InputError(f"undone must be true or false; got {undone!r}")
         if undone and gauge is None:
             raise InputError("undone is set, but there is no gauge that could have been undone; give the gauge too")
-        if source is not None and not (isinstance(source, str) and source.isprintable()):
-            raise InputError(f"source must be one line of text; got {source!r}")
+        if source is not None and not (isinstance(source, str) and source.isprintable() and source == source.strip()):
+            raise InputError(f"source must be one line of text without white space around it; got {source!r}")
         put = object.__setattr__
         put(self, "instance", instance)
         put(self, "duration", None if duration is None else positive("duration", duration))

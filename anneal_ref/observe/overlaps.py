@@ -172,7 +172,7 @@ def _by_pairs(spins: NDArray[np.int8]) -> tuple[float, float]:
     shots, n = spins.shape
     i, j = np.triu_indices(n, 1)
     linear, gram = np.zeros(len(i)), np.zeros((len(i), len(i)))
-    step = max(1, _CHUNK_BYTES // (4 * len(i)))
+    step = max(1, _CHUNK_BYTES // (4 * max(1, len(i))))
     for start in range(0, shots, step):
         part = spins[start : start + step]
         p = (part[:, i] * part[:, j]).astype(np.float32)

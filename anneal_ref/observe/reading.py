@@ -77,7 +77,7 @@ def _sidecar(path: Path) -> Path:
     return path.with_name(path.name + ".manifest.json")
 
 
-def _aside(path: Path, fill: Callable[[IO[bytes]], None]) -> None:
+def _aside(path: Path, fill: Callable[[IO[bytes]], object]) -> None:
     """Write beside the file, sync, and put it in place in one step."""
     part = path.with_name(path.name + PART)
     try:
@@ -130,7 +130,7 @@ def _write_npy(path: Path, spins: NDArray[np.int8], manifest: Manifest, groups: 
         raise InputError(f"{path}: NPY has no room for the groups of the shots; write .npz, .h5 or .csv")
     _aside(path, lambda file: np.save(file, spins))
     # always written, so that no sidecar of an earlier file stays behind
-    _aside(_sidecar(path), lambda file: (file.write(manifest.to_json().encode()), None)[1])
+    _aside(_sidecar(path), lambda file: file.write(manifest.to_json().encode()))
 
 
 def _read_npz(path: Path) -> Table:
@@ -160,7 +160,7 @@ def _write_npz(path: Path, spins: NDArray[np.int8], manifest: Manifest, groups: 
     arrays: dict[str, Any] = {"spins": spins, "values": np.array("spins"), "manifest": np.array(manifest.to_json())}
     if groups is not None:
         arrays["groups"] = groups
-    _aside(path, lambda file: np.savez_compressed(file, allow_pickle=False, **arrays))
+    _aside(path, lambda file: np.savez_compressed(file, **arrays))
 
 
 def _read_hdf5(path: Path) -> Table:

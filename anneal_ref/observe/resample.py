@@ -201,21 +201,26 @@ def estimate_of_moments(
 ) -> Estimate:
     """Return f of the moments of the spins, by jackknife, or by bootstrap where `draws` are given."""
     n = len(spins)
-    z, zz = block_sums(spins, parts)
-    z_all, zz_all = z.sum(axis=0), zz.sum(axis=0)
+    z_all, zz_all = sums(spins)
 
     def value(z_sum: NDArray[np.float64], zz_sum: NDArray[np.float64], shots: float) -> NDArray[np.float64]:
         mean = zz_sum / shots
         np.fill_diagonal(mean, 1.0)
         return np.asarray(f(Moments.of(z_sum / shots, mean, how="samples")), dtype=np.float64)
 
-    full = value(z_all, zz_all, n)
+    def without(shots: NDArray[np.intp]) -> NDArray[np.float64]:
+        z, zz = sums(spins[shots])
+        return value(z_all - z, zz_all - zz, n - len(shots))
+
     if draws is None:
-        replicas = (value(z_all - z[k], zz_all - zz[k], n - size) for k, size in enumerate(parts.sizes))
+        replicas = [without(shots) for shots in parts]
     else:
+        z, zz = block_sums(spins, parts)
         rows = draws.astype(np.float64)
-        replicas = (value(row @ z, np.tensordot(row, zz, axes=1), float(row @ parts.sizes)) for row in rows)
-    return _estimate(full, list(replicas), value(z_all, zz_all, n + PSEUDO_SHOTS), parts, draws is not None)
+        replicas = [value(row @ z, np.tensordot(row, zz, axes=1), float(row @ parts.sizes)) for row in rows]
+    return _estimate(
+        value(z_all, zz_all, n), replicas, value(z_all, zz_all, n + PSEUDO_SHOTS), parts, draws is not None
+    )
 
 
 def estimate_of_spins(

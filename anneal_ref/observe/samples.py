@@ -15,6 +15,8 @@ from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate
 from anneal_ref.observe import resample
 from anneal_ref.observe.bits import pack
+from anneal_ref.observe.counting import count_moments
+from anneal_ref.observe.joining import join_groups, join_manifests
 from anneal_ref.observe.manifest import Manifest
 from anneal_ref.observe.moments import Moments
 from anneal_ref.observe.reading import read, write
@@ -143,28 +145,13 @@ class Samples:
         if not runs:
             raise InputError("concatenate takes at least one run; got none")
         plain = [run.ungauged() for run in runs]
-        first = plain[0]
         for k, run in enumerate(plain):
-            if run.n_sites != first.n_sites:
-                sizes = f"run 0 has {first.n_sites}, run {k} has {run.n_sites}"
+            if run.n_sites != plain[0].n_sites:
+                sizes = f"run 0 has {plain[0].n_sites}, run {k} has {run.n_sites}"
                 raise InputError(f"runs must have the same number of spins; {sizes}")
-            for key in ("instance", "duration", "sites"):
-                mine, yours = first.manifest.to_dict().get(key), run.manifest.to_dict().get(key)
-                if mine != yours:
-                    raise InputError(f"runs must agree in {key}; run 0 has {mine}, run {k} has {yours}")
-        marks = (key for key in ("gauge", "batch") if any(getattr(run.manifest, key) is not None for run in plain))
-        by = next(marks, None)
-        names: dict[Any, int] = {}
-        groups = [_origin(run, k, by, names) for k, run in enumerate(plain)]
-        sources = {run.manifest.source for run in plain}
-        gauges = {None if run.manifest.gauge is None else run.manifest.gauge.tobytes() for run in plain}
-        batches = {run.manifest.batch for run in plain}
-        manifest = first.manifest.replace(
-            source=sources.pop() if len(sources) == 1 else None,
-            batch=batches.pop() if len(batches) == 1 else None,
-            **({} if len(gauges) == 1 else {"gauge": None, "undone": False}),
-        )
-        return cls(np.concatenate([run.spins for run in plain]), manifest, np.concatenate(groups))
+        manifests = [run.manifest for run in plain]
+        groups = join_groups(manifests, [run.groups for run in plain], [run.n_shots for run in plain])
+        return cls(np.concatenate([run.spins for run in plain]), join_manifests(manifests), groups)
 
     def ungauged(self) -> Samples:
         """Return the samples with the gauge of the manifest undone, s_i -> g_i s_i, if there is one to undo."""
@@ -260,26 +247,8 @@ class Samples:
         A. Agresti and B. A. Coull, Am. Stat. 52, 119 (1998): four imagined observations.
         """
         self._require_ungauged()
-        n = self.n_shots
-        z_sum, zz_sum = resample.sums(self.spins)
-        z, zz = z_sum / n, zz_sum / n
-        spare = max(n - 1, 1)
-        z_var, zz_var = (1.0 - z**2) / spare, (1.0 - zz**2) / spare
         resample.warn_if_few(self.groups)
-        if self.n_groups > 1:
-            parts = resample.blocks(n, self.groups)
-            z_var, zz_var = np.zeros_like(z), np.zeros_like(zz)
-            for shots in parts:
-                share = len(shots) / n
-                block_z, block_zz = resample.sums(self.spins[shots])
-                weight = share / (1.0 - share) / len(parts)
-                z_var += weight * (block_z / len(shots) - z) ** 2
-                zz_var += weight * (block_zz / len(shots) - zz) ** 2
-        draw = 1.0 - (n / (n + resample.PSEUDO_SHOTS)) ** 2
-        z_stat = np.sqrt(z_var + draw * z**2 / spare)
-        zz_stat = np.sqrt(zz_var + draw * zz**2 / spare)
-        np.fill_diagonal(zz_stat, 0.0)
-        return Moments(Estimate(z, z_stat, 0.0, "samples"), Estimate(zz, zz_stat, 0.0, "samples"))
+        return count_moments(self.spins, self.groups)
 
     def sample(self, shots: int, seed: int) -> Samples:
         """Return shots drawn with replacement: the samples as a source of their own empirical distribution.
@@ -379,16 +348,6 @@ def _groups(groups: ArrayLike, n_shots: int) -> NDArray[np.int64]:
     if np.any(array != np.round(array)):
         raise InputError(f"groups must be whole numbers; got {array[array != np.round(array)][0]}")
     return frozen(array.astype(np.int64))
-
-
-def _origin(run: Samples, k: int, by: str | None, names: dict[Any, int]) -> NDArray[np.int64]:
-    """Return the group of each shot of the k-th run; `names` collects the groups met so far."""
-    if run.groups is not None:
-        found, inverse = np.unique(run.groups, return_inverse=True)
-        return np.array([names.setdefault(("group", k, int(g)), len(names)) for g in found], dtype=np.int64)[inverse]
-    mark = getattr(run.manifest, by) if by else None
-    key = ("run", k) if mark is None else (by, mark.tobytes() if isinstance(mark, np.ndarray) else mark)
-    return np.full(run.n_shots, names.setdefault(key, len(names)), dtype=np.int64)
 
 
 def _list(labels: list[int], most: int = 12) -> str:

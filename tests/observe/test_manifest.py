@@ -33,6 +33,7 @@ def test_round_trip_through_json() -> None:
         ({"sites": [1, -2]}, "sites must be whole numbers of at least 0; got -2"),
         ({"sites": [1, 2], "gauge": [1]}, "got 1 signs and 2 sites"),
         ({"source": "two\nlines"}, "source must be one line of text"),
+        ({"source": " x"}, "without white space around it; got ' x'"),
     ],
 )
 def test_bad_entries(entries: dict[str, object], message: str) -> None:

@@ -97,8 +97,8 @@ def test_names_counts_and_groups(tmp_path: Path) -> None:
 
 
 def test_entries_at_the_head(tmp_path: Path) -> None:
-    head = f"# instance: {'ab' * 32}\n# duration: 7\n# gauge: +1 -1\n# sites: [4, 2]\n# batch: 3\n# source: Saltmarsh: east\n"
-    found = read(tmp_path, head + "1,-1\n").manifest
+    head = f"# instance: {'ab' * 32}\n# duration: 7\n# gauge: +1 -1\n# sites: [4, 2]\n# batch: 3\n"
+    found = read(tmp_path, head + "# source: Saltmarsh: east\n1,-1\n").manifest
     assert found.to_dict() == {
         "instance": "ab" * 32, "duration": 7.0, "gauge": [1, -1], "batch": 3, "sites": [4, 2],
         "source": "Saltmarsh: east",
