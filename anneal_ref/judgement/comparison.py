@@ -1,0 +1,115 @@
+"""`Comparison`: the scores of one set of samples, with floors, deviations, verdict and notes."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from anneal_ref.base.estimate import Estimate, Score
+from anneal_ref.judgement.correlation_error import CorrelationError
+from anneal_ref.judgement.deviations import PairTable
+from anneal_ref.judgement.equivalence import Decision
+from anneal_ref.judgement.perfect import NoiseFloor
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Comparison:
+    """What the samples of one anneal say about the processor.
+
+    Parameters
+    ----------
+    scores : mapping of str to Score
+        In a fixed order: correlation_error, residual_energy, order_parameter, magnetisation_error, fidelity,
+        log_likelihood. One that the data cannot support is absent, and a note says why. The floor of a score is what a
+        perfect processor attains with the same shots: the 95 % quantile for the two errors, value and scatter for the
+        others.
+    truth : mapping of str to Estimate
+        True values of the scores that have one: residual_energy, order_parameter, log_likelihood.
+    sigma : mapping of str to float
+        (measured - true) beyond the numerical error, in standard errors, for the same scores.
+    correlation : CorrelationError
+        The correlation error with all that pooling needs.
+    floor : NoiseFloor
+        Correlation errors of a perfect processor.
+    pairs : PairTable
+        All pairs of spins, the most striking deviation first.
+    decision : Decision or None
+        The verdict, if limits were given.
+    notes : tuple of str
+        What the reader should know.
+    instance : str
+        Identity of the instance.
+    duration : float
+    n_sites, n_shots, n_clusters : int
+        `n_clusters` equals `n_shots` where each shot is independent.
+    level : float
+        Of the intervals.
+    """
+
+    scores: Mapping[str, Score]
+    truth: Mapping[str, Estimate]
+    sigma: Mapping[str, float]
+    correlation: CorrelationError
+    floor: NoiseFloor
+    pairs: PairTable
+    decision: Decision | None
+    notes: tuple[str, ...]
+    instance: str
+    duration: float
+    n_sites: int
+    n_shots: int
+    n_clusters: int
+    level: float
+
+    @property
+    def correlation_error(self) -> Score:
+        """The first score."""
+        return self.scores["correlation_error"]
+
+    @property
+    def verdict(self) -> str | None:
+        """Accept, reject or inconclusive; None without limits."""
+        return None if self.decision is None else self.decision.outcome
+
+    def __repr__(self) -> str:
+        """Return the main figure in angle brackets."""
+        low, high = self.correlation_error.low, self.correlation_error.high
+        return f"<Comparison: {self.n_sites} spins, {self.n_shots} shots, correlation error {low:.3g} to {high:.3g}>"
+
+    def __str__(self) -> str:
+        """Return a readable table."""
+        shots = f"{self.n_shots} shots"
+        shots += "" if self.n_clusters == self.n_shots else f" in {self.n_clusters} gauges or batches"
+        lines = [
+            f"samples against truth: {self.n_sites} spins, duration {self.duration:g}, {shots}",
+            f"  {'':<30}{'measured':>10}   {f'{self.level:.0%} interval':<22}{'perfect processor':<22}sigma",
+        ]
+        for name, score in self.scores.items():
+            unit = f" ({score.unit})" if score.unit else ""
+            interval = f"{score.low:.4g} to {score.high:.4g}"
+            sigma = f"{self.sigma[name]:+.1f}" if name in self.sigma else ""
+            label = name.replace("_", " ") + unit
+            row = f"  {label:<30}{score.value:>10.4g}   {interval:<22}{_perfect(score.floor):<22}{sigma}"
+            lines.append(row.rstrip())
+        found, level = self.pairs.significant(self.level), f"{self.level:.0%}"
+        lines.append(f"pairs of spins that differ at level {level} (Holm): {found} of {len(self.pairs)}; the largest:")
+        lines.append(self.pairs.text())
+        if found:
+            site_sigma, gain = self.pairs.site_sigma(), self.pairs.site_gain()
+            worst = np.argsort(-site_sigma, kind="stable")[:3]
+            named = ", ".join(f"{k} (rms sigma {site_sigma[k]:.1f}, gain {gain[k]:.2f})" for k in worst)
+            lines.append(f"sites most involved: {named}")
+        lines += [f"note: {note}" for note in self.notes]
+        if self.decision is not None:
+            lines.append(str(self.decision))
+        return "\n".join(lines)
+
+
+def _perfect(floor: Estimate | None) -> str:
+    if floor is None:
+        return ""
+    if "quantile" in floor.how:
+        return f"below {float(floor):.3g} (95%)"
+    return f"{float(floor):.4g} ± {float(floor.stat):.2g}"
