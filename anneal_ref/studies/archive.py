@@ -1,0 +1,347 @@
+"""`Archive`: a folder of references, one sealed file each, that a sceptic can verify and recompute."""
+
+from __future__ import annotations
+
+import math
+import os
+import warnings
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from anneal_ref.base.checks import integer, number
+from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning, ArchiveError
+from anneal_ref.base.run import Run
+from anneal_ref.base.storage import PART, read_record, write_record
+from anneal_ref.model.anneal import Anneal
+from anneal_ref.observe.moments import Moments
+from anneal_ref.studies.records import from_record, to_record
+from anneal_ref.truth.reference import Reference
+
+SUFFIX = ".h5"
+
+# a bar covers about 95 % of the entries; three times a bar, or 6.5 standard errors, is beyond chance for all of them
+_BARS = 3.0
+_STANDARD_ERRORS = 6.5
+
+
+class Archive:
+    """A folder with one file per reference, `<identity>.h5`.
+
+    The name starts with 32 digits of the identity of the anneal, so that a look-up by anneal opens only files of that
+    anneal; 16 digits of the settings follow. Files are written aside and renamed: several processes may add to one folder, and
+    an interrupt leaves finished references whole.
+
+    Parameters
+    ----------
+    folder : path
+    create : bool
+        Make the folder when it is not there.
+
+    Raises
+    ------
+    ArchiveError
+        The folder cannot be made, or is something else.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> import anneal_ref as ar
+    >>> schedule = ar.Schedule.linear(transverse=(20.0, 0.0), problem=(0.0, 10.0))
+    >>> instance = ar.draw_instance(ar.lattices.square(2, 3), ar.disorder.plus_minus(), seed=1)
+    >>> anneal = ar.Anneal(instance, schedule, duration=1.0)
+    >>> with tempfile.TemporaryDirectory() as folder:
+    ...     archive = ar.Archive(folder)
+    ...     path = archive.add(ar.reference(anneal, tolerance=1e-3))
+    ...     archive.find(anneal, tolerance=1e-3).outcome, archive.audit(recompute=1.0).sound
+    ('converged', True)
+    """
+
+    def __init__(self, folder: str | os.PathLike[str], create: bool = True) -> None:
+        self.folder = Path(folder)
+        if create:
+            try:
+                self.folder.mkdir(parents=True, exist_ok=True)
+            except OSError as error:
+                problem = error.strerror or str(error)
+                raise _unusable(self.folder, problem, "give a folder that exists or can be made") from error
+        elif self.folder.exists() and not self.folder.is_dir():
+            raise _unusable(self.folder, "it is not a folder", "give the folder that holds the references")
+
+    def __repr__(self) -> str:
+        """Return folder and number of files."""
+        return f"<Archive {self.folder}: {len(self)} references>"
+
+    def __len__(self) -> int:
+        """Number of files, damaged ones included."""
+        return len(self.list())
+
+    def __iter__(self) -> Iterator[Reference]:
+        """Read one reference after the other; a damaged file raises."""
+        return (self.open(identity) for identity in self.list())
+
+    def path(self, identity: str) -> Path:
+        """Return where the reference of that identity is, or would be."""
+        return self.folder / f"{identity}{SUFFIX}"
+
+    def list(self) -> tuple[str, ...]:
+        """Return the identities in the folder by name, in alphabetical order; files are not opened."""
+        return tuple(sorted(path.name.removesuffix(SUFFIX) for path in self.folder.glob(f"*{SUFFIX}")))
+
+    def add(self, reference: Reference) -> Path:
+        """Write a reference and return its file; one that is there already, and is whole, stays as it is.
+
+        Raises
+        ------
+        ArchiveError
+            The folder is read-only, the disk is full, ...; nothing half-written is left.
+        """
+        path = self.path(reference.identity)
+        return path if self.contains(reference.identity) else write_record(path, to_record(reference))
+
+    def contains(self, identity: str) -> bool:
+        """Return whether a whole file with that identity inside is there."""
+        try:
+            self.open(identity)
+        except ArchiveError:
+            return False
+        return True
+
+    def open(self, identity: str) -> Reference:
+        """Read the reference of that identity.
+
+        Raises
+        ------
+        ArchiveError
+            No such file, a damaged one, or one that holds another reference than its name says.
+        """
+        path = self.path(identity)
+        reference = read_reference(path)
+        if reference.identity != identity:
+            raise _unusable(path, f"it holds reference {reference.identity}", "rename it, or take it out of the folder")
+        return reference
+
+    def find(self, anneal: Anneal, tolerance: float = 1e-3) -> Reference | None:
+        """Return the best reference for an anneal whose measured error is within the tolerance, or None.
+
+        Whatever its back-end and the tolerance that it was made for: what counts is what was measured.
+
+        Warns
+        -----
+        AnnealRefWarning
+            A file of this anneal is damaged and was passed over.
+        """
+        tolerance = number("tolerance", tolerance, 0.0, 1.0)
+        best: Reference | None = None
+        for path in sorted(self.folder.glob(f"{anneal.identity[:32]}-*{SUFFIX}")):
+            try:
+                found = self.open(path.name.removesuffix(SUFFIX))
+            except ArchiveError as error:
+                warnings.warn(f"passed over a reference: {error}", AnnealRefWarning, stacklevel=2)
+                continue
+            fits = found.anneal.identity == anneal.identity and found.decay.settled and found.error <= tolerance
+            if fits and (best is None or found.error < best.error):
+                best = found
+        return best
+
+    def table(self) -> str:
+        """Return a readable table with a row for each file."""
+        rows = [("reference", "lattice", "spins", "duration", "tolerance", "error", "outcome", "back-end")]
+        for identity in self.list():
+            try:
+                found = self.open(identity)
+            except ArchiveError as error:
+                rows.append((identity[:12], error.problem, "", "", "", "", "unusable", ""))
+                continue
+            rows.append(
+                (
+                    identity[:12],
+                    found.anneal.instance.lattice.name,
+                    str(found.n_sites),
+                    f"{found.anneal.duration:g}",
+                    f"{found.tolerance:g}",
+                    f"{found.error:.2g}",
+                    found.outcome,
+                    type(found.backend).__name__,
+                )
+            )
+        return _aligned(rows) if len(rows) > 1 else f"no references in {self.folder}"
+
+    def audit(self, recompute: float = 0.0, seed: int = 0, run: Run = Run()) -> Audit:  # noqa: B008
+        """Verify every file, and solve a part of the references again.
+
+        Every file: all bytes against the checksums, the name against the identity of what is inside, the stored error bars against
+        those that the stored runs give, probabilities and samples against the moments. A seeded choice of
+        references is also evolved again, from nothing but what its file holds and with the step halved once more than
+        in the finest run; the result must lie within the stored error bars.
+
+        Nothing is changed or deleted, and no damage stops the audit.
+
+        Parameters
+        ----------
+        recompute : float
+            Fraction of the whole references to solve again, from 0 to 1, rounded up.
+        seed : int
+            Of the choice.
+        run : Run
+            Threads and progress.
+
+        Raises
+        ------
+        ArchiveError
+            There is no such folder.
+        """
+        fraction, seed = number("recompute", recompute, 0.0, 1.0), integer("seed", seed, low=0)
+        if not self.folder.is_dir():
+            raise _unusable(self.folder, "there is no such folder", "check its name")
+        identities = self.list()
+        problems = {identity: self._problem(identity) for identity in identities}
+        whole = [identity for identity in identities if problems[identity] is None]
+        chosen = np.random.default_rng(seed).permutation(len(whole))[: math.ceil(fraction * len(whole))]
+        deviations: dict[str, float] = {}
+        with run.track(len(chosen), "audit") as bar:
+            for identity in sorted(whole[k] for k in chosen):
+                try:
+                    deviations[identity] = _deviation(self.open(identity), run)
+                except AnnealRefError as error:
+                    problems[identity] = f"it cannot be recomputed: {error}"
+                else:
+                    if not deviations[identity] <= _BARS:
+                        problems[identity] = f"recomputed, it is off by {deviations[identity]:.3g} error bars"
+                bar.update()
+        return Audit(
+            str(self.folder),
+            tuple(AuditRow(f"{k}{SUFFIX}", problems[k], deviations.get(k)) for k in identities),
+            tuple(sorted(path.name for path in self.folder.glob(f"*{PART}"))),
+        )
+
+    def _problem(self, identity: str) -> str | None:
+        path = self.path(identity)
+        try:
+            reference = self.open(identity)
+            return _inconsistency(reference, read_record(path).arrays)
+        except ArchiveError as error:
+            return error.problem
+
+
+@dataclass(frozen=True, slots=True)
+class AuditRow:
+    """What the audit found out about one file.
+
+    Parameters
+    ----------
+    file : str
+        Its name.
+    problem : str, optional
+        What is wrong; None if nothing is.
+    deviation : float, optional
+        Largest deviation of the recomputed moments, in error bars; None if it was not recomputed.
+    """
+
+    file: str
+    problem: str | None
+    deviation: float | None
+
+    @property
+    def ok(self) -> bool:
+        """Whether the file can be trusted as far as it was checked."""
+        return self.problem is None
+
+
+@dataclass(frozen=True, slots=True)
+class Audit:
+    """The result of an audit: a row for each file, and the leftovers of interrupted writes."""
+
+    folder: str
+    rows: tuple[AuditRow, ...]
+    leftovers: tuple[str, ...]
+
+    @property
+    def sound(self) -> bool:
+        """Whether no file has a problem; a leftover is none, because nobody reads it."""
+        return all(row.ok for row in self.rows)
+
+    @property
+    def recomputed(self) -> int:
+        """Number of references that were solved again."""
+        return sum(row.deviation is not None for row in self.rows)
+
+    def __str__(self) -> str:
+        """Return a readable table and a summary line."""
+        rows = [("file", "checks", "recomputed")]
+        for row in self.rows:
+            again = "-" if row.deviation is None else f"within {row.deviation:.2g} error bars"
+            rows.append((row.file, row.problem or "ok", again))
+        bad = sum(not row.ok for row in self.rows)
+        lines = [_aligned(rows)] if self.rows else []
+        lines += [f"leftover of an interrupted write, may be deleted: {name}" for name in self.leftovers]
+        lines.append(
+            f"{self.folder}: {len(self.rows)} references, {self.recomputed} recomputed, "
+            + (f"{bad} with problems" if bad else "all sound")
+        )
+        return "\n".join(lines)
+
+
+def read_reference(path: str | os.PathLike[str]) -> Reference:
+    """Read a reference from a file of an archive, wherever it lies.
+
+    Raises
+    ------
+    ArchiveError
+        A missing, damaged, foreign or newer file.
+    """
+    return from_record(read_record(path), Path(path))
+
+
+def _deviation(reference: Reference, run: Run) -> float:
+    """Solve again with half the step, and return the largest deviation in units of the stored bars."""
+    state = reference.finest.finer("step").evolve(reference.anneal, run=run)
+    stored, again = reference.moments(), state.moments()
+    pairs = [(stored.z, again.z), (stored.zz, again.zz)]
+    if stored.x is not None and again.x is not None:
+        pairs.append((stored.x, again.x))
+    worst = [float((np.abs(b.value - a.value) / (a.num + reference.decay.rounding)).max()) for a, b in pairs]
+    table = reference.probabilities
+    if table is not None and hasattr(state, "probabilities"):
+        bar = reference.error + reference.decay.rounding
+        worst.append(float(np.abs(np.asarray(state.probabilities()) - table).max()) / bar)
+    return max(worst)
+
+
+def _inconsistency(reference: Reference, arrays: dict[str, NDArray[np.float64]]) -> str | None:
+    """Say where the parts of a reference contradict each other; checksums cannot see that."""
+    moments = reference.moments()
+    for name, estimate in (("z", moments.z), ("zz", moments.zz), ("x", moments.x)):
+        if estimate is not None and not np.allclose(arrays[f"{name}_num"], estimate.num, rtol=1e-6, atol=1e-15):
+            return f"the stored error bars of {name} are not those that its runs give"
+    table = reference.probabilities
+    if table is not None:
+        n = reference.n_sites
+        spins = (1 - 2 * ((np.arange(1 << n)[:, None] >> np.arange(n)) & 1)).astype(np.float64)
+        off = _largest_difference(moments, spins.T @ table, spins.T @ (table[:, None] * spins))
+        if not off <= 10 * reference.decay.rounding + 1e-12:
+            return f"its probabilities give moments that differ by {off:.2g} from the stored ones"
+    samples = reference.stored_samples
+    spins = samples.spins.astype(np.float64)
+    for estimate, mean in ((moments.z, spins.mean(axis=0)), (moments.zz, spins.T @ spins / len(spins))):
+        scatter = np.sqrt(np.maximum(1 - estimate.value**2, 0) / len(spins)) + 1 / len(spins)
+        off = float(((np.abs(mean - estimate.value) - estimate.num) / scatter).max())
+        if not off <= _STANDARD_ERRORS:
+            return f"its samples are {off:.2g} standard errors away from the moments"
+    return None
+
+
+def _largest_difference(moments: Moments, z: NDArray[np.float64], zz: NDArray[np.float64]) -> float:
+    return float(max(np.abs(moments.z.value - z).max(), np.abs(moments.zz.value - zz).max()))
+
+
+def _aligned(rows: list[tuple[str, ...]]) -> str:
+    widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
+    return "\n".join("  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows)
+
+
+def _unusable(path: Path, problem: str, advice: str) -> ArchiveError:
+    return ArchiveError(f"cannot use {path}: {problem}; {advice}", path=str(path), problem=problem)
