@@ -84,7 +84,7 @@ def relax(problem: Problem, cuts: list[Cut], low: NDArray[np.float64], high: NDA
 
 
 def separate(problem: Problem, x: NDArray[np.float64]) -> list[Cut]:
-    """Find violated cycle inequalities, of cycles of any length: at most one for each site, the most violated first.
+    """Find violated cycle inequalities, of cycles of any length: the worst through each edge, without repetition.
 
     References
     ----------
@@ -101,15 +101,23 @@ def separate(problem: Problem, x: NDArray[np.float64]) -> list[Cut]:
     distances, previous = dijkstra(
         doubled, directed=False, indices=np.arange(n_sites), return_predecessors=True, limit=1.0
     )
-    reach = distances[np.arange(n_sites), np.arange(n_sites) + n_sites]
-    edge_of = {frozenset(pair): place for place, pair in enumerate(problem.edges.tolist())}
-    found: dict[tuple[tuple[int, ...], tuple[int, ...]], tuple[float, Cut]] = {}
-    for source in np.flatnonzero(reach < 1 - LEAST_VIOLATION).tolist():
-        cut = _cut(_simple_cycle(previous[source], source, n_sites), n_sites, edge_of)
-        violation = float(x[list(cut.odd)].sum() - x[list(cut.even)].sum()) - (len(cut.odd) - 1)
-        if violation > LEAST_VIOLATION:
-            found.setdefault((cut.odd, cut.even), (-violation, cut))
-    return [cut for _, cut in sorted(found.values(), key=lambda item: (item[0], item[1].odd, item[1].even))]
+    # a path to either copy of the other end is closed by the edge itself, so that it ends in the second copy of the first
+    by_stay = distances[first, second + n_sites] + stay
+    by_cross = distances[first, second] + cross
+    last = np.where(by_stay <= by_cross, second + n_sites, second)
+    edge_of = {pair: place for place, pair in enumerate(map(tuple, np.sort(problem.edges, axis=1).tolist()))}
+    cuts: dict[Cut, float] = {}
+    for edge in np.flatnonzero(np.minimum(by_stay, by_cross) < 1 - LEAST_VIOLATION).tolist():
+        source = int(first[edge])
+        cycle = _simple_cycle(previous[source], source + n_sites, int(last[edge]), n_sites)
+        if (cycle[0] < n_sites) == (cycle[-1] < n_sites):
+            # the path ran through the edge itself, so a worse cycle is found at another edge; this one is even
+            continue
+        cut = _cut(cycle, n_sites, edge_of)
+        excess = float(x[list(cut.odd)].sum() - x[list(cut.even)].sum()) - (len(cut.odd) - 1)
+        if excess > LEAST_VIOLATION:
+            cuts[cut] = excess
+    return sorted(cuts, key=lambda cut: (-cuts[cut], cut.odd, cut.even))
 
 
 def violated(cuts: list[Cut], x: NDArray[np.float64]) -> list[Cut]:
@@ -127,14 +135,14 @@ def _rows(cuts: list[Cut], n_edges: int) -> tuple[csr_array, NDArray[np.float64]
     return csr_array((signs, columns, ends), shape=(len(cuts), n_edges)), limits
 
 
-def _simple_cycle(previous: NDArray[np.int32], source: int, n_sites: int) -> list[int]:
-    """Walk back from the second copy of the source; where a site comes again first, the walk between is a cycle.
+def _simple_cycle(previous: NDArray[np.int32], end: int, last: int, n_sites: int) -> list[int]:
+    """Walk back from the end; where a site comes again first, the walk between is a cycle.
 
-    A site comes again in its other copy only (the path is shortest), so that part is odd, and it is not longer.
+    It is odd if the site comes again in its other copy, and then no longer than the whole walk.
     """
-    path: list[int] = []
-    seen: dict[int, int] = {}
-    node = source + n_sites
+    path = [end]
+    seen = {end % n_sites: 0}
+    node = last
     while node % n_sites not in seen:
         seen[node % n_sites] = len(path)
         path.append(node)
@@ -142,10 +150,10 @@ def _simple_cycle(previous: NDArray[np.int32], source: int, n_sites: int) -> lis
     return [*path[seen[node % n_sites] :], node]
 
 
-def _cut(cycle: list[int], n_sites: int, edge_of: dict[frozenset[int], int]) -> Cut:
+def _cut(cycle: list[int], n_sites: int, edge_of: dict[tuple[int, ...], int]) -> Cut:
     odd: list[int] = []
     even: list[int] = []
     for one, other in zip(cycle[:-1], cycle[1:], strict=True):
-        edge = edge_of[frozenset((one % n_sites, other % n_sites))]
+        edge = edge_of[tuple(sorted((one % n_sites, other % n_sites)))]
         (even if (one < n_sites) == (other < n_sites) else odd).append(edge)
     return Cut(tuple(sorted(odd)), tuple(sorted(even)))
