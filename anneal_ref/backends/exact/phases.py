@@ -11,7 +11,7 @@ from __future__ import annotations
 
 from numba import njit
 
-from anneal_ref.backends.exact.simd import lanes_of, vadd, vfloor, vfma, vload, vmul, vneg, vset, vstore, vsub
+from anneal_ref.backends.exact.simd import lanes_of, vadd, vfloor, vfma, vload, vmul, vneg, vplace, vset, vstore, vsub
 
 # pi/2 in three parts for the reduction of an angle, and Taylor-like minimax coefficients on |r| <= pi/4
 # (W. J. Cody and W. Waite, Software Manual for the Elementary Functions, 1980; coefficients as in common practice).
@@ -61,21 +61,28 @@ def place(c, s, n, w, o, sign):  # type: ignore[no-untyped-def]
     """w[o:] = blocks of c + i sign s."""
     lanes = lanes_of(w)
     for z in range(0, n, lanes):
-        for k in range(lanes):
-            w[o + 2 * z + k] = c[z + k]
-            w[o + 2 * z + lanes + k] = sign * s[z + k]
+        vplace(c, z, w, o + 2 * z, 1.0)
+        vplace(s, z, w, o + 2 * z + lanes, sign)
 
 
 @njit(cache=True)
 def add_fields(f, i, n, e, o):  # type: ignore[no-untyped-def]
     """e[o:][z] = e[o] + sum_k f[i + k] s_k(z) for all 2^n settings z of n spins."""
+    lanes = lanes_of(e)
     size = 1
     for k in range(n):
         g = f[i + k]
-        for z in range(size):
-            v = e[o + z]
-            e[o + size + z] = v - g
-            e[o + z] = v + g
+        if size < lanes:
+            for z in range(o, o + size):
+                v = e[z]
+                e[z + size] = v - g
+                e[z] = v + g
+        else:
+            h = vset(g)
+            for z in range(o, o + size, lanes):
+                u = vload(e, z)
+                vstore(e, z + size, vsub(u, h))
+                vstore(e, z, vadd(u, h))
         size *= 2
 
 

@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from anneal_ref.backends.exact import measure
-from anneal_ref.backends.exact.layout import ITEM_BYTES, Layout, aligned, layout, smallest, tilings
+from anneal_ref.backends.exact.layout import ITEM_BYTES, aligned, layout, smallest, tilings
 from anneal_ref.backends.exact.sweeps import run
 from anneal_ref.base.checks import choice, finite, integer, signs
 from anneal_ref.base.errors import AnnealRefError, InputError
@@ -23,6 +23,8 @@ SHARED_BITS = 17
 """Threads share a state of at least so many stored bits; below, handing out work costs more than it brings."""
 CALL_AMPLITUDES = 1 << 26
 """Amplitudes treated in one compiled call, so that Ctrl-C is heard within a fraction of a second."""
+RIGHT_ANGLE = (1.5707963267341256, 6.077100506506192e-11)
+"""pi/2 in two parts, the first of 33 bits, so that its multiples are exact."""
 CHUNK_BITS = 9
 """Pieces of a chunk of a read-out (a power of two); fixed, so that sums do not depend on threads."""
 
@@ -95,7 +97,7 @@ class Register:
             (
                 aligned(space.work, dtype),
                 aligned(2 * space.energies, np.float64).reshape(2, -1),
-                np.empty(TANGENT_SCRATCH),
+                np.empty(2 * bits + 16),
                 *(aligned(space.tables, np.float64) for _ in range(3)),
                 self._coupling.copy(),
                 self._field.copy(),
@@ -205,27 +207,29 @@ class Register:
         """Cosine products, frames and tangents of layers; right angles join the frame."""
         n, bits = self.n_sites, self._layout.bits
         behind = np.where(_bits(self._signs, n), -1.0, 1.0)
-        angle = theta[:, None] * (self.weights * behind)
-        turns = np.rint(angle / (math.pi / 2))
-        # fmod is exact where the quotient is large
-        rest = angle - turns * (math.pi / 2)
-        turns = turns.astype(np.int64)
-        before = np.zeros_like(turns)
-        np.cumsum(turns[:-1], axis=0, out=before[1:])
-        frame = np.where((before + _bits(self._flips, n)) & 1, -1.0, 1.0)
-        total = turns.sum(axis=0)
-        self._flips ^= int(((total & 1) << np.arange(n)).sum())
-        self._turns += int(total.sum())
+        weights, which, times = np.unique(self.weights * behind, return_inverse=True, return_counts=True)
+        angle = theta[:, None] * weights
+        turns = np.rint(angle * (2 / math.pi))
+        rest = (angle - turns * RIGHT_ANGLE[0]) - turns * RIGHT_ANGLE[1]
+        tangent, scale = np.tan(rest), (np.cos(rest) ** times).prod(axis=1)
         frames, tangents = np.ones((len(theta), bits + 1)), np.zeros((len(theta) + 1, bits + 1))
-        kept = min(n, bits)
-        frames[:, :kept], tangents[1:, :kept] = frame[:, :kept], np.tan(rest[:, :kept])
+        columns = np.arange(min(n, bits))
         if self._half:
-            frames[:, bits] = frame[:, -1]
-            tangents[1:, bits] = np.tan(rest[:, -1]) * self._parity * (1 - 2 * (n // 2 % 2))
+            columns = np.append(columns, bits)
+        tangents[1:, columns] = tangent[:, which[: len(columns)]]
+        if self._half:
+            tangents[1:, bits] *= self._parity * (1 - 2 * (n // 2 % 2))
+        if self._flips or turns.any():
+            made = turns.astype(np.int64)[:, which]
+            before = np.cumsum(made, axis=0) - made + _bits(self._flips, n)
+            frames[:, columns] = np.where(before[:, : len(columns)] & 1, -1.0, 1.0)
+            total = made.sum(axis=0)
+            self._flips ^= sum(1 << i for i in range(n) if total[i] & 1)
+            self._turns += int(total.sum())
         if self._owed is not None:
             tangents[0] = self._owed
         self._owed = tangents[-1].copy() if self._groups == 2 else None
-        return np.cos(rest).prod(axis=1), frames, tangents
+        return scale, frames, tangents
 
     def _advance(self, phi: Floats, scales: Floats, frames: Floats, tangents: Floats) -> None:
         """Sweep; with two groups the rotations of the group not swept last stay owed."""
@@ -465,7 +469,6 @@ class Register:
         return x
 
 
-TANGENT_SCRATCH = 80
 
 
 def _stored_bits(n: int, symmetric: bool, precision: str) -> int:

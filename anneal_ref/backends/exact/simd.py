@@ -408,6 +408,23 @@ def squares(typingctx: Any, x: Any, i: Any, p: Any, j: Any) -> Any:
 
 
 @intrinsic
+def vplace(typingctx: Any, c: Any, z: Any, x: Any, i: Any, sign: Any) -> Any:
+    """vplace(c, z, x, i, sign): a vector of x at i = sign * c[z:], rounded from double precision."""
+
+    def codegen(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        vector = VECTORS[sig.args[2].dtype].ir
+        wide = ir.VectorType(ir.DoubleType(), vector.count)
+        pointer = builder.bitcast(_pointer(context, builder, sig.args[0], args[0], args[1]), wide.as_pointer())
+        value = builder.fmul(builder.load(pointer, align=8), _splat(builder, args[4], wide))
+        if vector != wide:
+            value = builder.fptrunc(value, vector)
+        _store(context, builder, sig.args[2], args[2], args[3], value)
+        return context.get_dummy_value()
+
+    return types.void(c, types.intp, x, types.intp, types.float64), codegen
+
+
+@intrinsic
 def fold(typingctx: Any, bundle: Any) -> Any:
     """fold(bundle): the sum of the vectors, then for every index bit the sum with its sign (bit 0 counts +)."""
     bits = bundle.count.bit_length() - 1

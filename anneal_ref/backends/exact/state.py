@@ -58,9 +58,7 @@ class ExactState:
     def moments(self) -> Moments:
         """Return <Z_i>, <Z_i Z_j> and <X_i>, divided by the norm; `stat` is 0 and `num` is not measured."""
         if self._moments is None:
-            register = self._amplitudes()
-            norm = register.norm()
-            z, zz, x = (values / norm for values in register.moments())
+            z, zz, x = (values / self._norm for values in self._amplitudes().moments())
             np.fill_diagonal(zz, 1.0)
             self._moments = Moments.of(z, zz, x, how="state vector")
         return self._moments
@@ -95,7 +93,7 @@ class ExactState:
         """Return the natural logarithm of the probability of each row of `spins` (shots, N); -inf where it is zero."""
         register = self._amplitudes()
         rows = signs("spins", spins, (None, self.anneal.n_sites))
-        return register.log_probability(rows) - np.log(register.norm())
+        return register.log_probability(rows) - np.log(self._norm)
 
     def ground_probability(self, ground: ArrayLike | None = None) -> float:
         """Return the probability of the classical ground states, all of them together.
@@ -145,6 +143,10 @@ class ExactState:
         weights = np.linalg.eigvalsh(matrix @ matrix.conj().T)
         weights = weights[weights > 0] / weights[weights > 0].sum()
         return float(max(0.0, -np.sum(weights * np.log(weights))))
+
+    @property
+    def _norm(self) -> float:
+        return 1.0 + float(self.ledger["norm_drift"])
 
     def release(self) -> None:
         """Give up the amplitudes; moments that have been asked for stay."""

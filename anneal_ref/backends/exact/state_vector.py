@@ -110,20 +110,16 @@ class StateVector:
             More memory than there is.
         """
         check_anneal(anneal)
-        n, symmetric = anneal.n_sites, not anneal.instance.has_fields
-        splitting, grid = self._grid(anneal, ())
-        steps = len(grid) - 1
-        layers = steps * splitting.stages + 1
-        needed = Register.bytes_needed(n, symmetric, self.precision) + 64 * layers
-        if anneal.start == "ground":
-            needed += ground_start_bytes(n, symmetric)
-        require_memory(needed, f"the state vector of {n} spins", self._alternatives())
-        stored = 1 << (n - symmetric)
+        splitting, grid = self._steps(anneal, ())
+        needed = self._require_memory(anneal, splitting, grid)
+        layers = (len(grid) - 1) * splitting.stages + 1
+        symmetric = not anneal.instance.has_fields
+        stored = 1 << (anneal.n_sites - symmetric)
         return Plan(
             backend=type(self).__name__,
             bytes=needed + _OVERHEAD,
             seconds=layers * (_TABLE_SECONDS + stored * _LAYER_SECONDS[self.precision]),
-            steps=steps,
+            steps=len(grid) - 1,
             layers=layers,
             details={"scheme": splitting.name, "symmetric half": symmetric, "precision": self.precision},
         )
@@ -160,11 +156,11 @@ class StateVector:
         return self._march(anneal, check_times(at), (), run)
 
     def _march(self, anneal: Anneal, stops: tuple[float, ...], kicks: tuple[Kick, ...], run: Run) -> Iterator[ExactState]:
-        self.plan(anneal)
         began = perf_counter()
         duration = anneal.duration
         times = sorted({u * duration for u in stops} | {u * duration for u, _ in kicks})
-        splitting, grid = self._grid(anneal, times)
+        splitting, grid = self._steps(anneal, times)
+        self._require_memory(anneal, splitting, grid)
         grid = grid[: int(np.searchsorted(grid, stops[-1] * duration)) + 1]
         problem, transverse = step_angles(anneal, grid, splitting)
         register, ledger = self._start(anneal, run)
@@ -211,11 +207,23 @@ class StateVector:
             register.load_plus()
         return register, ledger
 
-    def _grid(self, anneal: Anneal, marks: Sequence[float]) -> tuple[Splitting, Floats]:
-        phase = float(phase_mesh(anneal)[1][-1])
-        splitting = choose_splitting(self.tolerance, phase) if self.scheme is None else SPLITTINGS[self.scheme]
-        density = step_density(splitting, self.tolerance, phase) if self.steps is None else self.steps / max(phase, 1e-300)
-        return splitting, halved(time_grid(anneal, density, marks), self.halvings)
+    def _steps(self, anneal: Anneal, marks: Sequence[float]) -> tuple[Splitting, Floats]:
+        mesh = phase_mesh(anneal)
+        splitting = SPLITTINGS[self.scheme] if self.scheme else choose_splitting(self.tolerance, mesh.total)
+        density = step_density(splitting, self.tolerance, mesh.total)
+        if self.steps is not None:
+            density = self.steps / max(mesh.total, 1e-12)
+        return splitting, halved(time_grid(anneal, mesh, density, marks), self.halvings)
+
+    def _require_memory(self, anneal: Anneal, splitting: Splitting, grid: Floats) -> int:
+        """Return the bytes of a run, or raise `TooLarge`."""
+        n, symmetric = anneal.n_sites, not anneal.instance.has_fields
+        # clocks, angles and merged angles of every step
+        needed = Register.bytes_needed(n, symmetric, self.precision) + 64 * len(grid) * splitting.stages
+        if anneal.start == "ground":
+            needed += ground_start_bytes(n, symmetric)
+        require_memory(needed, f"the state vector of {n} spins", self._alternatives())
+        return needed
 
     def _alternatives(self) -> tuple[str, ...]:
         single = ("StateVector(precision='single', tolerance=1e-4)",) if self.precision == "double" else ()

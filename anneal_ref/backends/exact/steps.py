@@ -24,7 +24,7 @@ from anneal_ref.backends.exact.splitting import BLANES_MOAN_4, BLANES_MOAN_6, ST
 if TYPE_CHECKING:
     from anneal_ref.model.anneal import Anneal
 
-_MESH = 512
+_MESH = 256
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,15 +68,28 @@ def step_rate(anneal: Anneal, times: Floats) -> Floats:
     return np.asarray((a * b * both**5) ** (1 / 7) + 0.05 * both)
 
 
-def phase_mesh(anneal: Anneal) -> tuple[Floats, Floats]:
-    """Return times over the duration and the phase accumulated up to each of them."""
+@dataclass(frozen=True, slots=True, eq=False)
+class Mesh:
+    """Times over the duration, and the phase accumulated up to each of them."""
+
+    times: Floats
+    phase: Floats
+
+    @property
+    def total(self) -> float:
+        """Phase over the whole duration."""
+        return float(self.phase[-1])
+
+
+def phase_mesh(anneal: Anneal) -> Mesh:
+    """Return a mesh that is fine between all knots of the schedule."""
     knots = np.asarray(anneal.knots)
     count = max(2, -(-_MESH // (len(knots) - 1)))
     fractions = np.arange(count) / count
     times = np.append((knots[:-1, None] + np.diff(knots)[:, None] * fractions).ravel(), knots[-1])
     rate = step_rate(anneal, times)
     phase = np.concatenate([[0.0], np.cumsum((rate[1:] + rate[:-1]) / 2 * np.diff(times))])
-    return times, phase
+    return Mesh(times, phase)
 
 
 def step_density(splitting: Splitting, tolerance: float, phase: float) -> float:
@@ -90,7 +103,7 @@ def choose_splitting(tolerance: float, phase: float) -> Splitting:
     return min((BLANES_MOAN_6, BLANES_MOAN_4), key=lambda s: s.stages * step_density(s, tolerance, phase))
 
 
-def time_grid(anneal: Anneal, density: float, marks: Sequence[float] = ()) -> Floats:
+def time_grid(anneal: Anneal, mesh: Mesh, density: float, marks: Sequence[float] = ()) -> Floats:
     """Return step ends from 0 to the duration, equally long in phase between the times that must be met.
 
     Met are the marks, the corners of the waveform, and those knots of the schedule that lie next to an interval of at least a
@@ -99,6 +112,8 @@ def time_grid(anneal: Anneal, density: float, marks: Sequence[float] = ()) -> Fl
     Parameters
     ----------
     anneal : Anneal
+    mesh : Mesh
+        Of this anneal.
     density : float
         Steps per unit of phase.
     marks : sequence of float
@@ -108,8 +123,7 @@ def time_grid(anneal: Anneal, density: float, marks: Sequence[float] = ()) -> Fl
     -------
     ndarray, shape (steps + 1,)
     """
-    times, phase = phase_mesh(anneal)
-    knots = np.asarray(anneal.knots)
+    times, phase, knots = mesh.times, mesh.phase, np.asarray(anneal.knots)
     long = np.diff(np.interp(knots, times, phase)) * density >= 1
     kept = knots[np.append(long, True) | np.append(True, long)]
     corners = () if anneal.waveform is None else np.asarray(anneal.waveform.u) * anneal.duration
