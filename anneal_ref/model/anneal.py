@@ -14,7 +14,7 @@ from anneal_ref.base.checks import choice, finite, positive
 from anneal_ref.base.errors import AnnealRefWarning, InputError
 from anneal_ref.base.identity import digest
 from anneal_ref.model.instances import Instance
-from anneal_ref.model.piecewise import Piecewise
+from anneal_ref.model.piecewise import CLOSEST, Piecewise, inside
 from anneal_ref.model.schedules import Schedule
 
 SMALL_START = 0.05
@@ -54,10 +54,12 @@ class Waveform:
         if len(u) != len(s) or len(u) < 2:
             raise InputError(f"u and s must have the same length of at least 2; got {len(u)} and {len(s)}")
         steps = np.diff(u)
-        if (steps <= 0).any():
-            k = int(np.flatnonzero(steps <= 0)[0])
-            hint = "; a jump needs a short ramp instead" if steps[k] == 0 else ""
-            raise InputError(f"u must ascend strictly; got u[{k}] = {u[k]}, u[{k + 1}] = {u[k + 1]}{hint}")
+        if steps.min() < CLOSEST:
+            k = int(np.flatnonzero(steps < CLOSEST)[0])
+            hint = "; a jump needs a short ramp instead" if steps[k] >= 0 else ""
+            raise InputError(
+                f"u must ascend in steps of at least {CLOSEST:g}; got u[{k}] = {u[k]}, u[{k + 1}] = {u[k + 1]}{hint}"
+            )
         for name, ends in (("u", u), ("s", s)):
             if ends[0] != 0 or ends[-1] != 1:
                 raise InputError(f"{name} must start at 0 and end at 1; got {ends[0]} and {ends[-1]}")
@@ -78,7 +80,7 @@ class Waveform:
 
     def at(self, u: ArrayLike) -> NDArray[np.float64]:
         """Return s at the fractions u of the duration, any shape."""
-        return np.interp(np.asarray(u, dtype=float), self.u, self.s)
+        return np.asarray(np.interp(inside(u), self.u, self.s))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -108,10 +110,8 @@ class Anneal:
     >>> instance = ar.draw_instance(ar.lattices.chain(4), ar.disorder.plus_minus(), seed=11)
     >>> schedule = ar.Schedule.linear(transverse=(20.0, 0.0), problem=(0.0, 10.0))
     >>> anneal = ar.Anneal(instance, schedule, duration=7.0)
-    >>> anneal.problem(3.5)
-    array(5.)
-    >>> anneal.transverse_integral(0.0, 7.0)
-    array(70.)
+    >>> float(anneal.problem(3.5)), float(anneal.transverse_integral(0.0, 7.0))
+    (5.0, 70.0)
     """
 
     instance: Instance
@@ -231,7 +231,9 @@ class Anneal:
         return np.asarray(t, dtype=float) / self.duration
 
     def _warn_if_not_ground(self) -> None:
-        local = np.abs(self.instance.coupling_matrix()).sum(axis=1) + np.abs(self.instance.fields)
+        instance = self.instance
+        local = np.bincount(instance.lattice.edges.ravel(), np.abs(instance.couplings).repeat(2), instance.n_sites)
+        local += np.abs(instance.fields)
         problem = abs(float(self.schedule.problem(0.0))) * local
         transverse = float(self.schedule.transverse(0.0)) * self.instance.transverse
         with np.errstate(divide="ignore", invalid="ignore"):

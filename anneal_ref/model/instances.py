@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -17,7 +17,7 @@ from anneal_ref.model.disorder import Law
 from anneal_ref.model.instance_files import read_instance, write_instance
 from anneal_ref.model.lattice import Lattice, whole
 
-NORMALISATIONS = {
+NORMALISATIONS: dict[str, Callable[[Lattice], float]] = {
     "sqrt_n": lambda lattice: lattice.n_sites**0.5,
     "sqrt_degree": lambda lattice: (2 * lattice.n_edges / lattice.n_sites) ** 0.5 or 1.0,
     "n": lambda lattice: float(lattice.n_sites),

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sized
 from dataclasses import dataclass
 from typing import Any
 
@@ -218,8 +218,8 @@ def whole(name: str, value: ArrayLike, shape: tuple[int | None, ...]) -> NDArray
 
 
 def _edges(given: ArrayLike, n: int) -> NDArray[np.intp]:
-    pairs = np.asarray(given) if not isinstance(given, np.ndarray) and np.size(given) else given
-    edges = whole("edges", np.reshape(pairs, (0, 2)) if np.size(pairs) == 0 else pairs, (None, 2))
+    empty = isinstance(given, Sized) and len(given) == 0
+    edges = whole("edges", np.empty((0, 2)) if empty else given, (None, 2))
     outside = np.flatnonzero(((edges < 0) | (edges >= n)).any(axis=1))
     if outside.size:
         raise InputError(f"edges must join sites 0 ... {n - 1}; edge {outside[0]} is {_pair(edges[outside[0]])}")

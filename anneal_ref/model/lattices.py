@@ -154,6 +154,7 @@ def random_regular(n: int, degree: int, seed: int) -> Lattice:
     degree = integer("degree", degree, low=0, high=n - 1)
     if n * degree % 2:
         raise InputError(f"n times degree must be even, each edge has two ends; got {n} times {degree}")
+    seed = integer("seed", seed, low=0)
     recipe = {"kind": "random_regular", "n": n, "degree": degree, "seed": seed}
     return Lattice(
         n, regular_edges(n, degree, seed), _circle(n), f"random {degree}-regular {n} seed {seed}", None, recipe
@@ -249,7 +250,8 @@ _FAMILIES: dict[str, Callable[..., Lattice]] = {
 def _axes(sizes: Mapping[str, Any], periodic: Any) -> tuple[tuple[int, ...], tuple[bool, ...]]:
     """Check the number of cells and the periodic flag of every axis."""
     shape = tuple(integer(name, size, low=1) for name, size in sizes.items())
-    seams = (periodic,) * len(shape) if isinstance(periodic, bool | np.bool_) else tuple(np.ravel(periodic).tolist())
+    flags = np.ravel(periodic).tolist()
+    seams = tuple(flags * len(shape) if len(flags) == 1 else flags)
     if len(seams) != len(shape) or not all(isinstance(seam, bool) for seam in seams):
         raise InputError(
             f"periodic must be True or False, or one of them for each of {len(shape)} axes; got {periodic!r}"

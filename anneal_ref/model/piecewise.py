@@ -7,20 +7,24 @@ last bit, and its ends are exact.
 from __future__ import annotations
 
 from collections.abc import Iterable
+from dataclasses import dataclass, field
 from math import comb
 from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.interpolate import BPoly, PchipInterpolator
+from scipy.interpolate import BPoly, PchipInterpolator, PPoly
 
 from anneal_ref.base.checks import frozen
 from anneal_ref.base.errors import InputError
 
 Floats = NDArray[np.float64]
 _ROUNDING = 1e-12
+CLOSEST = 1e-9
+"""Breaks given by a user are at least this far apart."""
 
 
+@dataclass(frozen=True, slots=True, eq=False)
 class Piecewise:
     """A continuous function on [0, 1] that is a polynomial between its breaks.
 
@@ -32,13 +36,18 @@ class Piecewise:
         Bernstein coefficients of each piece over its own interval.
     """
 
-    __slots__ = ("_function", "_primitive", "breaks", "controls")
+    breaks: Floats
+    controls: Floats
+    _function: BPoly = field(init=False, repr=False)
+    _primitive: PPoly = field(init=False, repr=False)
 
-    def __init__(self, breaks: Floats, controls: Floats) -> None:
-        self.breaks = frozen(np.array(breaks, dtype=float))
-        self.controls = frozen(np.array(controls, dtype=float))
-        self._function = BPoly(self.controls, self.breaks, extrapolate=False)
-        self._primitive = self._function.antiderivative()
+    def __post_init__(self) -> None:
+        """Take copies and integrate."""
+        object.__setattr__(self, "breaks", frozen(np.array(self.breaks, dtype=float)))
+        object.__setattr__(self, "controls", frozen(np.array(self.controls, dtype=float)))
+        object.__setattr__(self, "_function", BPoly(self.controls, self.breaks))
+        # powers are twice as quick as the Bernstein basis, and an integral has no sign to keep
+        object.__setattr__(self, "_primitive", PPoly.from_bernstein_basis(self._function.antiderivative()))
 
     def __reduce__(self) -> tuple[Any, ...]:
         """Pickle the numbers alone."""
@@ -126,7 +135,8 @@ def inside(x: ArrayLike) -> Floats:
     if points.size and not (points.min() >= -_ROUNDING and points.max() <= 1 + _ROUNDING):
         wrong = points[~((points >= -_ROUNDING) & (points <= 1 + _ROUNDING))].flat[0]
         raise InputError(f"a schedule is defined from its start (0) to its end (1); got {wrong} of the way")
-    return np.clip(points, 0.0, 1.0)
+    clipped: Floats = np.clip(points, 0.0, 1.0)
+    return clipped
 
 
 def _restricted(controls: Floats, x0: float, x1: float) -> Floats:
@@ -149,4 +159,5 @@ def _extrema(controls: Floats) -> Floats:
     centred = np.polynomial.Chebyshev.interpolate(function.derivative(), len(controls) - 2, domain=[0.0, 1.0])
     roots = centred.trim(0.0).roots()
     real = roots.real[np.abs(roots.imag) < 1e-6]
-    return np.clip(real[(real > 0) & (real < 1)], 0.0, 1.0)
+    between: Floats = real[(real > 0) & (real < 1)]
+    return between

@@ -46,10 +46,11 @@ def _pair_up(joined: NDArray[np.bool_], degree: int, picks: Iterator[np.uint64])
     free = np.repeat(np.arange(len(joined)), degree).tolist()
     while free:
         sites = np.unique(free)
-        if joined[np.ix_(sites, sites)].sum() == len(sites) * (len(sites) - 1):
+        # sites that are all joined to each other and have ends to spare are no more than their degree
+        if len(sites) <= degree and joined[np.ix_(sites, sites)].sum() == len(sites) * (len(sites) - 1):
             return False
         while True:
-            a, b = (int(below(len(free), word)) for word in (next(picks), next(picks)))
+            a, b = below(len(free), np.array([next(picks), next(picks)])).tolist()
             i, j = free[a], free[b]
             if i != j and not joined[i, j]:
                 break

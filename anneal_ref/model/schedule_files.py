@@ -53,9 +53,10 @@ def read_table(path: str | os.PathLike[str], unit: str | None, prefactor: float 
                 header = _header(cells, where)
             else:
                 rows.append(_row(cells, header, where))
+                _check_row(rows, header, where)
     if header is None or not rows:
         raise InputError(
-            f"{name}: the file holds no table; it needs a line with the names s,transverse,problem, then rows of numbers"
+            f"{name}: the file holds no table; it needs a line with the names s,transverse,problem and rows of numbers"
         )
     s, transverse, problem = ([row[header.index(column)] for row in rows] for column in COLUMNS)
     return ScheduleTable((s, transverse, problem), *_units(said, unit, prefactor, name))
@@ -86,6 +87,15 @@ def _row(cells: list[str], header: list[str], where: str) -> list[float]:
         except ValueError as error:
             raise InputError(f"{where}: {column} must be a finite number; got {cell!r}") from error
     return values
+
+
+def _check_row(rows: list[list[float]], header: list[str], where: str) -> None:
+    """Say here, where the line is known, what `Schedule.from_table` would refuse."""
+    s, transverse = header.index("s"), header.index("transverse")
+    if len(rows) > 1 and rows[-1][s] <= rows[-2][s]:
+        raise InputError(f"{where}: s must ascend strictly; got {rows[-1][s]} after {rows[-2][s]}")
+    if rows[-1][transverse] < 0:
+        raise InputError(f"{where}: transverse must not be negative; got {rows[-1][transverse]}")
 
 
 def _units(said: dict[str, str], unit: str | None, prefactor: float | None, name: str) -> tuple[str, float]:

@@ -1,4 +1,4 @@
-"""`Schedule`: the transverse strength G(s) and the problem strength P(s), piecewise polynomials with exact integrals."""
+"""`Schedule`: the strengths G(s) and P(s) of the Hamiltonian, piecewise polynomials with exact integrals."""
 
 from __future__ import annotations
 
@@ -10,10 +10,10 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from anneal_ref.base.checks import choice, finite, frozen, positive
+from anneal_ref.base.checks import choice, finite, positive
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.identity import digest
-from anneal_ref.model.piecewise import Piecewise, broken_line, monotone_cubic, power
+from anneal_ref.model.piecewise import CLOSEST, Piecewise, broken_line, monotone_cubic, power
 from anneal_ref.model.schedule_files import read_table
 
 UNITS = {"rad/ns": 1.0, "GHz": 2 * np.pi, "1": 1.0}
@@ -194,8 +194,8 @@ class Schedule:
         unit, prefactor
             As in `from_table`.
         """
-        ends = {"transverse": finite("transverse", transverse, (2,)), "problem": finite("problem", problem, (2,))}
-        return cls.from_table([0.0, 1.0], *ends.values(), unit=unit, prefactor=prefactor, interpolation="linear")
+        ends = finite("transverse", transverse, (2,)), finite("problem", problem, (2,))
+        return cls.from_table([0.0, 1.0], *ends, unit=unit, prefactor=prefactor, interpolation="linear")
 
     @classmethod
     def from_dict(cls, content: Mapping[str, Any]) -> Schedule:
@@ -212,7 +212,8 @@ class Schedule:
         """Bring the strengths to their unit and build the pieces."""
         unit = choice("unit", unit, UNITS)
         factor = UNITS[unit] * positive("prefactor", prefactor)
-        strengths = {name: frozen(content[name] * factor + 0.0) for name in ("transverse", "problem")}
+        with np.errstate(over="ignore"):
+            strengths = {name: finite(name, content[name] * factor + 0.0) for name in ("transverse", "problem")}
         source = {**content, **strengths, "unit": "1" if unit == "1" else "rad/ns"}
         if content["kind"] == "table":
             interpolate = INTERPOLATIONS[content["interpolation"]]
@@ -286,5 +287,11 @@ def _check_grid(s: NDArray[np.float64]) -> None:
         k = int(np.flatnonzero(steps <= 0)[0])
         what = "a repeated" if steps[k] == 0 else "an unsorted"
         raise InputError(f"s must ascend strictly; got {what} value: s[{k}] = {s[k]}, s[{k + 1}] = {s[k + 1]}")
+    if steps.min() < CLOSEST:
+        k = int(np.argmin(steps))
+        raise InputError(
+            f"points of s must be at least {CLOSEST:g} apart; got s[{k}] = {s[k]}, s[{k + 1}] = {s[k + 1]}; "
+            "a jump needs a short ramp instead"
+        )
     if s[0] != 0 or s[-1] != 1:
         raise InputError(f"s must run from exactly 0 to exactly 1; got {s[0]} to {s[-1]}; extend or rescale the table")

@@ -39,7 +39,7 @@ def raw_words(n: int, seed: int, index: int, stream: str) -> NDArray[np.uint64]:
     Examples
     --------
     >>> raw_words(2, seed=0, index=0, stream="couplings").tolist()
-    [14061337545182303954, 3441192783886646561]
+    [213000021201967259, 4455796210202625458]
     """
     key = [integer("seed", seed, low=0, high=_LARGEST), 0]
     counter = [0, 0, integer("index", index, low=0, high=_LARGEST), STREAMS[choice("stream", stream, STREAMS)]]
