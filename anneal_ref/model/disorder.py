@@ -44,8 +44,8 @@ class PlusMinus:
     """+1 or -1 with equal probability."""
 
     def draw(self, n: int, seed: int, index: int, stream: str) -> NDArray[np.float64]:
-        """Return n signs; the top bit of a word is 1 for -1."""
-        return 1.0 - 2.0 * (raw_words(n, seed, index, stream) >> np.uint64(63)).astype(np.float64)
+        """Return n signs: +1 where the top bit of the word is 1."""
+        return 2.0 * (raw_words(n, seed, index, stream) >> np.uint64(63)).astype(np.float64) - 1.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -139,7 +139,7 @@ def plus_minus() -> PlusMinus:
     Examples
     --------
     >>> plus_minus().draw(6, seed=11, index=0, stream="couplings").tolist()
-    [-1.0, -1.0, 1.0, 1.0, -1.0, 1.0]
+    [-1.0, 1.0, 1.0, 1.0, 1.0, -1.0]
     """
     return PlusMinus()
 
