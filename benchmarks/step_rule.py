@@ -100,7 +100,7 @@ def truth(anneal: ar.Anneal) -> np.ndarray:
 
 def needed_steps(anneal: ar.Anneal, name: str, exact: np.ndarray) -> list[tuple[float, float]]:
     """Return (tolerance, steps) pairs, the fewest steps beyond which the error stays below the tolerance."""
-    phase = float(phase_mesh(anneal)[1][-1])
+    phase = phase_mesh(anneal).total
     steps, errors = [], []
     density, ceiling = 0.15, 8000 if name == STRANG.name else 800
     while density * (phase + 2) < ceiling * max(1.0, phase / 50) and (not errors or errors[-1] > min(TOLERANCES[name])):
@@ -119,7 +119,7 @@ def needed_steps(anneal: ar.Anneal, name: str, exact: np.ndarray) -> list[tuple[
 
 
 def fit(count: int) -> None:
-    cases = [(anneal, truth(anneal), float(phase_mesh(anneal)[1][-1])) for anneal in anneals("fit", count)]
+    cases = [(anneal, truth(anneal), phase_mesh(anneal).total) for anneal in anneals("fit", count)]
     for name, splitting in SPLITTINGS.items():
         points = [
             (tolerance, phase, steps)
