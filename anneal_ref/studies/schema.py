@@ -34,8 +34,8 @@ class ScheduleTable(Table):
     problem: list[float] | None = None
     transverse_polynomial: list[float] | None = None
     problem_polynomial: list[float] | None = None
-    unit: Literal["rad/ns", "GHz", "1"] = "rad/ns"
-    prefactor: float = Field(default=1.0, gt=0)
+    unit: Literal["rad/ns", "GHz", "1"] | None = None
+    prefactor: float | None = Field(default=None, gt=0)
     interpolation: Literal["pchip", "linear"] = "pchip"
 
     @model_validator(mode="after")
@@ -52,6 +52,13 @@ class ScheduleTable(Table):
         if any(key is None for key in forms[begun[0]]):
             raise ValueError(f"{begun[0]} belong together; one is missing")
         return self
+
+
+class WaveformTable(Table):
+    """`[waveform]`: s against the fraction u of the duration, a broken line."""
+
+    u: list[float]
+    s: list[float]
 
 
 class TruthTable(Table):
@@ -101,6 +108,7 @@ class InstanceTable(Table):
     lattice: LatticeTable | None = None
     couplings: LawTable | list[float] | None = None
     fields: LawTable | list[float] | None = None
+    transverse: LawTable | list[float] | None = None
     seed: int | None = Field(default=None, ge=0)
     index: int | None = Field(default=None, ge=0)
     normalise: str | None = None
@@ -108,15 +116,15 @@ class InstanceTable(Table):
     @model_validator(mode="after")
     def _one_form(self) -> InstanceTable:
         drawn = {"lattice": self.lattice, "couplings": self.couplings, "fields": self.fields}
-        drawn |= {"seed": self.seed, "index": self.index, "normalise": self.normalise}
+        drawn |= {"transverse": self.transverse, "seed": self.seed, "index": self.index, "normalise": self.normalise}
         given = [key for key, value in drawn.items() if value is not None]
         if self.file is not None and given:
             raise ValueError(f"`file` holds the whole instance; take away {', '.join(f'`{key}`' for key in given)}")
         if self.file is None and (self.lattice is None or self.couplings is None):
             raise ValueError("give either `file`, or `lattice` and `couplings`")
-        random = [law for law in (self.couplings, self.fields) if isinstance(law, LawTable) and law.law != "constant"]
+        random = [law for law in (self.couplings, self.fields, self.transverse) if isinstance(law, LawTable) and law.law != "constant"]
         if random and self.seed is None:
-            raise ValueError("drawn couplings or fields need a `seed`, a whole number of at least 0")
+            raise ValueError("drawn numbers need a `seed`, a whole number of at least 0")
         return self
 
 
@@ -124,7 +132,7 @@ class SamplesTable(Table):
     """`[samples]`: how the files of spins are read, and where those of the product lie."""
 
     files: str | list[str] | None = None
-    readout: Literal["pm", "01"] | None = None
+    values: Literal["spins", "bits"] | None = None
 
 
 class CaseTable(Table):
@@ -142,6 +150,7 @@ class StudyTable(Table):
     name: str = Field(min_length=1)
     description: str = ""
     schedule: ScheduleTable
+    waveform: WaveformTable | None = None
     truth: TruthTable = TruthTable()
     acceptance: AcceptanceTable
     instance: list[InstanceTable] = Field(min_length=1)
@@ -189,46 +198,63 @@ def read_table(path: Path) -> StudyTable:
     try:
         return StudyTable.model_validate(data)
     except ValidationError as error:
-        faults = list(dict.fromkeys(_sentence(fault) for fault in _sorted_faults(error)))
-        raise StudyError("\n".join(f"{path}: {fault}" for fault in faults)) from error
+        faults = error.errors(include_url=False)
+        # a union reports a fault for each alternative: those of the shape that was not meant are noise
+        meant = [fault for fault in faults if not _other_shape(fault)]
+        sentences = dict.fromkeys(_sentence(fault) for fault in meant)
+        raise StudyError("\n".join(f"{path}: {sentence}" for sentence in sentences)) from error
 
 
-def _sorted_faults(error: ValidationError) -> list[Any]:
-    """Faults of the file, without the echo of each alternative of a union that was not meant."""
-    faults = error.errors(include_url=False)
-    meant = [fault for fault in faults if not _other_alternative(fault)]
-    return meant or faults
+_ALTERNATIVES = {
+    "LawTable": (dict, 'a law such as { law = "plus_minus" }, or a list of numbers'),
+    "list[float]": (list, 'a law such as { law = "plus_minus" }, or a list of numbers'),
+    "str": (str, "a string, or a list of strings"),
+    "list[str]": (list, "a string, or a list of strings"),
+}
 
 
-def _other_alternative(fault: Any) -> bool:
-    # a union reports one fault for each alternative; the alternative of the wrong shape is noise
+def _other_shape(fault: Any) -> bool:
     last = fault["loc"][-1] if fault["loc"] else None
-    shapes = {"LawTable": dict, "list[float]": list, "list[str]": list, "str": str}
-    return last in shapes and fault["type"] in ("model_type", "list_type", "string_type") and isinstance(fault["input"], dict | list)
+    if last not in _ALTERNATIVES or fault["type"] not in ("model_type", "list_type", "string_type"):
+        return False
+    siblings = [shape for shape, words in _ALTERNATIVES.values() if words == _ALTERNATIVES[last][1]]
+    return isinstance(fault["input"], tuple(siblings))
 
 
 def _sentence(fault: Any) -> str:
-    path = [part for part in fault["loc"] if part not in ("LawTable", "list[float]", "list[str]", "str")]
+    path = [part for part in fault["loc"] if part not in _ALTERNATIVES]
     where = _spelled(path)
     if fault["type"] == "extra_forbidden":
-        known = _known_keys(path[:-1])
-        near = difflib.get_close_matches(str(path[-1]), known, n=1)
-        hint = f"did you mean `{near[0]}`?" if near else f"known keys there: {', '.join(known)}"
-        return f"unknown key {where}; {hint}"
+        return f"unknown key {where}; {_hint(str(path[-1]), path[:-1])}"
     if fault["type"] == "missing":
         return f"key {where} is missing"
     message = fault["msg"].removeprefix("Value error, ")
-    if not where:
-        return message
     if fault["type"] == "value_error":
-        return f"{where}: {message}"
+        return f"{where}: {message}" if where else message
     value = fault["input"]
-    text = f"{where} = {_toml(value)}: {message[0].lower()}{message[1:]}"
+    if fault["loc"][-1] in _ALTERNATIVES and len(path) < len(fault["loc"]):
+        message = f"must be {_ALTERNATIVES[fault['loc'][-1]][1]}"
+    message = message.replace("Input should", "must").replace("must be a valid", "must be a")
+    text = f"{where} {message}; got {_toml(value)}"
     allowed = fault.get("ctx", {}).get("expected")
     if allowed and isinstance(value, str):
         near = difflib.get_close_matches(value, [word.strip("'") for word in allowed.replace(" or ", ", ").split(", ")], n=1)
         text += f"; did you mean '{near[0]}'?" if near else ""
     return text
+
+
+def _hint(key: str, path: list[Any]) -> str:
+    """Say where an unknown key belongs, or which known key is nearest, or which there are."""
+    known = _known_keys(path)
+    near = difflib.get_close_matches(key, known, n=1)
+    if near:
+        return f"did you mean `{near[0]}`?"
+    if key in StudyTable.model_fields:
+        return f"`{key}` belongs at the top of the file, above the first [table]"
+    homes = [name for name in StudyTable.model_fields if key in _known_keys([name]) and name != "case"]
+    if homes:
+        return f"it belongs to `[{homes[0]}]`"
+    return f"known keys there: {', '.join(known)}"
 
 
 def _spelled(path: list[Any]) -> str:

@@ -5,6 +5,7 @@ A study is a TOML file that is pleasant to write by hand. Paths are relative to 
     format = 1                                   # of this file
     name = "Acceptance of the processor, spring"
     description = "What is tested and for whom."  # optional
+    durations = [2.0, 5.0]                       # every instance at each of these (ns)
 
     [schedule]                                   # one of three forms
     file = "schedule.csv"                        # 1. columns s, transverse, problem
@@ -13,9 +14,13 @@ A study is a TOML file that is pleasant to write by hand. Paths are relative to 
     # problem = [0.0, 4.0, 10.0]
     # transverse_polynomial = [20.0, -20.0]      # 3. coefficients of 1, s, s^2 ...
     # problem_polynomial = [0.0, 10.0]
-    unit = "rad/ns"                              # or "GHz" (multiplied by 2 pi), or "1" (dimensionless)
-    prefactor = 1.0                              # 0.5 for tables of a Hamiltonian written with halves
+    unit = "rad/ns"                              # or "GHz" (multiplied by 2 pi), or "1"; a CSV file may say it itself
+    prefactor = 1.0                              # 0.5 for tables of a Hamiltonian written with halves; likewise
     interpolation = "pchip"                      # or "linear"
+
+    [waveform]                                   # optional: s against the fraction u of the duration, here with a pause
+    u = [0.0, 0.4, 0.6, 1.0]
+    s = [0.0, 0.5, 0.5, 1.0]
 
     [truth]                                      # optional, these are the defaults
     tolerance = 1e-3                             # largest absolute error over all <Z_i> and <Z_i Z_j>
@@ -33,20 +38,21 @@ A study is a TOML file that is pleasant to write by hand. Paths are relative to 
     name = "ladder"
     lattice = { kind = "ladder", n = 6, periodic = true }   # any function of `anneal_ref.lattices`; dead = [3, 7] takes sites away
     couplings = { law = "plus_minus" }           # plus_minus | gaussian, sigma | uniform, low, high | levels, k, zero | constant, value | [numbers]
-    fields = { law = "gaussian", sigma = 0.1 }   # optional
-    seed = 11
-    index = 0
+    fields = { law = "gaussian", sigma = 0.1 }   # optional, and so is transverse (weights of the transverse field)
+    seed = 11                                    # names the ensemble; the same seed gives the same numbers everywhere
+    index = 0                                    # its member
 
     [[instance]]
-    name = "measured graph"
+    name = "graph"
     file = "graph.json"                          # written by `Instance.write`
 
-    durations = [2.0, 5.0]                       # at the top of the file: every instance at every duration (ns) ...
     [samples]
-    files = "samples/{instance}_{duration}ns_*.csv"   # ... with all files that match, or a list of such patterns
-    readout = "01"                               # "pm" for +1 and -1, "01" for 0 (up) and 1 (down); default: what the file says
+    files = "samples/{instance}_{duration}ns_*.csv"   # all files that match, or a list of such patterns
+    values = "bits"                              # "spins": +1 and -1; "bits": 0 (up) and 1 (down). Default: what the file says
 
-    [[case]]                                     # instead of `durations` and `samples.files`: case by case
+In place of `durations` and `samples.files`, the files can be named case by case:
+
+    [[case]]
     instance = "ladder"
     duration = 2.0
     samples = ["a.csv", "b.csv"]
@@ -57,24 +63,18 @@ Everything is checked before any work starts: unknown keys, values, missing file
 from __future__ import annotations
 
 import hashlib
-import inspect
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
-from difflib import get_close_matches
 from pathlib import Path
-from typing import Any
+from typing import Literal
 
-from anneal_ref.base.errors import AnnealRefError, StudyError
-from anneal_ref.model import disorder, lattices
-from anneal_ref.model.anneal import Anneal
-from anneal_ref.model.instances import Instance, draw_instance
+from anneal_ref.base.errors import AnnealRefError, InputError, StudyError
+from anneal_ref.judgement.equivalence import Acceptance
+from anneal_ref.model.anneal import Anneal, Waveform
 from anneal_ref.model.schedules import Schedule
 from anneal_ref.observe.samples import Samples
-from anneal_ref.studies.schema import InstanceTable, LawTable, ScheduleTable, StudyTable, read_table
-
-LATTICES = (
-    "biclique", "chain", "complete", "cubic", "diamond", "honeycomb", "ladder", "random_regular", "square", "triangular",
-)  # fmt: skip
+from anneal_ref.studies.building import make_instance, make_schedule, nearest
+from anneal_ref.studies.schema import StudyTable, read_table
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,14 +88,19 @@ class Case:
     anneal : Anneal
     files : tuple of Path
         Samples files; each is a gauge or batch of its own.
-    readout : str, optional
-        "pm" or "01"; by default what each file says.
+    values : str, optional
+        "spins" or "bits"; by default what each file says.
     """
 
     name: str
     anneal: Anneal
     files: tuple[Path, ...]
-    readout: str | None = None
+    values: Literal["spins", "bits"] | None = None
+
+    @property
+    def label(self) -> str:
+        """Instance and duration, for tables."""
+        return f"{self.name}, {self.anneal.duration:g} {time_unit(self.anneal.schedule)}".strip()
 
     def samples(self) -> Samples:
         """Read the files and check that they belong to this instance and duration.
@@ -105,7 +110,17 @@ class Case:
         InputError
             A file that is malformed, or that says it belongs to another instance or duration.
         """
-        return Samples.concatenate([Samples.read(file, readout=self.readout).for_instance(self.anneal.instance) for file in self.files])
+        runs = []
+        for file in self.files:
+            run = Samples.read(file, self.values)
+            try:
+                runs.append(run.for_anneal(self.anneal))
+            except InputError as error:
+                raise InputError(f"{file}: {error}") from error
+        try:
+            return Samples.concatenate(runs) if len(runs) > 1 else runs[0]
+        except InputError as error:
+            raise InputError(f"the files of '{self.label}' do not go together: {error}") from error
 
 
 @dataclass(frozen=True, slots=True)
@@ -123,7 +138,7 @@ class Study:
     cases : tuple of Case
         Instances run slowest, in the order of the file.
     table : StudyTable
-        The tables `truth` and `acceptance` as written, defaults filled in.
+        The file's contents, defaults filled in.
 
     Examples
     --------
@@ -144,6 +159,11 @@ class Study:
     cases: tuple[Case, ...]
     table: StudyTable
 
+    @property
+    def acceptance(self) -> Acceptance:
+        """The limits that the processor must meet."""
+        return Acceptance(**self.table.acceptance.model_dump())
+
     @classmethod
     def read(cls, path: str | Path) -> Study:
         """Read and check a study file.
@@ -155,21 +175,27 @@ class Study:
         """
         path = Path(path)
         table = read_table(path)
-        schedule = _schedule(table.schedule, path)
-        instances = {one.name: _instance(one, k, path) for k, one in enumerate(table.instance)}
+        schedule = make_schedule(table.schedule, path)
+        instances = {one.name: make_instance(one, k, path) for k, one in enumerate(table.instance)}
         cases = []
         for name, duration, patterns, where in _pairs(table, path):
             if name not in instances:
                 known = ", ".join(f"'{one}'" for one in instances)
-                raise StudyError(f"{path}: `{where}.instance` = '{name}': no such instance; there are {known}{_near(name, instances)}")
+                raise StudyError(f"{path}: `{where}.instance` = '{name}': no such instance; there are {known}{nearest(name, instances)}")
             try:
-                anneal = Anneal(instances[name], schedule, duration=duration, start=table.truth.start)
+                waveform = None if table.waveform is None else Waveform(table.waveform.u, table.waveform.s)
+                anneal = Anneal(instances[name], schedule, duration, table.truth.start, waveform)
             except AnnealRefError as error:
                 raise StudyError(f"{path}: instance '{name}' at duration {duration:g}: {error}") from error
             files = _files(patterns, name, duration, path, where)
-            cases.append(Case(name, anneal, files, table.samples.readout))
+            cases.append(Case(name, anneal, files, table.samples.values))
         sha256 = hashlib.sha256(path.read_bytes()).hexdigest()
         return cls(table.name, table.description, path, sha256, schedule, tuple(cases), table)
+
+
+def time_unit(schedule: Schedule) -> str:
+    """Return the unit of durations under a schedule: ns, or nothing where the schedule has no unit."""
+    return "ns" if schedule.unit == "rad/ns" else ""
 
 
 def _pairs(table: StudyTable, path: Path) -> list[tuple[str, float, list[str], str]]:
@@ -209,90 +235,3 @@ def _glob(folder: Path, pattern: str) -> list[Path]:
     root, rest = (anchor, str(Path(pattern).relative_to(anchor))) if Path(pattern).is_absolute() else (folder, pattern)
     # a manifest lies beside its samples and is no samples file itself
     return sorted(match for match in root.glob(rest) if match.is_file() and not match.name.endswith(".manifest.json"))
-
-
-def _schedule(table: ScheduleTable, path: Path) -> Schedule:
-    units = {"unit": table.unit, "prefactor": table.prefactor}
-    try:
-        if table.file is not None:
-            file = path.parent / table.file
-            if not file.is_file():
-                raise StudyError(f"{path}: `schedule.file`: there is no file {file}")
-            return Schedule.read_csv(file, interpolation=table.interpolation, **units)
-        if table.s is not None:
-            return Schedule.from_table(table.s, table.transverse or [], table.problem or [], interpolation=table.interpolation, **units)
-        return Schedule.polynomial(table.transverse_polynomial or [], table.problem_polynomial or [], **units)
-    except StudyError:
-        raise
-    except AnnealRefError as error:
-        raise StudyError(f"{path}: `schedule`: {error}") from error
-
-
-def _instance(table: InstanceTable, k: int, path: Path) -> Instance:
-    where = f"instance[{k}]"
-    if table.file is not None:
-        file = path.parent / table.file
-        if not file.is_file():
-            raise StudyError(f"{path}: `{where}.file`: there is no file {file}")
-        try:
-            return Instance.read(file)
-        except AnnealRefError as error:
-            raise StudyError(f"{path}: `{where}.file`: {error}") from error
-    assert table.lattice is not None
-    kind, arguments = table.lattice.kind, dict(table.lattice.model_extra or {})
-    if kind not in LATTICES:
-        raise StudyError(f"{path}: `{where}.lattice.kind` = '{kind}': allowed are {', '.join(LATTICES)}{_near(kind, LATTICES)}")
-    lattice = _called(getattr(lattices, kind), arguments, f"{where}.lattice", path)
-    try:
-        if table.lattice.dead is not None:
-            lattice = lattice.diluted(dead=table.lattice.dead)
-    except AnnealRefError as error:
-        raise StudyError(f"{path}: `{where}.lattice.dead`: {error}") from error
-    couplings = _law(table.couplings, f"{where}.couplings", path)
-    fields = _law(table.fields, f"{where}.fields", path)
-    try:
-        if isinstance(couplings, list) or isinstance(fields, list):
-            return _written(lattice, couplings, fields, table, where, path)
-        return draw_instance(
-            lattice, couplings, fields=fields, seed=table.seed or 0, index=table.index or 0, normalise=table.normalise
-        )
-    except StudyError:
-        raise
-    except AnnealRefError as error:
-        raise StudyError(f"{path}: `{where}` ('{table.name}'): {error}") from error
-
-
-def _written(lattice: Any, couplings: Any, fields: Any, table: InstanceTable, where: str, path: Path) -> Instance:
-    """Make an instance whose numbers stand in the file."""
-    if not isinstance(couplings, list) or not (fields is None or isinstance(fields, list)):
-        raise StudyError(f"{path}: `{where}`: give couplings and fields either both as numbers or both as laws")
-    if table.normalise is not None:
-        raise StudyError(f"{path}: `{where}.normalise` goes with a law; written couplings are taken as they are")
-    return Instance(lattice, couplings, fields=fields)
-
-
-def _law(given: LawTable | list[float] | None, where: str, path: Path) -> Any:
-    if given is None or isinstance(given, list):
-        return given
-    arguments = {key: value for key, value in given.model_dump().items() if key != "law" and value is not None}
-    return _called(getattr(disorder, given.law), arguments, where, path)
-
-
-def _called(function: Callable[..., Any], arguments: dict[str, Any], where: str, path: Path) -> Any:
-    """Call a lattice or law with keys of the file, after a check of their names."""
-    parameters = inspect.signature(function).parameters
-    for key in arguments:
-        if key not in parameters:
-            raise StudyError(f"{path}: unknown key `{where}.{key}`; {function.__name__} takes {', '.join(parameters) or 'none'}{_near(key, parameters)}")
-    missing = [key for key, one in parameters.items() if one.default is one.empty and key not in arguments]
-    if missing:
-        raise StudyError(f"{path}: key `{where}.{missing[0]}` is missing; {function.__name__} takes {', '.join(parameters)}")
-    try:
-        return function(**{key: tuple(value) if isinstance(value, list) else value for key, value in arguments.items()})
-    except AnnealRefError as error:
-        raise StudyError(f"{path}: `{where}`: {error}") from error
-
-
-def _near(word: str, known: Any) -> str:
-    near = get_close_matches(word, list(known), n=1)
-    return f"; did you mean '{near[0]}'?" if near else ""

@@ -119,7 +119,7 @@ def _compare(options: argparse.Namespace) -> int:
     from anneal_ref.studies.archive import read_reference
 
     reference = read_reference(options.reference)
-    read = [Samples.read(file, readout=options.readout).for_instance(reference.anneal.instance) for file in options.samples]
+    read = [Samples.read(file, values=options.values).for_anneal(reference.anneal) for file in options.samples]
     print(compare(reference, Samples.concatenate(read)))
     return OK
 
@@ -188,7 +188,7 @@ def _parser() -> argparse.ArgumentParser:
     compare = commands.add_parser("compare", help="compare samples with one archived reference")
     compare.add_argument("reference", metavar="REFERENCE.h5")
     compare.add_argument("samples", metavar="SAMPLES", nargs="+", help="files of one instance; each a gauge or batch")
-    compare.add_argument("--readout", choices=("pm", "01"), help="what the files hold (default: what they say)")
+    compare.add_argument("--values", choices=("spins", "bits"), help="what the files hold: +1 and -1, or 0 and 1 (default: what they say)")
     compare.set_defaults(command=_compare)
 
     audit = commands.add_parser("audit", help="verify every file of an archive, and recompute some")

@@ -9,7 +9,7 @@ for black-and-white print.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import cast
+from typing import Any, cast
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -18,14 +18,15 @@ from matplotlib.collections import LineCollection
 from matplotlib.colors import Colormap, LinearSegmentedColormap, Normalize
 from matplotlib.figure import Figure
 from matplotlib.patches import FancyArrowPatch
+from matplotlib.ticker import MaxNLocator
 from numpy.typing import ArrayLike, NDArray
 
 from anneal_ref.base.checks import finite
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate, Score
-from anneal_ref.model.lattices import Lattice
+from anneal_ref.model.lattice import Lattice
 
-INK, QUIET, PROCESSOR, LIMIT, SHADE = "#22303a", "#7d8a91", "#0b7a75", "#b4491d", "#e4ebea"
+INK, QUIET, EDGE, PROCESSOR, LIMIT, SHADE = "#22303a", "#7d8a91", "#aab3b7", "#0b7a75", "#b4491d", "#e4ebea"
 DEVIATIONS: Colormap = LinearSegmentedColormap.from_list(
     "deviations", ["#124e78", "#5d95b5", "#e3e2dc", "#dd9a5b", "#a63c06"]
 )
@@ -68,6 +69,8 @@ def correlations(truth: Sequence[Estimate], processor: Sequence[Estimate], ax: A
     low = max(-1.04, min(float(min(x.min(), y.min())) - 0.08, -0.1)) if x.size else -1.04
     high = min(1.04, max(float(max(x.max(), y.max())) + 0.08, 0.1)) if x.size else 1.04
     ax.set(xlim=(low, high), ylim=(low, high), aspect="equal")
+    for axis in (ax.xaxis, ax.yaxis):
+        axis.set_major_locator(MaxNLocator(5))
     ax.set(xlabel=r"truth $\langle Z_i Z_j\rangle$", ylabel=r"processor $\langle Z_i Z_j\rangle$")
     ax.legend(loc="upper left", frameon=False, fontsize="small", handlelength=1.4)
     return ax
@@ -79,7 +82,8 @@ def deviations(
     """Draw the lattice with its bonds, and its sites, coloured by their deviation from the truth in standard errors.
 
     Two-dimensional coordinates are drawn as they are, three-dimensional ones in parallel projection, a lattice without
-    coordinates on a circle. Bonds that close a periodic boundary are drawn as arcs.
+    coordinates on a circle. Bonds that would run over another site, such as those that close a periodic boundary, are
+    drawn as arcs.
 
     Parameters
     ----------
@@ -103,21 +107,22 @@ def deviations(
     largest = max([3.0, *np.abs(bonds), *(np.abs(sites) if sites is not None else [])])
     scale = Normalize(-(limit or largest), limit or largest)
     starts, ends = where[lattice.edges[:, 0]], where[lattice.edges[:, 1]]
-    lengths = np.linalg.norm(starts - ends, axis=1)
-    far = lengths > 1.75 * np.min(lengths, initial=np.inf) if lattice.coordinates is not None else np.zeros(len(bonds), bool)
-    near = [(tuple(one), tuple(other)) for one, other in zip(starts[~far], ends[~far], strict=True)]
+    arcs = _over_sites(where, lattice.edges)
+    width = float(np.clip(120 / max(len(bonds), 1), 1.2, 4.0))
+    straight = [(tuple(one), tuple(other)) for one, other in zip(starts[~arcs], ends[~arcs], strict=True)]
     # strong colours last, so that no quiet bond hides a loud one
-    order = np.argsort(np.abs(bonds[~far]))
-    paints = DEVIATIONS(scale(bonds[~far]))
-    ax.add_collection(LineCollection([near[k] for k in order], colors="#aab3b7", linewidths=5.2, capstyle="round", zorder=1))
-    ax.add_collection(LineCollection([near[k] for k in order], colors=paints[order], linewidths=4.0, capstyle="round", zorder=2))
+    order = np.argsort(np.abs(bonds[~arcs]))
+    paints = DEVIATIONS(scale(bonds[~arcs]))
+    lines = [straight[k] for k in order]
+    ax.add_collection(LineCollection(lines, colors=EDGE, linewidths=width + 1, capstyle="round", zorder=1))
+    ax.add_collection(LineCollection(lines, colors=paints[order], linewidths=width, capstyle="round", zorder=2))
     centre = where.mean(axis=0)
-    for one, other, value in zip(starts[far], ends[far], bonds[far], strict=True):
-        for colour, width in (("#aab3b7", 3.2), (DEVIATIONS(scale(value)), 2.2)):
+    for one, other, value in zip(starts[arcs], ends[arcs], bonds[arcs], strict=True):
+        for colour, extra in ((EDGE, 1.0), (DEVIATIONS(scale(value)), 0.0)):
             ax.add_patch(
                 FancyArrowPatch(
                     tuple(one), tuple(other), arrowstyle="-", connectionstyle=f"arc3,rad={_bulge(one, other, centre)}",
-                    color=colour, linewidth=width, shrinkA=0, shrinkB=0, zorder=0,
+                    color=colour, linewidth=0.8 * width + extra, shrinkA=0, shrinkB=0, zorder=0,
                 )
             )  # fmt: skip
     faces = "#cdd4d6" if sites is None else DEVIATIONS(scale(sites))
@@ -127,10 +132,13 @@ def deviations(
         for label, (x, y), shade in zip(lattice.labels, where, _shades(sites, scale, lattice.n_sites), strict=True):
             ax.text(x, y, str(label), ha="center", va="center", fontsize=6.5, color=shade, zorder=4)
     ax.set_aspect("equal")
-    ax.margins(0.14 if not far.any() else 0.3)
+    extent = np.ptp(where, axis=0)
+    pad = 0.12 * max(float(extent.max()), 1.0) * (2.2 if arcs.any() else 1.0)
+    ax.set(xlim=(where[:, 0].min() - pad, where[:, 0].max() + pad), ylim=(where[:, 1].min() - pad, where[:, 1].max() + pad))
     ax.set_axis_off()
     what = "deviation of bonds" + (" and sites" if sites is not None else "")
-    _figure(ax).colorbar(ScalarMappable(scale, DEVIATIONS), ax=ax, shrink=0.8, label=f"{what} (standard errors)")
+    side: dict[str, Any] = {"location": "bottom", "aspect": 35, "shrink": 0.8} if extent[0] > 1.4 * extent[1] else {"shrink": 0.8}
+    _figure(ax).colorbar(ScalarMappable(scale, DEVIATIONS), ax=ax, label=f"{what} (standard errors)", **side)
     return ax
 
 
@@ -240,6 +248,17 @@ def positions(lattice: Lattice) -> NDArray[np.float64]:
         return places
     # oblique parallel projection: no two sites of a small cubic box coincide
     return np.column_stack([places[:, 0] + 0.43 * places[:, 1], places[:, 2] + 0.27 * places[:, 1]])
+
+
+def _over_sites(where: NDArray[np.float64], edges: NDArray[np.intp]) -> NDArray[np.bool_]:
+    """Tell which bonds, drawn straight, would run over a third site."""
+    starts, along = where[edges[:, 0]], where[edges[:, 1]] - where[edges[:, 0]]
+    squares = np.maximum((along**2).sum(axis=1), 1e-300)
+    away = where[None, :, :] - starts[:, None, :]
+    fraction = np.einsum("mnd,md->mn", away, along) / squares[:, None]
+    gap = np.linalg.norm(away - fraction[:, :, None] * along[:, None, :], axis=2)
+    between = (fraction > 1e-6) & (fraction < 1 - 1e-6) & (gap < 0.05 * np.sqrt(squares.min(initial=np.inf)))
+    return np.asarray(between.any(axis=1))
 
 
 def _bulge(one: NDArray[np.float64], other: NDArray[np.float64], centre: NDArray[np.float64]) -> float:
