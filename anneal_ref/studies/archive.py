@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import os
 import warnings
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -32,8 +32,8 @@ class Archive:
     """A folder with one file per reference, `<identity>.h5`.
 
     The name starts with 32 digits of the identity of the anneal, so that a look-up by anneal opens only files of that
-    anneal; 16 digits of the settings follow. Files are written aside and renamed: several processes may add to one folder, and
-    an interrupt leaves finished references whole.
+    anneal; 16 digits of the settings follow. Files are written aside and renamed: several processes may add to one
+    folder, and an interrupt leaves finished references whole.
 
     Parameters
     ----------
@@ -76,7 +76,7 @@ class Archive:
         return f"<Archive {self.folder}: {len(self)} references>"
 
     def __len__(self) -> int:
-        """Number of files, damaged ones included."""
+        """Return the number of files, damaged ones included."""
         return len(self.list())
 
     def __iter__(self) -> Iterator[Reference]:
@@ -173,8 +173,8 @@ class Archive:
     def audit(self, recompute: float = 0.0, seed: int = 0, run: Run = Run()) -> Audit:  # noqa: B008
         """Verify every file, and solve a part of the references again.
 
-        Every file: all bytes against the checksums, the name against the identity of what is inside, the stored error bars against
-        those that the stored runs give, probabilities and samples against the moments. A seeded choice of
+        Every file: all bytes against the checksums, the name against the identity of what is inside, the stored error
+        bars against those that the stored runs give, probabilities and samples against the moments. A seeded choice of
         references is also evolved again, from nothing but what its file holds and with the step halved once more than
         in the finest run; the result must lie within the stored error bars.
 
@@ -338,9 +338,10 @@ def _largest_difference(moments: Moments, z: NDArray[np.float64], zz: NDArray[np
     return float(max(np.abs(moments.z.value - z).max(), np.abs(moments.zz.value - zz).max()))
 
 
-def _aligned(rows: list[tuple[str, ...]]) -> str:
+def _aligned(rows: Sequence[Sequence[str]]) -> str:
     widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
-    return "\n".join("  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows)
+    padded = ([cell.ljust(width) for cell, width in zip(row, widths, strict=True)] for row in rows)
+    return "\n".join("  ".join(cells).rstrip() for cells in padded)
 
 
 def _unusable(path: Path, problem: str, advice: str) -> ArchiveError:

@@ -1,9 +1,9 @@
-"""How a reference lies in its file: a few arrays, a few attributes for whoever looks, and the recipe that makes it again.
+"""How a reference lies in its file: few arrays, few attributes for whoever looks, the recipe that makes it again.
 
 Arrays (dimensions):
 
-- `z`, `x` (run, site) and `zz` (run, site, other_site): moments of the runs from coarse to fine and, last, of the coarsest
-  with its sites solved in another order;
+- `z`, `x` (run, site) and `zz` (run, site, other_site): moments of the runs from coarse to fine and, last, of the
+  coarsest with its sites solved in another order;
 - `z_num`, `x_num` (site) and `zz_num` (site, other_site): measured errors of the finest run;
 - `probabilities` (configuration): up to 16 sites; only the half with the last spin up where the other half mirrors it;
 - `samples` (sample, byte): packed bits, site 0 lowest, bit 0 for +1;
@@ -99,7 +99,8 @@ def from_record(record: Record, path: Path) -> Reference:
         recipe = json.loads(record.arrays["recipe"].tobytes())
         made_by = recipe["backend"]["class"]
         if made_by not in BACKENDS:
-            raise _refused(path, f"it was made by the back-end {made_by}, which this library does not have", _OTHER_LIBRARY)
+            problem = f"it was made by the back-end {made_by}, which this library does not have"
+            raise _refused(path, problem, _OTHER_LIBRARY)
         reference = _rebuilt(record, recipe, BACKENDS[made_by](**recipe["backend"]["settings"]))
     except (KeyError, TypeError, ValueError, IndexError) as error:
         problem = f"its contents do not make a reference ({type(error).__name__}: {error})"

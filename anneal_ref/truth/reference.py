@@ -120,7 +120,7 @@ class Reference:
 
     @property
     def identity(self) -> str:
-        """Name of the reference: 32 hexadecimal digits of the anneal, a hyphen, 16 of the settings that can change digits."""
+        """Name of the reference: 32 hexadecimal digits of the anneal, a hyphen, 16 of what else changes digits."""
         return identity_of(self.anneal, self.backend, self.tolerance, len(self.bits), self.seed, self.max_runs)
 
     @property
@@ -167,12 +167,12 @@ class Reference:
         InputError
             Values that are not finite, or of different shapes.
         """
-        values = [np.asarray(f(run.moments), dtype=np.float64) for run in (*self.runs[-_RUNS:], self.runs[0], self.reordered)]
+        runs = (*self.runs[-_RUNS:], self.runs[0], self.reordered)
+        values = [np.asarray(f(run.moments), dtype=np.float64) for run in runs]
         if any(value.shape != values[0].shape or not np.isfinite(value).all() for value in values):
             raise InputError("f must give finite numbers of one shape for the moments of every run; got something else")
         *last, coarsest, reordered = values
-        rounding = self.decay.growth * np.abs(reordered - coarsest) + self.decay.drift * np.abs(last[-1])
-        rounding += np.finfo(np.float64).eps * np.abs(last[-1])
+        rounding = self.decay.growth * np.abs(reordered - coarsest) + np.finfo(np.float64).eps * np.abs(last[-1])
         return Estimate(last[-1], 0.0, self.decay.bars(last, rounding), "reference")
 
     def sample(self, shots: int, seed: int) -> Samples:
@@ -191,7 +191,7 @@ class Reference:
         if self.folded is None:
             if shots > len(self.bits):
                 raise InputError(
-                    f"shots must be at most {len(self.bits)}, the number of samples that this reference keeps; got {shots}; "
+                    f"shots must be at most {len(self.bits)}, the number of samples that are kept; got {shots}; "
                     "for more use reference.state().sample(shots, seed), which evolves the state again"
                 )
             chosen = random.permutation(len(self.bits))[:shots]
@@ -246,11 +246,9 @@ class Reference:
             again = k == len(self.runs)
             previous = self.runs[0].moments if again else previous
             change = "-" if previous is None else f"{_change(previous, run.moments):.2g}"
-            drift = run.ledger.get("norm_drift")
-            lines.append(
-                f"  {'reordered' if again else k:<9} {run.ledger.get('steps', '-')!s:>5} {run.ledger.get('layers', '-')!s:>9} "
-                f"{change:>15} {'-' if drift is None else format(drift, '.1e'):>12}"
-            )
+            steps, layers = (str(run.ledger.get(name, "-")) for name in ("steps", "layers"))
+            drift = f"{run.ledger['norm_drift']:.1e}" if "norm_drift" in run.ledger else "-"
+            lines.append(f"  {'reordered' if again else k:<9} {steps:>5} {layers:>9} {change:>15} {drift:>12}")
             previous = run.moments
         lines.append(
             f"  decay per run {self.decay.ratio:.2g}{'' if self.decay.settled else ' (not settled)'}, "
@@ -274,10 +272,10 @@ def reference(
 ) -> Reference:
     """Solve an anneal and measure how wrong the result can be.
 
-    Three runs with the step halved from one to the next show how the error decays; more follow while the measured error is
-    above the tolerance. Every <Z_i>, <Z_i Z_j> and <X_i> of the finest run gets its own error bar; see
-    `anneal_ref.truth.refinement`. The cost is about seven times that of the coarsest run, plus once more
-    to measure rounding.
+    Three runs with the step halved from one to the next show how the error decays; more follow while the measured error
+    is above the tolerance. Every <Z_i>, <Z_i Z_j> and <X_i> of the finest run gets its own error bar; see
+    `anneal_ref.truth.refinement`. The cost is about seven times that of the coarsest run, plus once more to measure
+    rounding.
 
     Parameters
     ----------
@@ -361,7 +359,7 @@ def reference(
 
 
 def default_backend(tolerance: float) -> StateVector:
-    """Return the back-end of the coarsest run where none is given: its changes are small, so that their decay means something."""
+    """Return the back-end of the coarsest run where none is given; its steps are small enough for a clear decay."""
     return StateVector(tolerance=min(1e-5, max(100.0 * tolerance, 1e-11)))
 
 
@@ -433,7 +431,6 @@ def _decay(anneal: Anneal, runs: Sequence[Evolution], reordered: Evolution) -> D
         [entries(run.moments) for run in runs[-_RUNS:]],
         entries(reordered.moments) - entries(runs[0].moments),
         growth=float(ledger.get("layers", 2 ** (len(runs) - 1))) / float(coarsest.get("layers", 1)),
-        drift=float(ledger.get("norm_drift", 0.0)),
         order=_order(ledger),
     )
 

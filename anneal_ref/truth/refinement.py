@@ -6,16 +6,16 @@ geometric series, d2 r/(1 - r). That is the estimate, with three reservations:
 
 - *The decay is measured*, from the root mean square of d2 and d1 over all entries, and replaces 2^-p where it is worse.
   It never goes below 2^-p, since a fast first drop (a high-order term dying) says nothing about the next; nor below
-  3 rms(d1), since a change that is not small brings companions of its own square, and a coarse run that is far off is no
-  term of the series. When the decay is above 1/2 the refinement has not settled, and nothing is called converged.
+  3 rms(d1), since a change that is not small brings companions of its own square, and a coarse run that is far off is
+  no term of the series. When the decay is above 1/2 the refinement has not settled, and nothing is called converged.
 - *Entry by entry*, d2 may vanish by accident: an entry passes through zero where leading and next order cancel. The
   earlier difference, shrunk by the decay, stands in where it is larger; both vanish together only rarely. A safety
   factor of 2 covers the next order in h.
 - *Rounding does not shrink.* It is measured by solving the coarsest run again with the sites in another order: the
   same truncation error to the last digit, another sequence of roundings. Its size grows with the number of layers, by
-  no more than in proportion. The drift of the norm, which sees the roundings that all amplitudes share, is the other
-  measure; the larger one counts. Differences at that level are taken out of the measured decay, and twice the level
-  is added to every bar.
+  no more than in proportion. Differences at that level are taken out of the measured decay, and twice the level is
+  added to every bar. (The drift of the norm is a check, no measure: it does not see errors of the phases, and it
+  cancels in moments that are divided by the norm.)
 
 None of this uses the tolerance that was asked for, and an entry's bar comes from that entry's own differences.
 
@@ -55,14 +55,11 @@ class Decay:
         Root mean square of the rounding error of an entry of the finest run.
     growth : float
         Factor from the rounding of the coarsest run to that of the finest.
-    drift : float
-        Absolute drift of the norm in the finest run.
     """
 
     ratio: float
     rounding: float
     growth: float = 1.0
-    drift: float = 0.0
 
     @property
     def settled(self) -> bool:
@@ -89,7 +86,7 @@ class Decay:
 
 
 def measure_decay(
-    values: Sequence[NDArray[np.float64]], reordered: NDArray[np.float64], growth: float, drift: float, order: float
+    values: Sequence[NDArray[np.float64]], reordered: NDArray[np.float64], growth: float, order: float
 ) -> Decay:
     """Return the decay of the changes over all entries.
 
@@ -101,22 +98,20 @@ def measure_decay(
         What the coarsest run of all changes by when its sites are solved in another order.
     growth : float
         Layers of the finest run over layers of the coarsest.
-    drift : float
-        Norm of the finest state minus one.
     order : float
         Order of the scheme, which the decay is never taken to exceed.
 
     Examples
     --------
     >>> runs = [np.array([0.3, -0.7]) + 2.0 ** (-6 * k) * np.array([1e-4, 2e-4]) for k in range(3)]
-    >>> decay = measure_decay(runs, np.array([1e-16, -1e-16]), growth=4, drift=0.0, order=6)
+    >>> decay = measure_decay(runs, np.array([1e-16, -1e-16]), growth=4, order=6)
     >>> round(1 / decay.ratio), decay.settled
     (64, True)
     """
-    rounding = max(growth * _rms(reordered), abs(drift), _ULP)
+    rounding = max(growth * _rms(reordered), _ULP)
     first, second = _rms(values[1] - values[0]), _rms(values[2] - values[1])
     measured = max(second - rounding, 0.0) / first if first > 0 else (0.0 if second <= rounding else np.inf)
-    return Decay(max(measured, 2.0**-order, _SECOND_ORDER * first), rounding, growth, abs(drift))
+    return Decay(max(measured, 2.0**-order, _SECOND_ORDER * first), rounding, growth)
 
 
 def _rms(values: NDArray[np.float64]) -> float:

@@ -41,7 +41,8 @@ def assert_same(a, b):
     assert a.identity == b.identity
     assert a.anneal.identity == b.anneal.identity
     assert a.backend == b.backend
-    assert (a.outcome, a.error, a.tolerance, a.seed, a.max_runs) == (b.outcome, b.error, b.tolerance, b.seed, b.max_runs)
+    for name in ("outcome", "error", "tolerance", "seed", "max_runs"):
+        assert getattr(a, name) == getattr(b, name)
     for run, other in zip((*a.runs, a.reordered), (*b.runs, b.reordered), strict=True):
         assert run.ledger == other.ledger
         for name in ("z", "zz", "x"):
@@ -66,10 +67,10 @@ def assert_same(a, b):
         lambda: solve(),
         lambda: solve(fields=ar.disorder.gaussian(0.4), schedule=TABLE),
         lambda: solve(lattice=ar.lattices.square(2, 3).diluted(dead=[1]), start="ground"),
-        lambda: solve(waveform=ar.Waveform([0, 0.4, 0.7, 1], [0, 0.5, 0.5, 1]), seed=4, backend=ar.StateVector(steps=7)),
+        lambda: solve(waveform=ar.Waveform([0, 0.4, 0.7, 1], [0, 0.5, 0.5, 1]), backend=ar.StateVector(steps=7)),
         lambda: solve(lattice=ar.lattices.from_edges(3, [(0, 2)])),
         lambda: solve(lattice=ar.lattices.from_edges(1, [])),
-        lambda: solve(tolerance=1e-12, max_runs=3),
+        lambda: solve(tolerance=1e-15, max_runs=3),
     ],
     ids=["ramp", "table", "diluted from the ground state", "waveform", "single spin", "no edge", "not converged"],
 )
@@ -87,8 +88,7 @@ def test_what_comes_back_can_be_evolved_and_sampled(truth, tmp_path):
     found = read_reference(ar.Archive(tmp_path).add(truth))
     np.testing.assert_array_equal(found.state().moments().zz.value, truth.moments().zz.value)
     np.testing.assert_array_equal(found.sample(30, seed=5).spins, truth.sample(30, seed=5).spins)
-    energy = [one.estimate(lambda m: ar.observables.problem_energy(m, one.anneal.instance)) for one in (found, truth)]
-    assert str(energy[0]) == str(energy[1])
+    assert str(found.estimate(ar.observables.q2)) == str(truth.estimate(ar.observables.q2))
 
 
 def test_xarray_opens_it(truth, tmp_path):
@@ -128,12 +128,12 @@ def test_find_goes_by_anneal_and_measured_error(three, tmp_path):
 
 
 def test_a_reference_that_missed_its_tolerance_is_found_by_what_it_reached(tmp_path):
-    missed = solve(tolerance=1e-12, max_runs=3)
+    missed = solve(tolerance=1e-15, max_runs=3)
     archive = ar.Archive(tmp_path)
     archive.add(missed)
     assert missed.outcome == "not converged"
     assert archive.find(missed.anneal, 1e-3).identity == missed.identity
-    assert archive.find(missed.anneal, 1e-12) is None
+    assert archive.find(missed.anneal, 1e-15) is None
 
 
 def test_the_table_reads_well(three, tmp_path):
@@ -298,7 +298,7 @@ def test_a_reference_of_an_unknown_backend_is_refused_with_its_name(truth, tmp_p
     archive = ar.Archive(tmp_path)
     archive.add(truth)
     monkeypatch.setattr(records, "BACKENDS", {})
-    with pytest.raises(ar.ArchiveError, match=r"back-end StateVector.*; install a library version"):
+    with pytest.raises(ar.ArchiveError, match=r"back-end StateVector.*; install the library version"):
         archive.open(truth.identity)
     assert "back-end StateVector" in archive.audit().rows[0].problem
 

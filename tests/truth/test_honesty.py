@@ -1,0 +1,158 @@
+"""Are the error bars of `reference` honest and useful? Judged on anneals that none of its constants was tuned on."""
+
+from __future__ import annotations
+
+import itertools
+
+import numpy as np
+import pytest
+from scipy.integrate import solve_ivp
+
+import anneal_ref as ar
+from anneal_ref.truth.reference import fixed_by_symmetry, reference
+
+RAMP = ar.Schedule.linear(transverse=(8.0, 0.0), problem=(0.0, 6.0))
+CURVED = ar.Schedule.polynomial(transverse=[20.0, -60.0, 60.0, -20.0], problem=[0.0, 0.5, 9.5])
+TABLE = ar.Schedule.from_table(
+    [0, 0.15, 0.4, 0.6, 0.85, 1], [3.1, 2.0, 0.8, 0.3, 0.02, 0], [0.0, 0.2, 0.7, 1.3, 2.0, 2.2], unit="GHz"
+)
+PAUSE = ar.Waveform([0, 0.4, 0.6, 1], [0, 0.5, 0.5, 1])
+EXACT = ar.StateVector(tolerance=1e-11).finer("step")
+
+
+def catalogue():
+    """Sixty anneals of 4 to 10 spins: lattices, couplings, fields, weights, schedules, durations, starts, waveforms."""
+    graphs = [
+        ar.lattices.chain(9),
+        ar.lattices.chain(6, periodic=True),
+        ar.lattices.ladder(4),
+        ar.lattices.square(3, 3),
+        ar.lattices.complete(5),
+        ar.lattices.biclique(3, 4),
+        ar.lattices.random_regular(8, 3, seed=2),
+        ar.lattices.square(2, 5),
+        ar.lattices.complete(7),
+        ar.lattices.from_edges(4, [(0, 1), (1, 2)]),
+    ]
+    laws = [ar.disorder.plus_minus(), ar.disorder.gaussian(0.7), ar.disorder.uniform(-1.0, 1.0)]
+    fields = [None, ar.disorder.gaussian(0.4), None, ar.disorder.constant(0.3)]
+    weights = [None, None, ar.disorder.uniform(0.7, 1.3)]
+    for k in range(60):
+        instance = ar.draw_instance(graphs[k % 10], laws[k % 3], fields[k % 4], weights[(k // 2) % 3], seed=700 + k)
+        yield ar.Anneal(
+            instance,
+            (RAMP, CURVED, TABLE)[(k // 3) % 3],
+            duration=(0.4, 1.0, 2.5, 7.0)[(k // 5) % 4],
+            start="ground" if k % 7 == 0 else "plus",
+            waveform=PAUSE if k % 11 == 0 else None,
+        )
+
+
+def deviations(anneals, backends):
+    """Errors and bars of all entries that symmetry does not fix, and the number of the anneal that they belong to."""
+    errors, bars, owner = [], [], []
+    for k, (anneal, backend) in enumerate(zip(anneals, itertools.cycle(backends), strict=False)):
+        truth = reference(anneal, tolerance=1e-2, backend=backend, samples=1)
+        assert truth.outcome == "converged"
+        found, exact = truth.moments(), EXACT.evolve(anneal).moments()
+        z_zero, zz_zero = fixed_by_symmetry(anneal)
+        free_entries = {"z": ~z_zero, "zz": np.triu(~zz_zero, 1), "x": np.full(anneal.n_sites, True)}
+        for name, free in free_entries.items():
+            one, other = getattr(found, name), getattr(exact, name)
+            errors.append(np.abs(one.value - other.value)[free])
+            bars.append(one.num[free])
+            owner.append(np.full(len(bars[-1]), k))
+    return np.concatenate(errors), np.concatenate(bars), np.concatenate(owner)
+
+
+def check(errors, bars):
+    """Honest: at least 95 % of the errors lie within their bars. Useful: the median bar is at most 10 median errors."""
+    covered = np.mean(errors <= bars)
+    assert covered >= 0.95, f"not honest: {covered:.1%} of the errors lie within their bars"
+    ratio = np.median(bars) / np.median(errors)
+    assert ratio <= 10, f"not useful: the median bar is {ratio:.3g} median errors"
+
+
+@pytest.fixture(scope="module")
+def measured():
+    tolerances = (1e-2, 1e-3, 1e-4, 1e-6, 1e-7)  # of the coarsest runs
+    return deviations(catalogue(), [ar.StateVector(tolerance=tolerance) for tolerance in tolerances])
+
+
+def test_bars_are_honest_and_useful(measured):
+    errors, bars, owner = measured
+    assert len(errors) > 1500
+    check(errors, bars)
+    missed = np.bincount(owner, errors > bars) > 0
+    assert missed.mean() <= 0.1
+
+
+def test_bars_follow_the_errors(measured):
+    errors, bars = (np.argsort(np.argsort(values)) for values in measured[:2])
+    assert np.corrcoef(errors, bars)[0, 1] > 0.6
+
+
+@pytest.mark.parametrize(
+    ("spoil", "verdict"),
+    [
+        (lambda errors, bars: bars / 10, "not honest"),
+        (lambda errors, bars: np.full_like(bars, np.median(bars)), "not honest"),
+        (lambda errors, bars: np.full_like(bars, np.quantile(errors, 0.96)), "not useful"),
+        (lambda errors, bars: np.full_like(bars, 1e-2), "not useful"),
+        (lambda errors, bars: 100 * bars, "not useful"),
+        (lambda errors, bars: np.random.default_rng(1).permutation(bars), "not honest"),
+    ],
+    ids=["a tenth", "constant, median", "constant, wide", "the tolerance", "too wide", "of other entries"],
+)
+def test_wrong_bars_fail_the_same_check(spoil, verdict, measured):
+    errors, bars, _ = measured
+    with pytest.raises(AssertionError, match=verdict):
+        check(errors, spoil(errors, bars))
+
+
+@pytest.mark.parametrize(
+    "backend",
+    [
+        ar.StateVector(tolerance=1e-4),
+        ar.StateVector(tolerance=1e-3, scheme="strang"),
+        ar.StateVector(tolerance=1e-2, scheme="blanes-moan-6"),
+        ar.StateVector(tolerance=3e-3, scheme="blanes-moan-4"),
+        ar.StateVector(tolerance=1e-4, precision="single"),
+    ],
+    ids=["tighter", "second order", "loose sixth order", "loose fourth order", "single precision"],
+)
+def test_other_settings_are_honest_too(backend):
+    errors, bars, _ = deviations(list(catalogue())[::4], [backend])
+    assert np.mean(errors <= bars) >= 0.95
+    assert np.median(bars) <= 15 * np.median(errors)
+
+
+def test_the_default_is_far_better_than_asked():
+    for anneal in list(catalogue())[::9]:
+        truth = reference(anneal, tolerance=1e-3, samples=1)
+        assert len(truth.runs) == 3
+        assert truth.outcome == "converged"
+        assert truth.error < 1e-6
+
+
+def test_the_known_answers_are_right():
+    """Against an explicit Runge-Kutta method on the dense Hamiltonian, which shares nothing with the state vector."""
+    for anneal in [one for one in catalogue() if one.n_sites <= 5 and one.start == "plus"][::3]:
+        n, instance = anneal.n_sites, anneal.instance
+        spins = 1 - 2 * ((np.arange(1 << n)[:, None] >> np.arange(n)) & 1)
+        energies = spins @ instance.fields
+        for (i, j), coupling in zip(instance.lattice.edges, instance.couplings, strict=True):
+            energies = energies + coupling * spins[:, i] * spins[:, j]
+        flips = [np.arange(1 << n) ^ (1 << i) for i in range(n)]
+
+        def slope(t, psi, anneal=anneal, energies=energies, flips=flips):
+            turned = sum(w * psi[flip] for w, flip in zip(anneal.instance.transverse, flips, strict=True))
+            return -1j * (anneal.problem(t) * energies * psi - anneal.transverse(t) * turned)
+
+        psi = np.full(1 << n, 2.0 ** (-n / 2), dtype=complex)
+        for t0, t1 in zip(anneal.knots[:-1], anneal.knots[1:], strict=True):
+            psi = solve_ivp(slope, (t0, t1), psi, method="DOP853", rtol=1e-12, atol=1e-13).y[:, -1]
+        p = np.abs(psi) ** 2
+        exact = EXACT.evolve(anneal).moments()
+        np.testing.assert_allclose(exact.zz.value, spins.T @ (p[:, None] * spins), atol=2e-10)
+        np.testing.assert_allclose(exact.z.value, spins.T @ p, atol=2e-10)
