@@ -129,7 +129,7 @@ class Lattice:
             order = np.argsort(raw_words(self.n_sites, seed, 0, "dilution"), kind="stable")
             gone = self.labels[order[:count]]
         else:
-            gone = whole("dead", list(dead or ()), (None,))
+            gone = whole("dead", list(() if dead is None else dead), (None,))
         unknown = np.setdiff1d(gone, self.labels)
         if unknown.size:
             raise InputError(f"dead must list sites of the lattice ({self._sites_text()}); got {int(unknown[0])}")
@@ -139,14 +139,16 @@ class Lattice:
         if not alive.any():
             raise InputError(f"a lattice needs at least 1 site; all {self.n_sites} sites would be dead")
         number_of = np.cumsum(alive) - 1
-        recipe = None
+        name, recipe, count = self.name, None, len(gone)
         if self.recipe is not None:
-            recipe = {**self.recipe, "dead": sorted([*self.recipe.get("dead", []), *gone.tolist()])}
+            before = self.recipe.get("dead", [])
+            recipe = {**self.recipe, "dead": sorted([*before, *gone.tolist()])}
+            name, count = name.removesuffix(_dead_text(len(before))), count + len(before)
         return Lattice(
             int(alive.sum()),
             number_of[self.edges[alive[self.edges].all(axis=1)]],
             None if self.coordinates is None else self.coordinates[alive],
-            f"{self.name}, {len(gone)} dead" if len(gone) else self.name,
+            name + _dead_text(count),
             self.labels[alive],
             recipe,
         )
@@ -235,6 +237,10 @@ def _edges(given: ArrayLike, n: int) -> NDArray[np.intp]:
             "add their couplings up in one edge"
         )
     return edges
+
+
+def _dead_text(count: int) -> str:
+    return f", {count} dead" if count else ""
 
 
 def _pair(edge: NDArray[np.intp]) -> str:
