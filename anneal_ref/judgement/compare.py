@@ -115,6 +115,8 @@ def compare(
     scores["correlation_error"] = correlation_score(correlation, floor, level)
     if connected:
         notes.append("with fields, the correlation error is that of <ZZ> - <Z><Z>, and <Z> is scored apart")
+    if correlation.squared < 0:
+        notes.append("the correlation error is negative: the samples show nothing beyond the noise of the shots")
     if correlation.distance.below(0.0) < SUSPICIOUS:
         notes.append("the samples agree with the truth better than independent shots would; check where they come from")
 
@@ -133,7 +135,7 @@ def compare(
         try:
             scores["fidelity"] = fidelity(spins, table, not connected, clusters, level, seeds[1] + seed)
         except NotSupported as refusal:
-            notes.append(f"no fidelity: {refusal}")
+            notes.append(str(refusal))
     if table is not None if likelihood is None else likelihood:
         score, z, strays = likelihood_score(reference, spins, clusters, perfect, level)
         scores["log_likelihood"], sigma["log_likelihood"] = score, z

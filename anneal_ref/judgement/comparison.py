@@ -93,6 +93,9 @@ class Comparison:
             label = name.replace("_", " ") + unit
             row = f"  {label:<30}{score.value:>10.4g}   {interval:<22}{_perfect(score.floor):<22}{sigma}"
             lines.append(row.rstrip())
+            if name == "correlation_error":
+                plain = f"{self.floor.raw_mean:.3g}, below {self.floor.raw_quantile:.3g} (95%)"
+                lines.append(f"  {'  plain, shot noise included':<30}{self.correlation.raw:>10.4g}   {'':<22}{plain}")
         found, level = self.pairs.significant(self.level), f"{self.level:.0%}"
         lines.append(f"pairs of spins that differ at level {level} (Holm): {found} of {len(self.pairs)}; the largest:")
         lines.append(self.pairs.text())

@@ -87,7 +87,7 @@ def fidelity(
     need, shots = support(p), len(spins)
     if shots < need.shots_needed:
         raise NotSupported(
-            f"a fidelity takes about {SHOTS_PER_STATE} shots for each of the {need.states} states that hold "
+            f"the shots do not support a fidelity: it takes about {SHOTS_PER_STATE} for each of the {need.states} states that hold "
             f"{SUPPORT_SHARE:.0%} of the probability, {need.shots_needed} in all; there are {shots}",
             alternatives=("log_likelihood",),
         )

@@ -138,7 +138,7 @@ class SquaredDistance:
         place = float(max(shape + (value - theta) * math.sqrt(shape / variance), 0.0))
         p = float(special.gammaincc(shape, place) if upper_tail else special.gammainc(shape, place))
         # the variance itself is estimated: Student's tail in place of the normal one
-        return float(special.stdtr(f, special.ndtri(p))) if 0 < p < 1 else p
+        return float(special.stdtr(f, float(special.ndtri(p)))) if 0 < p < 1 else p
 
     def _tilt(self, theta: float) -> float:
         """Tilt that belongs to theta."""
@@ -216,14 +216,16 @@ def _distance(
         square += sums.T @ sums
     shots, spread = clusters.shots, clusters.spread
     mean = total / shots
-    cross = np.outer(weighted, mean)
-    residual = square - cross - cross.T + np.sum(clusters.sizes.astype(float) ** 2) * np.outer(mean, mean)
-    covariance = residual / (shots**2 * spread)
+    cross, sizes2 = np.outer(weighted, mean), float(np.sum(clusters.sizes.astype(float) ** 2))
+    covariance = (square - cross - cross.T + sizes2 * np.outer(mean, mean)) / (shots**2 * spread)
     d, f = mean - truth, clusters.freedom
+    # mean of y_a . y_b over pairs of shots of different clusters, y being a shot's features minus the truth
+    within = float(np.trace(square) - 2 * weighted @ truth + sizes2 * truth @ truth)
+    unbiased = (shots**2 * float(d @ d) - within) / (shots**2 * spread)
     padded = covariance + PSEUDO_SHOTS / shots**2 * (np.eye(size) + np.outer(mean, mean))
     spectrum, vectors = np.linalg.eigh(padded)
     return SquaredDistance(
-        float(np.trace(covariance)),
+        float(d @ d) - unbiased,
         frozen(np.maximum(spectrum, 1e-12 * spectrum[-1])),
         frozen((vectors.T @ d) ** 2),
         _traces(padded, f),
