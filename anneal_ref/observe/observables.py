@@ -1,4 +1,7 @@
-"""Observables: plain functions of moments that return plain numbers.
+"""Observables: plain functions of moments, or of spins, that return plain numbers.
+
+The functions of moments are below; those of spins (`anneal_ref.observe.overlaps`) and the readout correction
+(`anneal_ref.observe.readout`) can be had from here too.
 
 Their errors come from whoever owns the data and knows how the entries vary together: `samples.estimate(f)`,
 `reference.estimate(f)`. The square of a noisy number is too large on average by its variance. `q2` and `q2_full`
@@ -19,10 +22,28 @@ from numpy.typing import ArrayLike, NDArray
 from anneal_ref.base.checks import finite, number
 from anneal_ref.base.errors import InputError
 from anneal_ref.observe.moments import Moments
+from anneal_ref.observe.overlaps import (
+    binder_glass,
+    binder_magnet,
+    energies,
+    energy_distribution,
+    energy_histogram,
+    glass_ratio,
+    magnet_moments,
+    overlap_moments,
+    products,
+)
+from anneal_ref.observe.readout import apply_flips, undo_flips
 
 if TYPE_CHECKING:
     from anneal_ref.model.instances import Instance
     from anneal_ref.model.lattices import Lattice
+
+__all__ = [
+    "apply_flips", "binder_glass", "binder_magnet", "connected", "energies", "energy_distribution", "energy_histogram",
+    "glass_ratio", "kink_density", "magnet_moments", "magnetisation", "magnetisation_squared", "overlap_moments",
+    "problem_energy", "products", "q2", "q2_full", "residual_energy", "structure_factor", "undo_flips",
+]  # fmt: skip
 
 
 def problem_energy(moments: Moments, instance: Instance) -> float:

@@ -135,7 +135,7 @@ class Samples:
         """Return the shots of several runs of one instance, with gauges undone and the origin of each shot kept.
 
         The groups of the result are the gauges where any run has one, else the batches where any run has one, else the
-        runs; groups that a run has already stay apart.
+        runs; groups that a run has already stay apart. A single run comes back with its gauge undone and no new groups.
 
         Raises
         ------
@@ -145,6 +145,8 @@ class Samples:
         if not runs:
             raise InputError("concatenate takes at least one run; got none")
         plain = [run.ungauged() for run in runs]
+        if len(plain) == 1:
+            return plain[0]
         for k, run in enumerate(plain):
             if run.n_sites != plain[0].n_sites:
                 sizes = f"run 0 has {plain[0].n_sites}, run {k} has {run.n_sites}"

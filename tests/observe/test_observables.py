@@ -76,7 +76,8 @@ def test_kinks_are_counted_on_bonds_with_a_coupling() -> None:
     lattice = lattices.chain(4)
     instance = Instance(lattice, [-1.0, 2.0, 0.0])
     spins = np.array([[1, 1, -1, 1], [1, -1, -1, 1]], dtype=np.int8)
-    # unsatisfied: none of two; both of two
+    for shot, unsatisfied in zip(spins, (0.0, 1.0), strict=True):  # none of the two bonds; both of them
+        assert observables.kink_density(Samples([shot]).moments(), instance) == pytest.approx(unsatisfied)
     assert observables.kink_density(Samples(spins).moments(), instance) == pytest.approx(0.5)
     with pytest.raises(InputError, match="no bond with a coupling"):
         observables.kink_density(Samples(spins).moments(), Instance(lattice, [0, 0, 0]))

@@ -155,6 +155,7 @@ def test_concatenation_groups_by_batch_else_by_run(spins: np.ndarray) -> None:
     np.testing.assert_array_equal(by_batch.groups, np.repeat([0, 1, 0], 40))
     by_run = Samples.concatenate([Samples(spins), Samples(spins)])
     assert by_run.n_groups == 2
+    assert Samples.concatenate([Samples(spins)]).groups is None
     kept = Samples.concatenate([by_run, by_batch, Samples(spins)])
     assert kept.n_groups == 5
 
