@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from anneal_ref.base.checks import integer, number
 from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning, ArchiveError
 from anneal_ref.base.run import Run
-from anneal_ref.base.storage import PART, read_record, write_record
+from anneal_ref.base.storage import PART, Record, read_record, write_record
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.observe.moments import Moments
 from anneal_ref.studies.records import from_record, to_record
@@ -118,11 +118,7 @@ class Archive:
         ArchiveError
             No such file, a damaged one, or one that holds another reference than its name says.
         """
-        path = self.path(identity)
-        reference = read_reference(path)
-        if reference.identity != identity:
-            raise _unusable(path, f"it holds reference {reference.identity}", "rename it, or take it out of the folder")
-        return reference
+        return self._read(identity)[1]
 
     def find(self, anneal: Anneal, tolerance: float = 1e-3) -> Reference | None:
         """Return the best reference for an anneal whose measured error is within the tolerance, or None.
@@ -149,23 +145,23 @@ class Archive:
 
     def table(self) -> str:
         """Return a readable table with a row for each file."""
-        rows = [("reference", "lattice", "spins", "duration", "tolerance", "error", "outcome", "back-end")]
+        rows = [("instance", "spins", "duration", "tolerance", "error", "outcome", "back-end", "identity")]
         for identity in self.list():
             try:
                 found = self.open(identity)
             except ArchiveError as error:
-                rows.append((identity[:12], error.problem, "", "", "", "", "unusable", ""))
+                rows.append(("-", "-", "-", "-", "-", f"unusable: {error.problem}", "-", identity))
                 continue
             rows.append(
                 (
-                    identity[:12],
-                    found.anneal.instance.lattice.name,
+                    found.anneal.instance.name,
                     str(found.n_sites),
                     f"{found.anneal.duration:g}",
                     f"{found.tolerance:g}",
                     f"{found.error:.2g}",
                     found.outcome,
                     type(found.backend).__name__,
+                    identity,
                 )
             )
         return _aligned(rows) if len(rows) > 1 else f"no references in {self.folder}"
@@ -218,13 +214,20 @@ class Archive:
             tuple(sorted(path.name for path in self.folder.glob(f"*{PART}"))),
         )
 
-    def _problem(self, identity: str) -> str | None:
+    def _read(self, identity: str) -> tuple[Record, Reference]:
         path = self.path(identity)
+        record = read_record(path)
+        reference = from_record(record, path)
+        if reference.identity != identity:
+            raise _unusable(path, f"it holds reference {reference.identity}", "rename it, or take it out of the folder")
+        return record, reference
+
+    def _problem(self, identity: str) -> str | None:
         try:
-            reference = self.open(identity)
-            return _inconsistency(reference, read_record(path).arrays)
+            record, reference = self._read(identity)
         except ArchiveError as error:
             return error.problem
+        return _inconsistency(reference, record.arrays)
 
 
 @dataclass(frozen=True, slots=True)

@@ -328,6 +328,8 @@ def reference(
     samples, seed = integer("samples", samples, low=1), integer("seed", seed, low=0)
     max_runs = integer("max_runs", max_runs, low=_RUNS)
     backend = default_backend(tolerance) if backend is None else backend
+    if isinstance(backend, type) or not isinstance(backend, Backend):
+        raise InputError(f"backend must be a back-end such as StateVector(tolerance=1e-6); got {backend!r}")
     if "step" not in backend.knobs:
         raise InputError(f"backend must be one whose step can be refined; got {backend}, with knobs {backend.knobs}")
     _refined(backend, _RUNS - 1).plan(anneal)

@@ -10,6 +10,9 @@ from contextlib import contextmanager
 import h5py
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from hypothesis.extra import numpy as numpy_strategies
 
 from anneal_ref.base import storage
 from anneal_ref.base.errors import ArchiveError, InputError
@@ -53,6 +56,23 @@ def test_round_trip(make, tmp_path):
     assert os.listdir(tmp_path) == ["a.h5"]
 
 
+@given(
+    array=numpy_strategies.arrays(
+        st.sampled_from(["<f8", ">f8", "<f4", "<i8", "<i4", "u1", "i1"]),
+        numpy_strategies.array_shapes(max_dims=3, max_side=5),
+    ),
+    text=st.text(st.characters(exclude_categories=["Cs"], exclude_characters="\0"), max_size=40),
+    number=st.floats(allow_nan=False, allow_infinity=False) | st.integers(-(2**63), 2**63 - 1),
+)
+def test_any_array_and_attribute_come_back(array, text, number, tmp_path_factory):
+    record = Record({"text": text, "number": number}, {"a": array}, {"a": ("x", "y", "z")[: array.ndim]})
+    back = read_record(write_record(tmp_path_factory.getbasetemp() / "any.h5", record))
+    assert back.attributes == record.attributes
+    np.testing.assert_array_equal(back.arrays["a"], array)
+    assert back.arrays["a"].dtype == array.dtype.newbyteorder("<")
+    assert back.dims == record.dims
+
+
 def test_large_arrays_are_chunked_compressed_and_checked(tmp_path):
     path = write_record(tmp_path / "a.h5", big())
     with h5py.File(path) as file:
@@ -90,7 +110,8 @@ def test_a_flipped_bit_is_found_wherever_it_is(tmp_path):
     path = write_record(tmp_path / "a.h5", small())
     whole = path.read_bytes()
     bits = np.random.default_rng(5).integers(0, 8, len(whole))
-    for place in range(len(whole)):
+    ends = [*range(100), *range(len(whole) - 100, len(whole))]
+    for place in sorted({*ends, *range(0, len(whole), 9)}):
         damaged = bytearray(whole)
         damaged[place] ^= 1 << bits[place]
         path.write_bytes(damaged)

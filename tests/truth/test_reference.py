@@ -76,7 +76,7 @@ class Plain:
         n = problem.n_sites
         energies = problem.instance.energies(configurations(n).astype(np.int8))
         psi = np.full(1 << n, 2.0 ** (-n / 2), dtype=complex)
-        times = np.linspace(0, problem.duration, self.steps + 1)
+        times = np.linspace(0, at * problem.duration, self.steps + 1)
         for t0, t1 in zip(times[:-1], times[1:], strict=True):
             half = np.exp(-0.5j * problem.problem_integral(t0, t1) * energies)
             psi = half * psi
@@ -87,6 +87,9 @@ class Plain:
             psi = half * psi
         ledger = {"steps": self.steps, "layers": self.steps, "order": 2, "norm_drift": np.vdot(psi, psi).real - 1}
         return PlainState(problem, psi, ledger, self.noise, self.wander)
+
+    def states(self, problem, at, run=None):
+        return (self.evolve(problem, u) for u in at)
 
 
 def configurations(n):
@@ -308,6 +311,12 @@ def test_input_that_is_refused(arguments, message):
 def test_an_anneal_is_asked_for():
     with pytest.raises(ar.InputError, match="must be an Anneal"):
         reference(anneal().instance)
+
+
+@pytest.mark.parametrize("backend", ["StateVector", ar.StateVector, 1e-3])
+def test_a_backend_is_asked_for(backend):
+    with pytest.raises(ar.InputError, match=r"backend must be a back-end such as StateVector\(tolerance=1e-6\); got"):
+        reference(anneal(), backend=backend)
 
 
 def test_a_backend_without_a_step_is_refused():
