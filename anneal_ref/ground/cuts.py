@@ -17,9 +17,9 @@ from anneal_ref.ground.search import first_guess, rounded, searched, tied
 # what is left of a node after fixing is solved exactly if it takes no more than this (see `solve_exactly`)
 NODE_BUDGET = 2.0**23
 NODE_MEMORY = 2**30
-# rounds of cutting that gain less than this fraction of the gap over this many rounds are the last
-LEAST_GAIN = 0.02
-PATIENCE = 4
+# cutting ends when it gains less than this fraction of the gap over this many rounds
+LEAST_GAIN = 0.002
+PATIENCE = 20
 
 
 @dataclass(order=True, slots=True)
@@ -151,13 +151,22 @@ class _Search:
             if node.bound >= self.energy or stalled:
                 return best
             used = set(node.cuts)
-            new = violated([cut for cut in self.pool if cut not in used], relaxed.x) or separate(self.graph, relaxed.x)
+            new = violated([cut for cut in self.pool if cut not in used], relaxed.x) or self.separated(relaxed.x)
             if not new:
                 return best
             self.pool.update(dict.fromkeys(new))
             if history[-1] > history[-2]:
                 node.cuts = [cut for cut, active in zip(node.cuts, relaxed.active.tolist(), strict=True) if active]
             node.cuts = node.cuts + [cut for cut in new if cut not in set(node.cuts)]
+
+    def separated(self, x: NDArray[np.float64]) -> list[Cut]:
+        """Look for cuts halfway to the best configuration, where they are deeper, then at x itself.
+
+        The best configuration obeys all cuts, so that what is violated halfway is violated at x too.
+        """
+        first, second = self.graph.edges.T
+        inside = self.spins[first] != self.spins[second]
+        return separate(self.graph, (x + inside) / 2) or separate(self.graph, x)
 
     def branch(self, node: _Node, x: NDArray[np.float64], low: NDArray[np.float64], high: NDArray[np.float64]) -> None:
         """Split the box at the free edge that is least decided, the strongest of those."""

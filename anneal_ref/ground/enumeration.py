@@ -5,14 +5,14 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from anneal_ref.base.errors import TooLarge
+from anneal_ref.base.errors import NotSupported
 from anneal_ref.ground.enumeration_kernels import collect, minimum
 from anneal_ref.ground.problem import Problem
 
 # energies of 2^10 inner configurations and the rows of the outer spins that flip most often fit the nearest cache
 INNER_SPINS = 10
-# above this the step counter of the kernel would overflow long after patience has ended
-LARGEST_SPINS = 48
+# some minutes
+MOST_CONFIGURATIONS = 2.0**40
 
 
 def enumeration_cost(problem: Problem) -> float:
@@ -40,8 +40,8 @@ def enumerate_states(problem: Problem, limit: int = 1) -> tuple[int, int, NDArra
 
     Raises
     ------
-    TooLarge
-        More than 48 spins.
+    NotSupported
+        More than 2^40 configurations; before any work.
 
     References
     ----------
@@ -53,12 +53,12 @@ def enumerate_states(problem: Problem, limit: int = 1) -> tuple[int, int, NDArra
     >>> enumerate_states(whole_numbers(3, [(0, 1), (1, 2), (0, 2)], [1, 1, 1]))[:2]
     (-1, 6)
     """
-    if problem.n_sites > LARGEST_SPINS:
-        raise TooLarge(
-            f"enumeration ends at {LARGEST_SPINS} spins; got {problem.n_sites}",
-            needed_bytes=0,
-            available_bytes=0,
-            alternatives=("strips", "cuts"),
+    configurations = enumeration_cost(problem)
+    if configurations > MOST_CONFIGURATIONS:
+        raise NotSupported(
+            f"enumeration of {problem.n_sites} coupled spins would look at {configurations:.2g} configurations; "
+            f"at most {MOST_CONFIGURATIONS:.2g} are allowed",
+            alternatives=("method 'strips'", "method 'cuts'"),
         )
     mirrored = not problem.has_fields
     free, constant = problem.pinned(problem.n_sites - 1) if mirrored else (problem, 0)

@@ -14,7 +14,7 @@ from anneal_ref.ground.strips import eliminate, plan_strips
 # a configuration of the enumeration takes about this fraction of the time of a table entry of the elimination
 ENUMERATION_COST = 2.0**-6
 # up to here enumeration takes milliseconds, and it knows the degeneracy even of numbers with rounding
-ENUMERATION_FIRST = 2.0**24
+ENUMERATION_FIRST = 2.0**26
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -27,9 +27,7 @@ class Solved:
     how: str
 
 
-def solve_exactly(
-    problem: Problem, budget: float, memory: int, limit: int = 1, method: str | None = None
-) -> Solved | None:
+def solve_exactly(problem: Problem, budget: float, memory: int, limit: int = 1) -> Solved | None:
     """Solve by the cheaper of enumeration and strip elimination; None where both exceed the budget.
 
     Parameters
@@ -41,14 +39,11 @@ def solve_exactly(
         Bytes that the elimination may take.
     limit : int
         The most ground states to return.
-    method : {"enumeration", "strips"}, optional
-        Consider only this one.
     """
-    listing = enumeration_cost(problem)
-    cheap = method != "strips" and listing * ENUMERATION_COST <= budget
-    if method != "enumeration" and not (cheap and listing <= ENUMERATION_FIRST):
+    configurations = enumeration_cost(problem)
+    listing = configurations * ENUMERATION_COST
+    if configurations > ENUMERATION_FIRST:
         plan = plan_strips(problem)
-        if plan is not None and plan.cost <= budget and plan.bytes <= memory:
-            if not cheap or plan.cost < listing * ENUMERATION_COST:
-                return Solved(*eliminate(problem, plan, limit, memory), how="strips")
-    return Solved(*enumerate_states(problem, limit), how="enumeration") if cheap else None
+        if plan is not None and plan.cost <= min(budget, listing) and plan.bytes <= memory:
+            return Solved(*eliminate(problem, plan, limit, memory), how="strips")
+    return Solved(*enumerate_states(problem, limit), how="enumeration") if listing <= budget else None

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -127,7 +128,7 @@ def violated(cuts: list[Cut], x: NDArray[np.float64]) -> list[Cut]:
     return [cut for cut, excess in zip(cuts, over.tolist(), strict=True) if excess > LEAST_VIOLATION]
 
 
-def _rows(cuts: list[Cut], n_edges: int) -> tuple[csr_array, NDArray[np.float64]]:
+def _rows(cuts: list[Cut], n_edges: int) -> tuple[Any, NDArray[np.float64]]:
     columns = np.array([edge for cut in cuts for edge in cut.odd + cut.even], dtype=np.int32)
     signs = np.array([sign for cut in cuts for sign in (1.0,) * len(cut.odd) + (-1.0,) * len(cut.even)])
     ends = np.cumsum([0, *(len(cut.odd) + len(cut.even) for cut in cuts)])

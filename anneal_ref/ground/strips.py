@@ -32,9 +32,9 @@ class StripPlan:
     @property
     def bytes(self) -> int:
         """Memory at the peak: tables of energies and counts in use, and the packed choices of all steps."""
-        choices = sum(2 ** max(0, len(frontier) - 2) for frontier in self.ordering.frontiers)
+        choices = sum(1 << max(0, len(frontier) - 2) for frontier in self.ordering.frontiers)
         # up, down and the earlier table, for energies and for counts; further tables are smaller and few
-        return choices + 8 * 8 * 2**self.ordering.width
+        return choices + 8 * 8 * (1 << self.ordering.width)
 
 
 def plan_strips(problem: Problem) -> StripPlan | None:
@@ -99,7 +99,7 @@ def eliminate(
             f"{memory / 2**30:.1f} GiB are allowed: use method 'cuts'",
             needed_bytes=plan.bytes,
             available_bytes=memory,
-            alternatives=("cuts",),
+            alternatives=("method 'cuts'",),
         )
     if plan.pinned is None:
         energy, count, choices = _forward(problem, plan.ordering)
