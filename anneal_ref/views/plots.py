@@ -77,8 +77,9 @@ def correlations(truth: Sequence[Estimate], processor: Sequence[Estimate], ax: A
 
 
 def deviations(
-    lattice: Lattice, bonds: ArrayLike, sites: ArrayLike | None = None, ax: Axes | None = None, limit: float | None = None
-) -> Axes:
+    lattice: Lattice, bonds: ArrayLike, sites: ArrayLike | None = None, ax: Axes | None = None, limit: float | None = None,
+    label: str = "deviation (standard errors)",
+) -> Axes:  # fmt: skip
     """Draw the lattice with its bonds, and its sites, coloured by their deviation from the truth in standard errors.
 
     Two-dimensional coordinates are drawn as they are, three-dimensional ones in parallel projection, a lattice without
@@ -95,6 +96,8 @@ def deviations(
     ax : Axes, optional
     limit : float, optional
         Deviation at the ends of the colour scale; by default the largest one, and at least 3.
+    label : str
+        Of the colour scale.
 
     Returns
     -------
@@ -129,16 +132,15 @@ def deviations(
     size = float(np.clip(3200 / max(lattice.n_sites, 1), 25, 210))
     ax.scatter(where[:, 0], where[:, 1], s=size, c=faces, edgecolors=INK, linewidths=0.9, zorder=3)
     if lattice.n_sites <= 40:
-        for label, (x, y), shade in zip(lattice.labels, where, _shades(sites, scale, lattice.n_sites), strict=True):
-            ax.text(x, y, str(label), ha="center", va="center", fontsize=6.5, color=shade, zorder=4)
+        for site, (x, y), shade in zip(lattice.labels, where, _shades(sites, scale, lattice.n_sites), strict=True):
+            ax.text(x, y, str(site), ha="center", va="center", fontsize=6.5, color=shade, zorder=4)
     ax.set_aspect("equal")
     extent = np.ptp(where, axis=0)
     pad = 0.12 * max(float(extent.max()), 1.0) * (2.2 if arcs.any() else 1.0)
     ax.set(xlim=(where[:, 0].min() - pad, where[:, 0].max() + pad), ylim=(where[:, 1].min() - pad, where[:, 1].max() + pad))
     ax.set_axis_off()
-    what = "deviation of bonds" + (" and sites" if sites is not None else "")
     side: dict[str, Any] = {"location": "bottom", "aspect": 35, "shrink": 0.8} if extent[0] > 1.4 * extent[1] else {"shrink": 0.8}
-    _figure(ax).colorbar(ScalarMappable(scale, DEVIATIONS), ax=ax, label=f"{what} (standard errors)", **side)
+    _figure(ax).colorbar(ScalarMappable(scale, DEVIATIONS), ax=ax, label=label, **side)
     return ax
 
 
@@ -194,7 +196,7 @@ def against_duration(
         ax.set_xscale("log")
     ax.margins(x=0.12, y=0.12)
     ax.set(xlabel=f"duration ({unit})" if unit else "duration", ylabel=quantity)
-    ax.legend(frameon=False, fontsize="x-small", ncols=max(1, min(len(kinds), 3)), loc="best")
+    ax.legend(frameon=False, fontsize="x-small", ncols=max(1, min(len(kinds), 3)), loc="lower left", bbox_to_anchor=(0.0, 1.0))
     return ax
 
 
@@ -229,7 +231,8 @@ def correlation_errors(
         ax.axvline(limit, color=LIMIT, linewidth=1.2, linestyle="--", zorder=1, label=f"limit {limit:g}")
     ax.set_yticks(rows, list(labels))
     ax.set_ylim(-0.7, len(scores) - 0.3)
-    ax.set_xlim(left=min(0.0, *(score.low for score in scores)) if scores else 0.0)
+    least = min((min(score.low, score.value) for score in scores), default=0.0)
+    ax.set_xlim(left=1.15 * least if least < 0 else 0.0)
     ax.set_xlabel("correlation error (relative)")
     ax.legend(frameon=False, fontsize="x-small", ncols=3, loc="lower center", bbox_to_anchor=(0.5, 1.0))
     return ax
