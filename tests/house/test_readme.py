@@ -7,6 +7,8 @@ import sys
 import tomllib
 from pathlib import Path
 
+import pytest
+
 README = (Path(__file__).parents[2] / "README.md").read_text(encoding="utf-8")
 
 
@@ -32,9 +34,5 @@ def test_study_block_is_a_study_but_for_its_files(tmp_path):
     assert tomllib.loads(text)["format"] == 1
     path = tmp_path / "study.toml"
     path.write_text(text, encoding="utf-8")
-    try:
+    with pytest.raises(StudyError, match="schedule.csv"):
         Study.read(path)
-    except StudyError as error:
-        assert "schedule.csv" in str(error)
-    else:
-        raise AssertionError("the schedule file does not exist")
