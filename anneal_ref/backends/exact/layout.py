@@ -19,8 +19,8 @@ from anneal_ref.backends.exact.sweeps import TANGENTS, Tiling
 ITEM_BYTES = {"double": 8, "single": 4}
 PIECE_BYTES = 1 << 14
 """Bytes of a piece: a third of a usual first-level cache."""
-TILE_BYTES = 1 << 18
-"""A state up to this size is swept as one tile, in the second-level cache."""
+TILE_BITS = 18
+"""A state of at most so many bits is swept as one tile, in the second- or third-level cache."""
 LINE = 128
 """Alignment in bytes (two cache lines; they are fetched in pairs)."""
 
@@ -114,8 +114,7 @@ def layout(bits: int, precision: str, low_bits: int | None = None, piece_bits: i
     item = ITEM_BYTES[precision]
     lane_bits = (VECTOR_BYTES // item).bit_length() - 1
     if low_bits is None:
-        one = 2 * item << bits <= TILE_BYTES
-        low_bits = bits if one else (bits + lane_bits + 1) // 2
+        low_bits = bits if bits <= TILE_BITS else (bits + lane_bits + 2) // 2
     if piece_bits is None:
         piece_bits = (PIECE_BYTES // (2 * item)).bit_length() - 1
     if low_bits <= piece_bits + 1:

@@ -8,11 +8,13 @@ from __future__ import annotations
 
 from numba import njit
 
-from anneal_ref.backends.exact.simd import (
+from anneal_ref.backends.exact.bundles import (
     add_currents,
     flip,
     fold,
     gather,
+)
+from anneal_ref.backends.exact.simd import (
     lane_currents,
     lanes_of,
     parity,
@@ -45,7 +47,7 @@ def piece_probabilities(x, o, size, p):  # type: ignore[no-untyped-def]
 
 @njit(cache=True)
 def fold_piece(p, bits, out):  # type: ignore[no-untyped-def]
-    """out[i] = sum of p with the sign of bit i, out[bits] = sum; overwrites p."""
+    """Set out[i] to the sum of p with the sign of bit i, return the plain sum; overwrites p."""
     lanes = lanes_of(p)
     while bits_above(bits, lanes) >= 3:
         step = 1 << (bits - 3)
@@ -194,7 +196,7 @@ def pair_overlap(x, shape, bits, piece, odd, scratch):  # type: ignore[no-untype
 
 @njit(cache=True, nogil=True)
 def chunk_currents(x, shape, bits, start, stop, groups, scratch, pairs, odd, out):  # type: ignore[no-untyped-def]
-    """out (bits + 1,): sums of re im' - im re' for every stored bit, and of the left-out spin, over a chunk of pieces.
+    """Set out (bits + 1,) to sums of re im' - im re' for every stored bit, and for the left-out spin, over a chunk.
 
     groups (., 2): first bit and number of bits (at most 3) taken at once, none across the edge of a piece or a row.
     """

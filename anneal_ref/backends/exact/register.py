@@ -19,12 +19,12 @@ from anneal_ref.base.errors import AnnealRefError, InputError
 
 Floats = NDArray[np.float64]
 
-SHARED_BITS = 17
-"""Threads share a state of at least so many stored bits; below, handing out work costs more than it brings."""
 CALL_AMPLITUDES = 1 << 26
 """Amplitudes treated in one compiled call, so that Ctrl-C is heard within a fraction of a second."""
 RIGHT_ANGLE = (1.5707963267341256, 6.077100506506192e-11)
 """pi/2 in two parts, the first of 33 bits, so that its multiples are exact."""
+QUARTERS = (1, 1j, -1, -1j)
+"""Powers of the imaginary unit."""
 CHUNK_BITS = 9
 """Pieces of a chunk of a read-out (a power of two); fixed, so that sums do not depend on threads."""
 
@@ -92,7 +92,7 @@ class Register:
         self._coupling, self._field = np.zeros((2, bits, bits)), np.zeros((2, bits))
         self._coupling[0, :kept, :kept] = self.couplings[:kept, :kept]
         self._field[0, :kept] = self.couplings[:kept, -1] if self._half else self.fields
-        self._shares = self.threads if place.bits >= SHARED_BITS and self._groups == 2 else 1
+        self._shares = self.threads if self._groups == 2 else 1
         self._scratch = [
             (
                 aligned(space.work, dtype),
@@ -125,7 +125,7 @@ class Register:
         place, kept = self._layout, min(self.n_sites, self._layout.bits)
         low = np.arange(1 << place.low_bits, dtype=np.int64)
         value = np.where(low >> kept == 0, 2.0 ** (-self.n_sites / 2), 0.0)
-        patterns = [self._packed(value * _gauge(low) * (-1j) ** k) for k in range(4)]
+        patterns = [self._packed(value * _gauge(low) * QUARTERS[-k]) for k in range(4)]
         for row in range(place.rows):
             place.blocks(self._x, row)[:] = patterns[row.bit_count() & 3]
         self._whole = True
@@ -314,10 +314,10 @@ class Register:
             values += 1j * view[:, :, 1].reshape(-1)
             stored[row * size : (row + 1) * size] = values * _gauge(index).conj()
         full = np.concatenate([stored, self._parity * stored[::-1]]) if self._half else stored[: 1 << n]
-        cube = full.reshape((2,) * n)  # axis n - 1 - i is site i
-        cube = np.flip(cube, [n - 1 - i for i in range(n) if self._flips >> i & 1])
+        axes = tuple(n - 1 - i for i in range(n) if self._flips >> i & 1)  # axis n - 1 - i is site i
+        cube: NDArray[np.complex128] = np.flip(np.asarray(full).reshape((2,) * n), axes)
         full = np.ascontiguousarray(cube).reshape(-1)
-        full *= 1j ** (self._turns % 4)
+        full *= QUARTERS[self._turns % 4]
         if self._signs:
             full *= 1 - 2.0 * (np.bitwise_count(np.arange(1 << n, dtype=np.int64) & self._signs) & 1)
         return full
@@ -341,7 +341,7 @@ class Register:
             y = np.where(down, y ^ ((1 << n) - 1), y)
         o = place.offsets(y)
         values = self._x[o].astype(np.complex128) + 1j * self._x[o + place.lanes]
-        result: NDArray[np.complex128] = values * _gauge(y).conj() * sign * 1j ** (self._turns % 4)
+        result: NDArray[np.complex128] = values * _gauge(y).conj() * sign * QUARTERS[self._turns % 4]
         return result
 
     def log_probability(self, spins: ArrayLike) -> Floats:
@@ -370,7 +370,7 @@ class Register:
         return z[:n] * frame, zz[:n, :n] * np.outer(frame, frame), x[:n] * behind
 
     def sample(self, shots: int, seed: int) -> NDArray[np.int8]:
-        """Configurations (shots, N) of +-1 drawn from the probabilities; the same for the same seed."""
+        """Draw configurations (shots, N) of +-1 from the probabilities; the same for the same seed."""
         shots = integer("shots", shots, low=0)
         generator = np.random.PCG64(integer("seed", seed, low=0))
         weights = self._weights()
@@ -401,7 +401,7 @@ class Register:
         return aligned(1 << self._layout.piece_bits, np.float64)
 
     def _chunks(self) -> tuple[int, int]:
-        """Number of chunks of a read-out, and pieces in each (as bits)."""
+        """Count the chunks of a read-out, and the pieces in each (as bits)."""
         bits = self._layout.bits - self._layout.piece_bits
         inside = min(bits, CHUNK_BITS)
         return 1 << (bits - inside), inside
@@ -469,8 +469,6 @@ class Register:
         return x
 
 
-
-
 def _stored_bits(n: int, symmetric: bool, precision: str) -> int:
     return n - 1 if _is_half(n, symmetric, precision) else max(n, smallest(precision))
 
@@ -486,7 +484,8 @@ def _bits(mask: int, n: int) -> NDArray[np.int64]:
 
 def _gauge(index: NDArray[np.int64]) -> NDArray[np.complex128]:
     """(-i)^popcount(index)."""
-    return np.array([1, -1j, -1, 1j])[np.bitwise_count(index) & 3]
+    phases: NDArray[np.complex128] = np.array(QUARTERS)[-np.bitwise_count(index).astype(np.int8) & 3]
+    return phases
 
 
 def _triples(first: int, last: int) -> Iterator[tuple[int, int]]:

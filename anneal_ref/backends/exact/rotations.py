@@ -9,14 +9,16 @@ from __future__ import annotations
 
 from numba import njit
 
-from anneal_ref.backends.exact.simd import (
+from anneal_ref.backends.exact.bundles import (
     flip,
     gather,
-    lanes_of,
-    parity,
     scatter,
     turn,
     turn_pair,
+)
+from anneal_ref.backends.exact.simd import (
+    lanes_of,
+    parity,
     vload,
     vneg,
 )

@@ -13,23 +13,24 @@ from typing import Any, NamedTuple
 
 from numba import njit
 
-from anneal_ref.backends.exact.phases import frame_energies, pair_phases, tile_phases
-from anneal_ref.backends.exact.rotations import rotate, rotate_pairs
-from anneal_ref.backends.exact.simd import (
+from anneal_ref.backends.exact.bundles import (
     gather,
-    lanes_of,
-    prefetch,
     scatter,
     times,
     turn,
     turn_lanes,
+)
+from anneal_ref.backends.exact.phases import frame_energies, pair_phases, tile_phases
+from anneal_ref.backends.exact.rotations import rotate, rotate_pairs
+from anneal_ref.backends.exact.simd import (
+    lanes_of,
+    prefetch,
     vfma,
     vload,
     vmul,
     vneg,
     vstore,
 )
-
 
 TANGENTS = 64
 """Room for the tangents of all bits of a tile, below the tables of the lanes."""
@@ -107,7 +108,7 @@ def rows_low(x, o, n, first, w, t, d, r, levels, b, a, ahead):  # type: ignore[n
 
 @njit(cache=True)
 def rows_high(y, o, n, first, w, t, d, r, levels, b, a, x, ahead, count, step, chunk):  # type: ignore[no-untyped-def]
-    """The same without the lanes, on a buffer; asks for `count` chunks of memory rows for the next tile."""
+    """Do the same without the lanes, on a buffer; ask for `count` chunks of memory rows for the next tile."""
     lanes = lanes_of(y)
     size = 16 * lanes
     for row in range(first, first + n):
@@ -167,7 +168,7 @@ def in_place(x, o, p, bit, count, w, t):  # type: ignore[no-untyped-def]
 
 @njit(cache=True)
 def edge_in_place(x, o, p, w, t, f):  # type: ignore[no-untyped-def]
-    """The edge pass of a tile that lies in memory."""
+    """Do the edge pass of a tile that lies in memory."""
     if p.pairs:
         bit = p.bits - 3
         if bit >= p.piece_bits:
@@ -176,9 +177,7 @@ def edge_in_place(x, o, p, w, t, f):  # type: ignore[no-untyped-def]
             n, chunk, u = 1, 2 << bit, 2 << bit
         q = 2 << (bit + 1) if bit + 1 < p.piece_bits else p.stride << (bit + 1 - p.piece_bits)
         a = p.stride
-        rotate_pairs(
-            x, o, o + u, 0, a, 0, q, x, o, o + u, 0, a, 0, q, n, chunk, w, t + bit + 1, w, f, 0, p.odd
-        )
+        rotate_pairs(x, o, o + u, 0, a, 0, q, x, o, o + u, 0, a, 0, q, n, chunk, w, t + bit + 1, w, f, 0, p.odd)
     elif p.edge < p.bits:
         in_place(x, o, p, p.edge, p.bits - p.edge, w, t)
 
@@ -192,7 +191,7 @@ def column(p, c):  # type: ignore[no-untyped-def]
 
 @njit(cache=True)
 def edge_copy(x, y, o, p, c, last, w, t, f, out):  # type: ignore[no-untyped-def]
-    """The edge pass of tile c between memory x and the buffer y at o; `last` is the number of the last chunk."""
+    """Do the edge pass of tile c between memory x and the buffer y at o; `last` numbers the last chunk."""
     s = p.piece_bits - p.chunk_bits
     chunk = 2 << p.chunk_bits
     bit = p.bits - 2 if p.pairs else p.edge
