@@ -1,9 +1,9 @@
 """The ground state of H(0), as the start of an anneal.
 
 With every transverse weight above zero the off-diagonal elements of H(0) have one sign and connect all configurations, so the
-ground state is unique and positive (Perron and Frobenius), and even under the global spin flip when there are no fields. Weights
-below zero are first turned round by Z on their sites. With G(0) = 0 the problem part alone decides: its ground state must be unique,
-or unique up to the global flip; then the even superposition is taken, which is the limit of G(0) -> 0.
+ground state is unique and positive (Perron and Frobenius), and even under the global spin flip when there are no fields. With
+G(0) = 0 the problem part alone decides: its ground state must be unique, or unique up to the global flip; then the even
+superposition is taken, which is the limit of G(0) -> 0.
 """
 
 from __future__ import annotations
@@ -82,14 +82,11 @@ def ground_start(anneal: Anneal) -> GroundStart:
         return _diagonal_ground(energies, symmetric)
     if not weights.all():
         raise NotSupported(
-            "start='ground' needs every transverse weight different from zero, or G(0) = 0; a spin without a transverse term "
+            "start='ground' needs every transverse weight above zero, or G(0) = 0; a spin without a transverse term "
             "at t = 0 leaves the ground state undecided",
             ("start='plus'", "a small transverse weight instead of zero"),
         )
-    found = _positive_ground(energies, np.abs(weights), symmetric)
-    for site in np.flatnonzero(weights < 0):
-        found.amplitudes.reshape(-1, 2, 1 << int(site))[:, 1] *= -1
-    return found
+    return _positive_ground(energies, weights, symmetric)
 
 
 def _diagonal_ground(energies: NDArray[np.float64], symmetric: bool) -> GroundStart:
