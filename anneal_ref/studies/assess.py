@@ -133,13 +133,20 @@ def plan(study: Study, archive: Archive) -> tuple[Planned, ...]:
     for case in study.cases:
         archived = archive.find(case.anneal, tolerance) is not None
         # the coarsest run twice (once reordered), and with half and a quarter of the step
-        costs = [coarse.plan(case.anneal), coarse.finer("step").plan(case.anneal), coarse.finer("step").finer("step").plan(case.anneal)]
+        costs = [
+            coarse.plan(case.anneal),
+            coarse.finer("step").plan(case.anneal),
+            coarse.finer("step").finer("step").plan(case.anneal),
+        ]
         planned.append(Planned(case, costs[-1], costs[0].seconds + sum(cost.seconds for cost in costs), archived))
     return tuple(planned)
 
 
 def solve(
-    study: Study, archive: Archive, executor: Executor | None = None, run: Run = Run()  # noqa: B008
+    study: Study,
+    archive: Archive,
+    executor: Executor | None = None,
+    run: Run = Run(),  # noqa: B008
 ) -> tuple[tuple[Reference, bool], ...]:
     """Return the reference of every case, and whether it was archived already; missing ones are solved and archived.
 
@@ -171,7 +178,10 @@ def solve(
 
 
 def assess(
-    study: Study, archive: Archive, executor: Executor | None = None, run: Run = Run()  # noqa: B008
+    study: Study,
+    archive: Archive,
+    executor: Executor | None = None,
+    run: Run = Run(),  # noqa: B008
 ) -> Verdict:
     """Judge a processor: solve what is missing, compare every case, pool per duration, decide.
 
@@ -210,11 +220,11 @@ def assess(
             bar.update(note=case.label)
     durations = sorted({case.anneal.duration for case in study.cases})
     groups = {at: [one for one in judged if one.case.anneal.duration == at] for at in durations}
-    pooled = tuple((at, pool([one.comparison for one in group], acceptance, acceptance.level)) for at, group in groups.items())
-    tests = len(durations) * len(acceptance.limits)
-    findings = tuple(
-        (at, finding) for at, group in pooled for finding in _findings(study, groups[at], group, tests)
+    pooled = tuple(
+        (at, pool([one.comparison for one in group], acceptance, acceptance.level)) for at, group in groups.items()
     )
+    tests = len(durations) * len(acceptance.limits)
+    findings = tuple((at, finding) for at, group in pooled for finding in _findings(study, groups[at], group, tests))
     decision = decide([finding for _, finding in findings], acceptance.level)
     return Verdict(study, tuple(judged), pooled, decision, findings, provenance())
 
@@ -227,12 +237,14 @@ def _findings(study: Study, group: Sequence[Judged], pooled: Pooled, tests: int)
     findings = []
     for name, limit in acceptance.limits.items():
         if name == "correlation_error":
-            findings.append(judge_correlation_error(pooled.correlation, limit, pooled.n_shots, acceptance.level, tests, unit))
+            findings.append(
+                judge_correlation_error(pooled.correlation, limit, pooled.n_shots, acceptance.level, tests, unit)
+            )
             continue
         scores = [one.comparison.scores[name].estimate for one in group]
         truths = [one.comparison.truth[name] for one in group]
         measured, target = _mean(scores), _mean(truths)
-        quantile = partial(special.stdtrit, _freedom(scores, [one.comparison.n_clusters for one in group]))
+        quantile = partial(_student, _freedom(scores, [one.comparison.n_clusters for one in group]))
         findings.append(
             judge_distance(
                 name, float(measured) - float(target), float(measured.stat), float(target.num), limit, pooled.n_shots,
@@ -242,7 +254,9 @@ def _findings(study: Study, group: Sequence[Judged], pooled: Pooled, tests: int)
     return findings
 
 
-def _solved(study: Study, missing: Sequence[int], executor: Executor | None, run: Run) -> Iterator[tuple[int, Reference]]:
+def _solved(
+    study: Study, missing: Sequence[int], executor: Executor | None, run: Run
+) -> Iterator[tuple[int, Reference]]:
     """Give the references of some cases as they get ready."""
     truth = study.table.truth
     if executor is None:
@@ -250,7 +264,8 @@ def _solved(study: Study, missing: Sequence[int], executor: Executor | None, run
             yield k, _solve_one(study.cases[k].anneal, truth.tolerance, truth.samples, truth.seed, run.threads)
         return
     jobs: dict[Future[Reference], int] = {
-        executor.submit(_solve_one, study.cases[k].anneal, truth.tolerance, truth.samples, truth.seed, 1): k for k in missing
+        executor.submit(_solve_one, study.cases[k].anneal, truth.tolerance, truth.samples, truth.seed, 1): k
+        for k in missing
     }
     try:
         for job in as_completed(jobs):
@@ -265,11 +280,18 @@ def _solve_one(anneal: Anneal, tolerance: float, samples: int, seed: int, thread
     return reference(anneal, tolerance, samples=samples, seed=seed, run=Run(threads, progress=False))
 
 
+def _student(freedom: float, p: float) -> float:
+    """Return a quantile of Student's t."""
+    return float(special.stdtrit(freedom, p))
+
+
 def _mean(estimates: Sequence[Estimate]) -> Estimate:
     """Average over instances: independent shots, numerical errors in one direction."""
     count = len(estimates)
     stat = float(np.sqrt(sum(float(one.stat) ** 2 for one in estimates))) / count
-    return Estimate(sum(float(one) for one in estimates) / count, stat, sum(float(one.num) for one in estimates) / count)
+    return Estimate(
+        sum(float(one) for one in estimates) / count, stat, sum(float(one.num) for one in estimates) / count
+    )
 
 
 def _freedom(scores: Sequence[Estimate], clusters: Sequence[int]) -> float:

@@ -20,7 +20,8 @@ from anneal_ref.model.schedules import Schedule
 from anneal_ref.studies.schema import InstanceTable, LatticeTable, LawTable, ScheduleTable
 
 LATTICES = (
-    "biclique", "chain", "complete", "cubic", "diamond", "honeycomb", "ladder", "random_regular", "square", "triangular",
+    "biclique", "chain", "complete", "cubic", "diamond", "honeycomb", "ladder", "random_regular", "square",
+    "triangular",
 )  # fmt: skip
 
 
@@ -60,7 +61,13 @@ def make_instance(table: InstanceTable, k: int, path: Path) -> Instance:
     transverse = _law(table.transverse, f"{where}.transverse", path)
     try:
         return draw_instance(
-            lattice, couplings, fields, transverse, seed=table.seed or 0, index=table.index or 0, normalise=table.normalise
+            lattice,
+            couplings,
+            fields,
+            transverse,
+            seed=table.seed or 0,
+            index=table.index or 0,
+            normalise=table.normalise,
         )
     except AnnealRefError as error:
         raise StudyError(f"{path}: `{where}` ('{table.name}'): {error}") from error
@@ -69,7 +76,9 @@ def make_instance(table: InstanceTable, k: int, path: Path) -> Instance:
 def _lattice(table: LatticeTable | None, where: str, path: Path) -> Lattice:
     kind = table.kind if table is not None else ""
     if table is None or kind not in LATTICES:
-        raise StudyError(f"{path}: `{where}.kind` must be one of {', '.join(LATTICES)}; got '{kind}'{nearest(kind, LATTICES)}")
+        raise StudyError(
+            f"{path}: `{where}.kind` must be one of {', '.join(LATTICES)}; got '{kind}'{nearest(kind, LATTICES)}"
+        )
     lattice: Lattice = _called(getattr(lattices, kind), dict(table.model_extra or {}), where, path)
     try:
         return lattice if table.dead is None else lattice.diluted(dead=table.dead)
@@ -104,10 +113,15 @@ def _called(function: Callable[..., Any], arguments: dict[str, Any], where: str,
     parameters = inspect.signature(function).parameters
     for key in arguments:
         if key not in parameters:
-            raise StudyError(f"{path}: unknown key `{where}.{key}`; {function.__name__} takes {', '.join(parameters) or 'none'}{nearest(key, parameters)}")
+            raise StudyError(
+                f"{path}: unknown key `{where}.{key}`; {function.__name__} takes "
+                f"{', '.join(parameters) or 'none'}{nearest(key, parameters)}"
+            )
     missing = [key for key, one in parameters.items() if one.default is one.empty and key not in arguments]
     if missing:
-        raise StudyError(f"{path}: key `{where}.{missing[0]}` is missing; {function.__name__} takes {', '.join(parameters)}")
+        raise StudyError(
+            f"{path}: key `{where}.{missing[0]}` is missing; {function.__name__} takes {', '.join(parameters)}"
+        )
     try:
         return function(**{key: tuple(value) if isinstance(value, list) else value for key, value in arguments.items()})
     except AnnealRefError as error:

@@ -40,7 +40,7 @@ class ScheduleTable(Table):
 
     @model_validator(mode="after")
     def _one_form(self) -> ScheduleTable:
-        forms = {
+        forms: dict[str, list[object]] = {
             "`file`": [self.file],
             "`s`, `transverse` and `problem`": [self.s, self.transverse, self.problem],
             "`transverse_polynomial` and `problem_polynomial`": [self.transverse_polynomial, self.problem_polynomial],
@@ -115,14 +115,18 @@ class InstanceTable(Table):
 
     @model_validator(mode="after")
     def _one_form(self) -> InstanceTable:
-        drawn = {"lattice": self.lattice, "couplings": self.couplings, "fields": self.fields}
+        drawn: dict[str, object] = {"lattice": self.lattice, "couplings": self.couplings, "fields": self.fields}
         drawn |= {"transverse": self.transverse, "seed": self.seed, "index": self.index, "normalise": self.normalise}
         given = [key for key, value in drawn.items() if value is not None]
         if self.file is not None and given:
             raise ValueError(f"`file` holds the whole instance; take away {', '.join(f'`{key}`' for key in given)}")
         if self.file is None and (self.lattice is None or self.couplings is None):
             raise ValueError("give either `file`, or `lattice` and `couplings`")
-        random = [law for law in (self.couplings, self.fields, self.transverse) if isinstance(law, LawTable) and law.law != "constant"]
+        random = [
+            law
+            for law in (self.couplings, self.fields, self.transverse)
+            if isinstance(law, LawTable) and law.law != "constant"
+        ]
         if random and self.seed is None:
             raise ValueError("drawn numbers need a `seed`, a whole number of at least 0")
         return self
@@ -166,7 +170,9 @@ class StudyTable(Table):
             raise ValueError(f"each instance needs a name of its own; {', '.join(map(repr, twice))} comes twice")
         product = self.durations is not None or self.samples.files is not None
         if product == (self.case is not None):
-            raise ValueError("give either `durations` with `samples.files` (every instance at every duration), or `[[case]]` tables")
+            raise ValueError(
+                "give either `durations` with `samples.files` (every instance at every duration), or `[[case]]` tables"
+            )
         if product and (not self.durations or self.samples.files is None):
             raise ValueError("`durations` and `samples.files` belong together; give both")
         if self.durations is not None and (len(set(self.durations)) < len(self.durations) or min(self.durations) <= 0):
@@ -194,7 +200,9 @@ def read_table(path: Path) -> StudyTable:
         raise StudyError(f"{path} is not a TOML file: {error}") from error
     if data.get("format") != FORMAT:
         given = f"got {data['format']!r}" if "format" in data else "there is none"
-        raise StudyError(f"{path}: `format` must be {FORMAT}, the format of study files that this version reads; {given}")
+        raise StudyError(
+            f"{path}: `format` must be {FORMAT}, the format of study files that this version reads; {given}"
+        )
     try:
         return StudyTable.model_validate(data)
     except ValidationError as error:
@@ -238,7 +246,9 @@ def _sentence(fault: Any) -> str:
     text = f"{where} {message}; got {_toml(value)}"
     allowed = fault.get("ctx", {}).get("expected")
     if allowed and isinstance(value, str):
-        near = difflib.get_close_matches(value, [word.strip("'") for word in allowed.replace(" or ", ", ").split(", ")], n=1)
+        near = difflib.get_close_matches(
+            value, [word.strip("'") for word in allowed.replace(" or ", ", ").split(", ")], n=1
+        )
         text += f"; did you mean '{near[0]}'?" if near else ""
     return text
 

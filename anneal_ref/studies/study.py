@@ -36,8 +36,8 @@ A study is a TOML file that is pleasant to write by hand. Paths are relative to 
 
     [[instance]]                                 # as many as you like
     name = "ladder"
-    lattice = { kind = "ladder", n = 6, periodic = true }   # any function of `anneal_ref.lattices`; dead = [3, 7] takes sites away
-    couplings = { law = "plus_minus" }           # plus_minus | gaussian, sigma | uniform, low, high | levels, k, zero | constant, value | [numbers]
+    lattice = { kind = "ladder", n = 6, periodic = true, dead = [3] }   # a function of `anneal_ref.lattices`
+    couplings = { law = "plus_minus" }           # or a list of numbers; laws and their keys are named below
     fields = { law = "gaussian", sigma = 0.1 }   # optional, and so is transverse (weights of the transverse field)
     seed = 11                                    # names the ensemble; the same seed gives the same numbers everywhere
     index = 0                                    # its member
@@ -48,7 +48,7 @@ A study is a TOML file that is pleasant to write by hand. Paths are relative to 
 
     [samples]
     files = "samples/{instance}_{duration}ns_*.csv"   # all files that match, or a list of such patterns
-    values = "bits"                              # "spins": +1 and -1; "bits": 0 (up) and 1 (down). Default: what the file says
+    values = "bits"                              # "spins": +1, -1; "bits": 0 (up), 1 (down). Default: as the file says
 
 In place of `durations` and `samples.files`, the files can be named case by case:
 
@@ -57,6 +57,7 @@ In place of `durations` and `samples.files`, the files can be named case by case
     duration = 2.0
     samples = ["a.csv", "b.csv"]
 
+Laws: `plus_minus`; `gaussian` with sigma; `uniform` with low, high; `levels` with k, zero; `constant` with value.
 Everything is checked before any work starts: unknown keys, values, missing files, NaN and infinity.
 """
 
@@ -67,6 +68,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Literal
+
+import numpy as np
 
 from anneal_ref.base.errors import AnnealRefError, InputError, StudyError
 from anneal_ref.judgement.equivalence import Acceptance
@@ -171,7 +174,8 @@ class Study:
         Raises
         ------
         StudyError
-            Anything that is not allowed, with file, key, value, what is allowed and the nearest known key; a missing file.
+            Anything that is not allowed, with file, key, value, what is allowed and the nearest known key; a missing
+            file.
         """
         path = Path(path)
         table = read_table(path)
@@ -181,9 +185,14 @@ class Study:
         for name, duration, patterns, where in _pairs(table, path):
             if name not in instances:
                 known = ", ".join(f"'{one}'" for one in instances)
-                raise StudyError(f"{path}: `{where}.instance` = '{name}': no such instance; there are {known}{nearest(name, instances)}")
+                raise StudyError(
+                    f"{path}: `{where}.instance` = '{name}': no such instance; there are "
+                    f"{known}{nearest(name, instances)}"
+                )
             try:
-                waveform = None if table.waveform is None else Waveform(table.waveform.u, table.waveform.s)
+                waveform = (
+                    None if table.waveform is None else Waveform(np.array(table.waveform.u), np.array(table.waveform.s))
+                )
                 anneal = Anneal(instances[name], schedule, duration, table.truth.start, waveform)
             except AnnealRefError as error:
                 raise StudyError(f"{path}: instance '{name}' at duration {duration:g}: {error}") from error
@@ -201,13 +210,20 @@ def time_unit(schedule: Schedule) -> str:
 def _pairs(table: StudyTable, path: Path) -> list[tuple[str, float, list[str], str]]:
     """List (instance, duration, file patterns, key) of every case, in the order of the file."""
     if table.case is not None:
-        cases = [(one.instance, float(one.duration), _listed(one.samples), f"case[{k}]") for k, one in enumerate(table.case)]
+        cases = [
+            (one.instance, float(one.duration), _listed(one.samples), f"case[{k}]") for k, one in enumerate(table.case)
+        ]
         for k, one in enumerate(cases):
             if any(one[:2] == other[:2] for other in cases[:k]):
-                raise StudyError(f"{path}: `case[{k}]` comes twice: instance '{one[0]}' at duration {one[1]:g}; list all files in one case")
+                raise StudyError(
+                    f"{path}: `case[{k}]` comes twice: instance '{one[0]}' at duration {one[1]:g}; list all files in "
+                    "one case"
+                )
         return cases
     patterns = _listed(table.samples.files or [])
-    return [(one.name, float(duration), patterns, "samples") for one in table.instance for duration in table.durations or []]
+    return [
+        (one.name, float(duration), patterns, "samples") for one in table.instance for duration in table.durations or []
+    ]
 
 
 def _listed(value: str | Sequence[str]) -> list[str]:
@@ -219,13 +235,21 @@ def _files(patterns: list[str], name: str, duration: float, path: Path, where: s
     for pattern in patterns:
         spelled = pattern.replace("{instance}", name).replace("{duration}", f"{duration:g}")
         if "{" in spelled or "}" in spelled:
-            raise StudyError(f"{path}: `{where}` = '{pattern}': the fields of a pattern are {{instance}} and {{duration}}")
+            raise StudyError(
+                f"{path}: `{where}` = '{pattern}': the fields of a pattern are {{instance}} and {{duration}}"
+            )
         wild = any(letter in spelled for letter in "*?[")
         if not wild and not (path.parent / spelled).is_file():
-            raise StudyError(f"{path}: `{where}`: there is no samples file {path.parent / spelled}, needed for '{name}' at duration {duration:g}")
+            raise StudyError(
+                f"{path}: `{where}`: there is no samples file {path.parent / spelled}, needed for '{name}' at "
+                f"duration {duration:g}"
+            )
         matches = _glob(path.parent, spelled) if wild else [path.parent / spelled]
         if not matches:
-            raise StudyError(f"{path}: `{where}`: no samples file matches {path.parent / spelled}, needed for '{name}' at duration {duration:g}")
+            raise StudyError(
+                f"{path}: `{where}`: no samples file matches {path.parent / spelled}, needed for '{name}' at "
+                f"duration {duration:g}"
+            )
         found += [match for match in matches if match not in found]
     return tuple(found)
 

@@ -26,7 +26,11 @@ def summary(verdict: Verdict) -> str:
     """Return all tables of a verdict."""
     study, level = verdict.study, verdict.decision.level
     unit = time_unit(study.schedule)
-    lines = [f"{study.name}: {len(verdict.judged)} cases, limit on the correlation error {study.acceptance.correlation_error:g}", ""]
+    lines = [
+        f"{study.name}: {len(verdict.judged)} cases, limit on the correlation error "
+        f"{study.acceptance.correlation_error:g}",
+        "",
+    ]
     lines.append(aligned([HEADINGS, *(case_row(one) for one in verdict.judged)], left=(0, len(HEADINGS) - 1)))
     lines.append("")
     rows = [("pooled at", "instances", "shots", "correlation error", "perfect <", "disorder ±", "verdict")]
@@ -44,7 +48,8 @@ def summary(verdict: Verdict) -> str:
     for one in verdict.judged:
         lines += [f"note: {one.case.label}: {note}" for note in one.comparison.notes if note != refused(one)]
     lines.append(
-        f"intervals at level {level:.0%}; perfect <: what a perfect processor with the same shots stays below in 95 of 100 runs;"
+        f"intervals at level {level:.0%}; perfect <: what a perfect processor with the same shots stays below in 95 "
+        "of 100 runs;"
     )
     lines += ["energy: residual energy per spin in units of J; sigma: (processor - truth) in standard errors", ""]
     lines += [f"{WORDS[verdict.outcome]}. {sentences(verdict)[0]}", *sentences(verdict)[1:]]
@@ -58,8 +63,16 @@ def case_row(one: Judged) -> tuple[str, ...]:
     cells = [one.case.name, str(result.n_sites), f"{result.duration:g}", str(result.n_shots)]
     cells += [interval(result.correlation_error), floor_text(result.correlation_error)]
     for name, score in (("residual_energy", energy), ("order_parameter", order)):
-        cells += [measured(score), f"{float(result.truth[name]):.4f}", f"{result.sigma[name]:+.1f}"] if score else ["-", "-", "-"]
-    cells += [f"{fidelity.value:.3f}", floor_text(fidelity)] if fidelity else ["too few shots" if "shots" in refused(one) else "-", "-"]
+        cells += (
+            [measured(score), f"{float(result.truth[name]):.4f}", f"{result.sigma[name]:+.1f}"]
+            if score
+            else ["-", "-", "-"]
+        )
+    cells += (
+        [f"{fidelity.value:.3f}", floor_text(fidelity)]
+        if fidelity
+        else ["too few shots" if "shots" in refused(one) else "-", "-"]
+    )
     return (*cells, result.verdict or "-")
 
 
@@ -103,7 +116,9 @@ def sentences(verdict: Verdict) -> list[str]:
     lines = [headline(verdict)]
     for duration, finding in verdict.findings:
         if finding.outcome == "inconclusive" and finding.advice:
-            advice = finding.advice.replace("gauges or batches, spread as these would", "gauges or batches, spread as these, would")
+            advice = finding.advice.replace(
+                "gauges or batches, spread as these would", "gauges or batches, spread as these, would"
+            )
             lines.append(f"At {_at(verdict, duration)}, {finding.name.replace('_', ' ')}: {advice}.")
     return lines
 
@@ -132,7 +147,9 @@ def headline(verdict: Verdict) -> str:
 def _details(verdict: Verdict, findings: list[tuple[float, Finding]], most: int = 4) -> str:
     """Say what each finding found, with its duration where there are several."""
     several = len({at for at, _ in findings}) > 1
-    parts = [f"at {_at(verdict, at)} {_said(finding)}" if several else _said(finding) for at, finding in findings[:most]]
+    parts = [
+        f"at {_at(verdict, at)} {_said(finding)}" if several else _said(finding) for at, finding in findings[:most]
+    ]
     return "; ".join(parts) + (f"; and {len(findings) - most} more" if len(findings) > most else "")
 
 
@@ -147,7 +164,9 @@ def _at(verdict: Verdict, duration: float) -> str:
 
 def _said(finding: Finding) -> str:
     relative = finding.name == "correlation_error"
-    low, high, limit = (f"{100 * x:.3g} %" if relative else f"{x:.3g}" for x in (finding.low, finding.high, finding.limit))
+    low, high, limit = (
+        f"{100 * x:.3g} %" if relative else f"{x:.3g}" for x in (finding.low, finding.high, finding.limit)
+    )
     what = "pair correlations are off" if relative else f"the {finding.name.replace('_', ' ')} is off"
     if finding.outcome == "accept":
         return f"{what} by at most {high} (limit {limit})"

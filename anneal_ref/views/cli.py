@@ -20,7 +20,7 @@ import textwrap
 import warnings
 from collections.abc import Sequence
 from pathlib import Path
-from typing import Any, NoReturn
+from typing import NoReturn, TextIO
 
 from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning
 from anneal_ref.base.provenance import library_version
@@ -63,7 +63,10 @@ def _demo(options: argparse.Namespace) -> int:
     from anneal_ref.views.demo import copy_demo
 
     folder = copy_demo(options.demo, options.into)
-    print(f"The demo study is in {folder}{os.sep}. It holds a schedule, a study file and the samples of an invented processor.")
+    print(
+        f"The demo study is in {folder}{os.sep}. It holds a schedule, a study file and the samples of an invented "
+        "processor."
+    )
     print(f"Next:  anneal-ref plan {folder / 'study.toml'}     what the work will cost")
     print(f"       anneal-ref assess {folder / 'study.toml'}   the verdict, with a page of tables and plots")
     return OK
@@ -140,7 +143,14 @@ def _archive(options: argparse.Namespace) -> Path:
     return Path(options.archive) if options.archive else Path(options.study).parent / "truth"
 
 
-def _note(message: Warning | str, category: type[Warning], filename: str, lineno: int, *rest: Any) -> None:
+def _note(
+    message: Warning | str,
+    category: type[Warning],
+    filename: str,
+    lineno: int,
+    file: TextIO | None = None,
+    line: str | None = None,
+) -> None:
     if issubclass(category, AnnealRefWarning):
         print(f"note: {message}", file=sys.stderr)
     else:
@@ -150,7 +160,9 @@ def _note(message: Warning | str, category: type[Warning], filename: str, lineno
 def _farewell(options: argparse.Namespace) -> str:
     kept = ""
     if options.name in ("assess", "reference"):
-        kept = f" References that were finished are in {_archive(options)}{os.sep}; the same command goes on from there."
+        kept = (
+            f" References that were finished are in {_archive(options)}{os.sep}; the same command goes on from there."
+        )
     return f"\nanneal-ref {options.name}: interrupted.{kept}"
 
 
@@ -181,19 +193,27 @@ def _parser() -> argparse.ArgumentParser:
     for command in (plan, reference, assess):
         command.add_argument("study", metavar="STUDY", help="study file (TOML)")
         command.add_argument("--archive", metavar="DIR", help="folder of references (default: truth/ beside the study)")
-    assess.add_argument("--page", metavar="FILE", type=Path, help="where the HTML page goes (default: beside the study)")
+    assess.add_argument(
+        "--page", metavar="FILE", type=Path, help="where the HTML page goes (default: beside the study)"
+    )
     assess.add_argument("--no-page", action="store_true", help="print the table only")
     assess.add_argument("--strict", action="store_true", help="exit 1 on reject and 3 on inconclusive")
 
     compare = commands.add_parser("compare", help="compare samples with one archived reference")
     compare.add_argument("reference", metavar="REFERENCE.h5")
     compare.add_argument("samples", metavar="SAMPLES", nargs="+", help="files of one instance; each a gauge or batch")
-    compare.add_argument("--values", choices=("spins", "bits"), help="what the files hold: +1 and -1, or 0 and 1 (default: what they say)")
+    compare.add_argument(
+        "--values",
+        choices=("spins", "bits"),
+        help="what the files hold: +1 and -1, or 0 and 1 (default: what they say)",
+    )
     compare.set_defaults(command=_compare)
 
     audit = commands.add_parser("audit", help="verify every file of an archive, and recompute some")
     audit.add_argument("archive", metavar="DIR")
-    audit.add_argument("--recompute", metavar="F", type=float, default=0.0, help="fraction of references to solve again")
+    audit.add_argument(
+        "--recompute", metavar="F", type=float, default=0.0, help="fraction of references to solve again"
+    )
     audit.add_argument("--seed", type=int, default=0, help="which ones are drawn")
     audit.set_defaults(command=_audit)
     for command in (reference, assess, audit):

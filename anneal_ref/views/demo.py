@@ -49,7 +49,8 @@ def copy_demo(name: str, into: str | Path | None = None) -> Path:
     if present or (folder.exists() and not folder.is_dir()):
         first = present[0] if present else str(folder)
         raise InputError(
-            f"the demo would overwrite {first}; nothing was written. Give another folder with --into, or take the old one away"
+            f"the demo would overwrite {first}; nothing was written. Give another folder with --into, or take the "
+            "old one away"
         )
     try:
         for place, source in parts:

@@ -5,7 +5,8 @@ anneal of `study.toml` exactly, but for three imperfections that are stated here
 
 - all couplings are 4 % too weak (an error of the energy scale);
 - on the ladder, one coupler is 25 % too weak on top of that, and only that one;
-- on the triangular piece, the spin with label 6 is read out wrongly: up as down with a chance of 3 %, down as up with 6 %.
+- on the triangular piece, the spin with label 6 is read out wrongly: up as down with a chance of 3 %, down as up
+  with 6 %.
 
 Every case has 1000 shots, 40 in each of 25 gauges. The spins are written as the processor reads them, gauge not
 undone, each file with its manifest.
@@ -34,8 +35,8 @@ SEED = 2
 
 def make(folder: Path) -> None:
     """Write the samples files of the study in a folder; they must not be there yet."""
-    from anneal_ref.studies.schema import read_table
     from anneal_ref.studies.building import make_instance, make_schedule
+    from anneal_ref.studies.schema import read_table
 
     path = folder / "study.toml"
     table = read_table(path)
@@ -77,9 +78,7 @@ def read_out(name: str, instance: Instance, spins: NDArray[np.int8], seed: int) 
     return read
 
 
-def as_text(
-    instance: Instance, duration: float, gauge: NDArray[np.int8], batch: int, spins: NDArray[np.int8]
-) -> str:
+def as_text(instance: Instance, duration: float, gauge: NDArray[np.int8], batch: int, spins: NDArray[np.int8]) -> str:
     """Return the text of a samples file with bits: 0 for up, 1 for down."""
     lines = [
         "# format: anneal_ref samples 1",

@@ -22,14 +22,25 @@ def plan_table(study: Study, planned: Sequence[Planned], folder: Path) -> str:
         Of the archive.
     """
     unit = time_unit(study.schedule)
-    heads = ("instance", "lattice", "N", f"duration ({unit})" if unit else "duration", "files", "memory", "layers", "seconds", "")
+    heads = (
+        "instance",
+        "lattice",
+        "N",
+        f"duration ({unit})" if unit else "duration",
+        "files",
+        "memory",
+        "layers",
+        "seconds",
+        "",
+    )
     rows = [heads]
     for one in planned:
         anneal = one.case.anneal
         rows.append(
             (
-                one.case.name, anneal.instance.lattice.name, str(anneal.n_sites), f"{anneal.duration:g}", str(len(one.case.files)),
-                readable_bytes(one.plan.bytes), str(one.plan.layers), f"{one.seconds:.2g}", "archived" if one.archived else "to do",
+                one.case.name, anneal.instance.lattice.name, str(anneal.n_sites), f"{anneal.duration:g}",
+                str(len(one.case.files)), readable_bytes(one.plan.bytes), str(one.plan.layers), f"{one.seconds:.2g}",
+                "archived" if one.archived else "to do",
             )
         )  # fmt: skip
     left = [one for one in planned if not one.archived]
@@ -37,12 +48,14 @@ def plan_table(study: Study, planned: Sequence[Planned], folder: Path) -> str:
     if left:
         seconds, most = sum(one.seconds for one in left), max(one.plan.bytes for one in left)
         lines.append(
-            f"To do: {len(left)} references, about {_duration(seconds)} on one thread, at most {readable_bytes(most)} of memory at a time."
+            f"To do: {len(left)} references, about {_duration(seconds)} on one thread, at most "
+            f"{readable_bytes(most)} of memory at a time."
         )
     else:
         lines.append("Nothing to solve: every reference is in the archive.")
     lines.append(
-        f"Archive: {folder}. Layers are those of the finest of three runs; seconds are those of all runs, roughly, without compilation."
+        f"Archive: {folder}. Layers are those of the finest of three runs; seconds are those of all runs, roughly, "
+        "without compilation."
     )
     return "\n".join(lines)
 

@@ -1,0 +1,272 @@
+"""What the page of a verdict says: facts, sections with tables and pictures, identities."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+import numpy as np
+from numpy.typing import NDArray
+
+from anneal_ref.studies.assess import Judged, Verdict
+from anneal_ref.studies.study import time_unit
+from anneal_ref.studies.summary import (
+    HEADINGS,
+    PAIR_HEADINGS,
+    case_row,
+    floor_text,
+    interval,
+    refused,
+    sentences,
+    suspects,
+    worst_pairs,
+)
+from anneal_ref.views import plots
+from anneal_ref.views.content import Grid, Row, Section, picture
+
+MOST_LATTICES = 8
+MOST_ROWS = 40
+SCORED = (0, 1, 2, 3, 4, 5, 12, 13, 14)
+"""Columns of a case that are about correlations and distributions ..."""
+MEASURED = (0, 2, 6, 7, 8, 9, 10, 11)
+"""... and those about energy and order."""
+
+
+def sections(verdict: Verdict) -> list[Section]:
+    """Return the sections of the page, in their order."""
+    return [_errors(verdict), _agreement(verdict), _energies(verdict), _where(verdict), _method(verdict)]
+
+
+def facts(verdict: Verdict) -> list[tuple[str, str]]:
+    """Return term and value of what a reader asks first."""
+    study, limits = verdict.study, verdict.study.acceptance
+    unit = time_unit(study.schedule)
+    names = list(dict.fromkeys(case.name for case in study.cases))
+    sizes = [one.comparison.n_sites for one in verdict.judged]
+    shots = sum(one.comparison.n_shots for one in verdict.judged)
+    worst = max(one.reference.error for one in verdict.judged)
+    found = [
+        ("Instances", f"{len(names)} ({min(sizes)} to {max(sizes)} spins)"),
+        ("Durations", f"{', '.join(f'{at:g}' for at, _ in verdict.pooled)} {unit}".strip()),
+        ("Shots", f"{shots} in {len(verdict.judged)} cases"),
+        ("Limit on the correlation error", f"{limits.correlation_error:.1%}"),
+    ]
+    for name, limit in limits.limits.items():
+        if name != "correlation_error":
+            found.append((f"Limit on the {name.replace('_', ' ')}", f"{limit:g}"))
+    found += [("Confidence", f"{limits.level:.0%}"), ("Largest error of the truth", f"{worst:.1g}")]
+    return found
+
+
+def _errors(verdict: Verdict) -> Section:
+    rows = [case_row(one) for one in verdict.judged]
+    shown = sorted(verdict.judged, key=lambda one: -one.comparison.correlation_error.value)[:MOST_ROWS]
+    shown = [one for one in verdict.judged if one in shown]
+    unit = time_unit(verdict.study.schedule)
+    labels = [one.case.label for one in shown] + [f"all at {at:g} {unit}".strip() for at, _ in verdict.pooled]
+    scores = [one.comparison.correlation_error for one in shown] + [pooled.score for _, pooled in verdict.pooled]
+    axes = plots.correlation_errors(labels, scores, verdict.study.acceptance.correlation_error)
+    pooled_rows = tuple(
+        Row(
+            (
+                f"all at {at:g} {unit}".strip(), str(pooled.n_instances), str(pooled.n_shots), interval(pooled.score),
+                floor_text(pooled.score), "-" if pooled.score.disorder is None else f"{pooled.score.disorder:.2g}",
+                verdict.outcome_at(at),
+            ),
+            pooled=True,
+        )
+        for at, pooled in verdict.pooled
+    )  # fmt: skip
+    less = "" if len(shown) == len(rows) else f" The {len(shown)} cases with the largest errors are drawn."
+    return Section(
+        "How far the processor departs from quantum dynamics",
+        (
+            "The correlation error is the distance between measured and true pair correlations, relative to the true "
+            "ones, "
+            "with the noise of the finite number of shots taken out. The verdict rests on the rows pooled over all "
+            "instances.",
+            *sentences(verdict)[1:],
+        ),
+        (
+            Grid(
+                ("pooled", "instances", "shots", "correlation error", "perfect stays below", "disorder ±", "verdict"),
+                pooled_rows,
+            ),
+            Grid(
+                tuple(head.replace("perfect <", "perfect stays below") for head in _picked(HEADINGS, SCORED)),
+                tuple(Row(_picked(row, SCORED)) for row in rows),
+                title="Every case",
+            ),
+        ),
+        (
+            picture(
+                axes,
+                "Correlation errors with intervals of every case and pooled, against the acceptance limit",
+                "Correlation error with its interval. The tick is what a perfect processor with the same shots stays "
+                "below in "
+                f"95 of 100 runs: an error to the left of it cannot be told from none.{less}",
+            ),
+        ),
+        _refusals(verdict),
+    )
+
+
+def _refusals(verdict: Verdict, most: int = 6) -> tuple[str, ...]:
+    """Say why cases have no fidelity, the first few of many."""
+    all_of_them = [f"{one.case.label}: {refused(one)}" for one in verdict.judged if refused(one)]
+    more = [f"and {len(all_of_them) - most} more cases without a fidelity"] if len(all_of_them) > most else []
+    return (*all_of_them[:most], *more)
+
+
+def _agreement(verdict: Verdict) -> Section:
+    unit = time_unit(verdict.study.schedule)
+    pictures = []
+    for at, _ in verdict.pooled:
+        group = [one for one in verdict.judged if one.case.anneal.duration == at]
+        axes = plots.correlations(
+            [one.reference.moments().zz for one in group], [one.samples.moments().zz for one in group]
+        )
+        axes.set_title(f"{at:g} {unit}".strip(), fontsize="medium", loc="left")
+        what = f"Measured against true pair correlations at {at:g} {unit}".strip()
+        pictures.append(
+            picture(
+                axes,
+                what,
+                f"{what}, all {len(group)} instances. A line less steep than the diagonal means correlations that "
+                "are too weak.",
+            )
+        )
+    return Section("Correlations, processor against truth", pictures=tuple(pictures))
+
+
+def _energies(verdict: Verdict) -> Section:
+    unit = time_unit(verdict.study.schedule)
+    pictures = []
+    for name, label, caption in (
+        ("residual_energy", "residual energy (J per spin)", "Mean energy above the classical ground state, per spin."),
+        (
+            "order_parameter",
+            "order parameter q2",
+            "Mean of the squared pair correlation over pairs i < j, free of shot bias.",
+        ),
+    ):
+        kept = [one for one in verdict.judged if name in one.comparison.scores and name in one.comparison.truth]
+        if not kept:
+            continue
+        axes = plots.against_duration(
+            [one.case.anneal.duration for one in kept],
+            [one.comparison.truth[name] for one in kept],
+            [one.comparison.scores[name].estimate for one in kept],
+            label, unit=unit, level=verdict.decision.level, instances=[one.case.name for one in kept],
+        )  # fmt: skip
+        pictures.append(
+            picture(
+                axes,
+                f"{label} against duration",
+                f"{caption} Lines: truth; points: processor, with {verdict.decision.level:.0%} intervals.",
+            )
+        )
+    heads = tuple({"energy": "residual energy"}.get(head, head) for head in _picked(HEADINGS, MEASURED))
+    grid = Grid(heads, tuple(Row(_picked(case_row(one), MEASURED)) for one in verdict.judged))
+    text = "Residual energy per spin in units of J, and order parameter q2; sigma is the difference in standard errors."
+    return Section("Energy and order", (text,), (grid,), tuple(pictures))
+
+
+def _where(verdict: Verdict) -> Section:
+    worst = sorted(
+        verdict.judged, key=lambda one: (one.comparison.pairs.adjusted[0], -one.comparison.pairs.site_sigma().max())
+    )
+    chosen = [one for one in verdict.judged if one in worst[:MOST_LATTICES]]
+    pictures = []
+    largest = max(3.0, *(float(np.abs(bond_sigma(one)).max(initial=0.0)) for one in chosen))
+    for one in chosen:
+        axes = plots.deviations(
+            one.reference.anneal.instance.lattice,
+            bond_sigma(one),
+            site_sigma(one),
+            limit=largest,
+            label="too weak  <  standard errors  <  too strong",
+        )
+        axes.set_title(one.case.label, fontsize="medium", loc="left")
+        found = one.comparison.pairs.significant(verdict.decision.level)
+        text = f"{one.case.label}: {found} of {len(one.comparison.pairs)} pairs depart significantly."
+        pictures.append(picture(axes, f"Lattice of {text}", text))
+    dropped = len(verdict.judged) - len(chosen)
+    texts = (
+        "Bonds are coloured by the deviation of their correlation, in standard errors: blue where it is weaker than "
+        "the truth, "
+        "orange where it is stronger. Sites are coloured by the deviation of their magnetisation, blue for down. One "
+        "blue bond "
+        "points to a weak coupler, all bonds of a site blue to its readout, a tint of all bonds to the energy scale."
+        + (f" The {len(chosen)} cases with the clearest deviations are drawn, {dropped} are not." if dropped else ""),
+    )
+    grid = Grid(PAIR_HEADINGS, tuple(Row(cells) for cells in worst_pairs(verdict, 10)), title="Pairs that depart most")
+    return Section("Where it departs", texts, (grid,), tuple(pictures), tuple(suspects(verdict)))
+
+
+def bond_sigma(one: Judged) -> NDArray[np.float64]:
+    """Return by how many standard errors each bond's correlation is too strong, in the order of the edges."""
+    pairs, n = one.comparison.pairs, one.comparison.n_sites
+    matrix = np.zeros((n, n))
+    matrix[pairs.first, pairs.second] = matrix[pairs.second, pairs.first] = np.sign(pairs.truth) * pairs.sigma
+    edges = one.reference.anneal.instance.lattice.edges
+    return np.asarray(matrix[edges[:, 0], edges[:, 1]])
+
+
+def site_sigma(one: Judged) -> NDArray[np.float64]:
+    """Return the deviation of every magnetisation beyond the truth's own error, in standard errors."""
+    truth, measured = one.reference.moments().z, one.samples.moments().z
+    difference = measured.value - truth.value
+    beyond = np.maximum(np.abs(difference) - truth.num, 0.0)
+    return np.asarray(np.sign(difference) * beyond / measured.stat)
+
+
+def _method(verdict: Verdict) -> Section:
+    study, level = verdict.study, verdict.decision.level
+    tolerance = study.table.truth.tolerance
+    missed = [one.case.label for one in verdict.judged if one.reference.outcome != "converged"]
+    fields = any(one.reference.anneal.instance.has_fields for one in verdict.judged)
+    points = [
+        "Truth: the Schrödinger equation with the given schedule, solved on the full state vector. Every case was "
+        "solved at least "
+        "three times with the step halved, and once with the sites in another order; the error bar is what these "
+        "runs differ by "
+        f"(tolerance {tolerance:g}, largest measured error {max(one.reference.error for one in verdict.judged):.1g}).",
+        "Correlation error: root of the sum over pairs of (measured − true)² over the sum of true², the noise of "
+        "shots subtracted; a "
+        "negative value means less than noise alone gives on average. Gauges and batches count as the independent "
+        "units.",
+        f"Verdict: accept if the upper bound at level {level:.0%} of every pooled figure lies within its limit, "
+        "reject if the lower "
+        "bound of any lies beyond it (the error probability divided by the number of figures), else inconclusive.",
+        "Fidelity, (Σ √(p q))², is given only where there are about ten shots for each configuration that matters, "
+        "beside "
+        "what a perfect processor attains.",
+        "The statement holds for these instances, this schedule and these durations, for the time at which the "
+        "samples were taken. "
+        '"Disorder" is the error that remains if the instances are meant to stand for their whole ensemble.',
+        "Agreement of pair correlations does not exclude departures in higher moments; the log-likelihood and the "
+        "fidelity look there.",
+        "What the processor was told is taken on trust: schedule, gauge and site map come from the laboratory's own "
+        "files.",
+    ]
+    if fields:
+        points.append("Instances with fields are scored by connected correlations, ⟨ZZ⟩ − ⟨Z⟩⟨Z⟩.")
+    if missed:
+        points.append(
+            f"Not converged to the tolerance, and judged with the error that was measured: {', '.join(missed)}."
+        )
+    return Section("Method, and the limits of this statement", points=tuple(points))
+
+
+def identities(verdict: Verdict) -> Iterator[tuple[str, str]]:
+    """Give name and SHA-256 of everything that the verdict rests on."""
+    yield "study file", verdict.study.sha256
+    yield "schedule", verdict.study.schedule.identity
+    for name, one in {one.case.name: one for one in verdict.judged}.items():
+        yield f"instance {name}", one.reference.anneal.instance.identity
+    for one in verdict.judged:
+        yield f"reference {one.case.label}", one.reference.identity
+
+
+def _picked(cells: tuple[str, ...], columns: tuple[int, ...]) -> tuple[str, ...]:
+    return tuple(cells[k] for k in columns)
