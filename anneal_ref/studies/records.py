@@ -30,7 +30,8 @@ from anneal_ref.base.storage import Record
 from anneal_ref.ground.ground import GroundEnergy
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.observe.moments import Moments
-from anneal_ref.truth.reference import Evolution, Reference
+from anneal_ref.truth.evolutions import Evolution
+from anneal_ref.truth.reference import Reference
 
 KIND = "reference"
 VERSION = 1

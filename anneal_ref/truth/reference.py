@@ -2,21 +2,17 @@
 
 from __future__ import annotations
 
-import warnings
-from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.sparse import coo_array
-from scipy.sparse.csgraph import connected_components
 
 from anneal_ref.backends.contract import Backend, State, check_anneal
-from anneal_ref.backends.exact.splitting import SPLITTINGS
 from anneal_ref.backends.exact.state_vector import StateVector
 from anneal_ref.base.checks import frozen, integer, number, signs
-from anneal_ref.base.errors import AnnealRefWarning, InputError, NotConverged
+from anneal_ref.base.errors import InputError, NotConverged
 from anneal_ref.base.estimate import Estimate
 from anneal_ref.base.identity import digest
 from anneal_ref.base.provenance import provenance
@@ -27,28 +23,11 @@ from anneal_ref.observe.bits import unpack
 from anneal_ref.observe.manifest import Manifest
 from anneal_ref.observe.moments import Moments
 from anneal_ref.observe.samples import Samples
-from anneal_ref.truth.refinement import Decay, measure_decay
+from anneal_ref.truth.evolutions import RUNS, Evolution, decay_of, measured_moments, solve_reordered
+from anneal_ref.truth.refinement import Decay
 
 LARGEST_TABLE = 16
 """Sites up to which a reference keeps the probability of every configuration."""
-
-_RUNS = 3  # as many as it takes to see a decay
-_LOWEST_ORDER = 2  # of any symmetric scheme
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Evolution:
-    """One run: its moments, `num` not measured, and its ledger.
-
-    Parameters
-    ----------
-    moments : Moments
-    ledger : mapping
-        Counters and checks of the back-end; numbers and words.
-    """
-
-    moments: Moments
-    ledger: Mapping[str, Any]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -100,8 +79,8 @@ class Reference:
 
     def __post_init__(self) -> None:
         """Measure the errors from the runs."""
-        object.__setattr__(self, "decay", _decay(self.anneal, self.runs, self.reordered))
-        object.__setattr__(self, "_moments", _measured(self.anneal, self.runs, self.decay))
+        object.__setattr__(self, "decay", decay_of(self.anneal, self.runs, self.reordered))
+        object.__setattr__(self, "_moments", measured_moments(self.anneal, self.runs, self.decay))
 
     @property
     def n_sites(self) -> int:
@@ -167,7 +146,7 @@ class Reference:
         InputError
             Values that are not finite, or of different shapes.
         """
-        runs = (*self.runs[-_RUNS:], self.runs[0], self.reordered)
+        runs = (*self.runs[-RUNS:], self.runs[0], self.reordered)
         values = [np.asarray(f(run.moments), dtype=np.float64) for run in runs]
         if any(value.shape != values[0].shape or not np.isfinite(value).all() for value in values):
             raise InputError("f must give finite numbers of one shape for the moments of every run; got something else")
@@ -252,7 +231,7 @@ class Reference:
             previous = run.moments
         lines.append(
             f"  decay per run {self.decay.ratio:.2g}{'' if self.decay.settled else ' (not settled)'}, "
-            f"rounding {self.decay.rounding:.1g}; ground energy {self.ground.estimate}; {len(self.bits)} samples kept"
+            f"rounding {self.decay.rounding:.1g}; ground energy {self.ground}; {len(self.bits)} samples kept"
         )
         return "\n".join(lines)
 
@@ -326,23 +305,23 @@ def reference(
     if tolerance == 0.0:
         raise InputError("tolerance must be above 0; got 0")
     samples, seed = integer("samples", samples, low=1), integer("seed", seed, low=0)
-    max_runs = integer("max_runs", max_runs, low=_RUNS)
+    max_runs = integer("max_runs", max_runs, low=RUNS)
     backend = default_backend(tolerance) if backend is None else backend
     if isinstance(backend, type) or not isinstance(backend, Backend):
         raise InputError(f"backend must be a back-end such as StateVector(tolerance=1e-6); got {backend!r}")
     if "step" not in backend.knobs:
         raise InputError(f"backend must be one whose step can be refined; got {backend}, with knobs {backend.knobs}")
-    _refined(backend, _RUNS - 1).plan(anneal)
+    _refined(backend, RUNS - 1).plan(anneal)
 
     ground = ground_energy(anneal.instance)
-    reordered = _solve_reordered(anneal, backend, run)
+    reordered = solve_reordered(anneal, backend, run)
     runs: list[Evolution] = []
     while True:
         state = _refined(backend, len(runs)).evolve(anneal, run=run)
-        runs.append(Evolution(state.moments(), _plain(state.ledger)))
-        if len(runs) >= _RUNS:
-            decay = _decay(anneal, runs, reordered)
-            moments = _measured(anneal, runs, decay)
+        runs.append(Evolution.of(state))
+        if len(runs) >= RUNS:
+            decay = decay_of(anneal, runs, reordered)
+            moments = measured_moments(anneal, runs, decay)
             met = decay.settled and max(moments.z.num.max(), moments.zz.num.max()) <= tolerance
             if met or len(runs) == max_runs:
                 break
@@ -377,85 +356,10 @@ def identity_of(anneal: Anneal, backend: Backend, tolerance: float, samples: int
     return f"{anneal.identity[:32]}-{digest(settings)[:16]}"
 
 
-def fixed_by_symmetry(anneal: Anneal) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
-    """Return which <Z_i>, shape (n,), and <Z_i Z_j>, shape (n, n), are zero by the spin-flip symmetry.
-
-    A connected part of the lattice without fields may be flipped by itself: its <Z_i> vanish, and so do its
-    correlations with all other parts.
-    """
-    instance = anneal.instance
-    n = instance.n_sites
-    edges = instance.lattice.edges[instance.couplings != 0]
-    graph = coo_array((np.ones(len(edges)), (edges[:, 0], edges[:, 1])), shape=(n, n))
-    part = connected_components(graph, directed=False)[1]
-    free = ~np.isin(part, part[instance.fields != 0])
-    return free, (part[:, None] != part[None, :]) & (free[:, None] | free[None, :])
-
-
 def _refined(backend: Backend, times: int) -> Backend:
     for _ in range(times):
         backend = backend.finer("step")
     return backend
-
-
-def _solve_reordered(anneal: Anneal, backend: Backend, run: Run) -> Evolution:
-    """Solve with the sites in another order, far from reversed and far from the same, and put the moments back."""
-    n = anneal.n_sites
-    order = np.concatenate((np.arange(n - 1, -1, -2), np.arange(n - 2, -1, -2)))
-    with warnings.catch_warnings():
-        # whoever made the anneal was warned then
-        warnings.simplefilter("ignore", AnnealRefWarning)
-        other = replace(anneal, instance=anneal.instance.relabelled(order))
-    state = backend.evolve(other, run=run)
-    found = state.moments()
-    place = np.argsort(order)
-    x = None if found.x is None else found.x.value[place]
-    moments = Moments.of(found.z.value[place], found.zz.value[np.ix_(place, place)], x, found.zz.how)
-    return Evolution(moments, _plain(state.ledger))
-
-
-def _order(ledger: Mapping[str, Any]) -> int:
-    """Order of the scheme: as the back-end says, or the lowest that a symmetric scheme can have."""
-    known = SPLITTINGS.get(str(ledger.get("scheme")))
-    return int(ledger.get("order", _LOWEST_ORDER if known is None else known.order))
-
-
-def _decay(anneal: Anneal, runs: Sequence[Evolution], reordered: Evolution) -> Decay:
-    ledger, coarsest = runs[-1].ledger, runs[0].ledger
-    z_zero, zz_zero = fixed_by_symmetry(anneal)
-    pairs = np.triu(~zz_zero, 1)
-
-    def entries(moments: Moments) -> NDArray[np.float64]:
-        x = np.zeros(0) if moments.x is None else moments.x.value
-        return np.concatenate((moments.z.value[~z_zero], moments.zz.value[pairs], x))
-
-    return measure_decay(
-        [entries(run.moments) for run in runs[-_RUNS:]],
-        entries(reordered.moments) - entries(runs[0].moments),
-        growth=float(ledger.get("layers", 2 ** (len(runs) - 1))) / float(coarsest.get("layers", 1)),
-        order=_order(ledger),
-    )
-
-
-def _measured(anneal: Anneal, runs: Sequence[Evolution], decay: Decay) -> Moments:
-    last = [run.moments for run in runs[-_RUNS:]]
-    z_zero, zz_zero = fixed_by_symmetry(anneal)
-
-    def measured(values: list[NDArray[np.float64]], zero: NDArray[np.bool_] | None = None) -> Estimate:
-        bars = decay.bars(values, decay.rounding)
-        if zero is not None:
-            # the true value is known, and so is the error
-            bars = np.where(zero, np.abs(values[-1]), bars)
-        if bars.ndim == 2:
-            np.fill_diagonal(bars, 0.0)
-        return Estimate(values[-1], 0.0, bars, last[-1].zz.how)
-
-    x = [moments.x.value for moments in last if moments.x is not None]
-    return Moments(
-        measured([moments.z.value for moments in last], z_zero),
-        measured([moments.zz.value for moments in last], zz_zero),
-        measured(x) if len(x) == _RUNS else None,
-    )
 
 
 def _folded(anneal: Anneal, state: State) -> NDArray[np.float64] | None:
@@ -465,10 +369,6 @@ def _folded(anneal: Anneal, state: State) -> NDArray[np.float64] | None:
     half = table[: len(table) // 2]
     symmetric = not anneal.instance.has_fields and np.array_equal(half, table[: len(table) // 2 - 1 : -1])
     return frozen(half.copy() if symmetric else table.copy())
-
-
-def _plain(ledger: Mapping[str, Any]) -> dict[str, Any]:
-    return {name: value.item() if isinstance(value, np.generic) else value for name, value in ledger.items()}
 
 
 def _change(before: Moments, after: Moments) -> float:

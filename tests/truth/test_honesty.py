@@ -9,7 +9,8 @@ import pytest
 from scipy.integrate import solve_ivp
 
 import anneal_ref as ar
-from anneal_ref.truth.reference import fixed_by_symmetry, reference
+from anneal_ref.truth.evolutions import fixed_by_symmetry
+from anneal_ref.truth.reference import reference
 
 RAMP = ar.Schedule.linear(transverse=(8.0, 0.0), problem=(0.0, 6.0))
 CURVED = ar.Schedule.polynomial(transverse=[20.0, -60.0, 60.0, -20.0], problem=[0.0, 0.5, 9.5])
@@ -48,15 +49,21 @@ def catalogue():
         )
 
 
-def deviations(anneals, backends):
-    """Errors and bars of all entries that symmetry does not fix, and the number of the anneal that they belong to."""
-    errors, bars, owner = [], [], []
-    for k, (anneal, backend) in enumerate(zip(anneals, itertools.cycle(backends), strict=False)):
+def solve(anneals, backends):
+    """References of anneals, with back-ends in turn, beside the moments that are known to be right."""
+    for anneal, backend in zip(anneals, itertools.cycle(backends), strict=False):
         truth = reference(anneal, tolerance=1e-2, backend=backend, samples=1)
         assert truth.outcome == "converged"
-        found, exact = truth.moments(), EXACT.evolve(anneal).moments()
-        z_zero, zz_zero = fixed_by_symmetry(anneal)
-        free_entries = {"z": ~z_zero, "zz": np.triu(~zz_zero, 1), "x": np.full(anneal.n_sites, True)}
+        yield truth, EXACT.evolve(anneal).moments()
+
+
+def deviations(solved):
+    """Errors and bars of all entries that symmetry does not fix, and the number of the anneal that they belong to."""
+    errors, bars, owner = [], [], []
+    for k, (truth, exact) in enumerate(solved):
+        found = truth.moments()
+        z_zero, zz_zero = fixed_by_symmetry(truth.anneal)
+        free_entries = {"z": ~z_zero, "zz": np.triu(~zz_zero, 1), "x": np.full(truth.n_sites, True)}
         for name, free in free_entries.items():
             one, other = getattr(found, name), getattr(exact, name)
             errors.append(np.abs(one.value - other.value)[free])
@@ -74,9 +81,14 @@ def check(errors, bars):
 
 
 @pytest.fixture(scope="module")
-def measured():
+def solved():
     tolerances = (1e-2, 1e-3, 1e-4, 1e-6, 1e-7)  # of the coarsest runs
-    return deviations(catalogue(), [ar.StateVector(tolerance=tolerance) for tolerance in tolerances])
+    return list(solve(catalogue(), [ar.StateVector(tolerance=tolerance) for tolerance in tolerances]))
+
+
+@pytest.fixture(scope="module")
+def measured(solved):
+    return deviations(solved)
 
 
 def test_bars_are_honest_and_useful(measured):
@@ -87,9 +99,24 @@ def test_bars_are_honest_and_useful(measured):
     assert missed.mean() <= 0.1
 
 
+def test_bars_of_derived_numbers_are_honest_and_useful(solved):
+    errors, bars = [], []
+    for truth, exact in solved:
+        instance = truth.anneal.instance
+        for f in (
+            lambda moments, instance=instance: ar.observables.problem_energy(moments, instance),
+            ar.observables.q2,
+            lambda moments: moments.z.value.sum() + (moments.zz.value**2).sum(),
+        ):
+            estimate = truth.estimate(f)
+            errors.append(abs(estimate.value - f(exact)))
+            bars.append(estimate.num)
+    check(np.array(errors), np.array(bars))
+
+
 def test_bars_follow_the_errors(measured):
     errors, bars = (np.argsort(np.argsort(values)) for values in measured[:2])
-    assert np.corrcoef(errors, bars)[0, 1] > 0.6
+    assert np.corrcoef(errors, bars)[0, 1] > 0.9
 
 
 @pytest.mark.parametrize(
@@ -122,7 +149,7 @@ def test_wrong_bars_fail_the_same_check(spoil, verdict, measured):
     ids=["tighter", "second order", "loose sixth order", "loose fourth order", "single precision"],
 )
 def test_other_settings_are_honest_too(backend):
-    errors, bars, _ = deviations(list(catalogue())[::4], [backend])
+    errors, bars, _ = deviations(solve(list(catalogue())[::4], [backend]))
     assert np.mean(errors <= bars) >= 0.95
     assert np.median(bars) <= 15 * np.median(errors)
 

@@ -10,7 +10,8 @@ import anneal_ref as ar
 from anneal_ref.backends.contract import Plan
 from anneal_ref.observe.manifest import Manifest
 from anneal_ref.observe.moments import Moments
-from anneal_ref.truth.reference import fixed_by_symmetry, identity_of, reference
+from anneal_ref.truth.evolutions import fixed_by_symmetry
+from anneal_ref.truth.reference import identity_of, reference
 
 RAMP = ar.Schedule.linear(transverse=(4.0, 0.0), problem=(0.0, 4.0))
 
@@ -326,3 +327,17 @@ def test_a_backend_without_a_step_is_refused():
 
     with pytest.raises(ar.InputError, match="whose step can be refined"):
         reference(anneal(), backend=Closed())
+
+
+def test_seventeen_spins_have_no_table_but_samples_and_a_state():
+    problem = anneal(17, schedule=RAMP, duration=0.3)
+    truth = reference(problem, samples=3000, seed=2)
+    assert truth.outcome == "converged"
+    assert truth.folded is None
+    sampled = truth.sample(2000, seed=1).moments()
+    zz = truth.moments().zz
+    off = np.abs(sampled.zz.value - zz.value)[np.triu_indices(17, 1)]
+    assert np.max(off) < 6 / np.sqrt(2000)
+    assert np.mean(off < 2 / np.sqrt(2000)) > 0.85
+    rows = truth.stored_samples.spins[:5]
+    np.testing.assert_allclose(truth.log_probability(rows), truth.state().log_probability(rows), rtol=1e-12)
