@@ -233,7 +233,7 @@ class Anneal:
     def _warn_if_not_ground(self) -> None:
         instance = self.instance
         local = np.bincount(instance.lattice.edges.ravel(), np.abs(instance.couplings).repeat(2), instance.n_sites)
-        local += np.abs(instance.fields)
+        local = local + np.abs(instance.fields)  # whole numbers where there is no edge at all
         problem = abs(float(self.schedule.problem(0.0))) * local
         transverse = float(self.schedule.transverse(0.0)) * self.instance.transverse
         with np.errstate(divide="ignore", invalid="ignore"):
