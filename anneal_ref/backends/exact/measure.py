@@ -121,8 +121,8 @@ def chunk_moments(x, shape, chunk, chunk_bits, p, total, first, z, zz):  # type:
         for y in range(0, size, wide):
             vstore(t, y, vadd(vload(t, y), vload(p, y)))
         first[k, bits] = fold_piece(p, bits, first[k])
-    transform(total, size, 1)
-    transform(first, count, bits + 1)
+    transform(total, size, total.shape[1])
+    transform(first, count, first.shape[1])
     for i in range(bits):
         z[i] = t[1 << i]
         for j in range(i):

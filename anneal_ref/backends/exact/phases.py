@@ -9,6 +9,7 @@ Energies are sums, formed once for a frame; a layer needs sines and cosines of s
 
 from __future__ import annotations
 
+import numpy as np
 from numba import njit
 
 from anneal_ref.backends.exact.simd import lanes_of, vadd, vfloor, vfma, vload, vmul, vneg, vplace, vset, vstore, vsub
@@ -89,13 +90,14 @@ def add_fields(f, i, n, e, o):  # type: ignore[no-untyped-def]
 @njit(cache=True)
 def internal_energies(coupling, sites, i, n, e, o, f, u):  # type: ignore[no-untyped-def]
     """e[o:][z] = energy of the couplings among sites[i : i + n], for all settings; f, u are scratch."""
+    zero = np.intp(0)  # typed, because numba compiles a variant of its own for a literal
     e[o] = 0.0
     size = 1
     for k in range(n):
         for j in range(k):
             f[j] = coupling[sites[i + k], sites[i + j]]
         u[0] = 0.0
-        add_fields(f, 0, k, u, 0)
+        add_fields(f, zero, k, u, zero)
         for z in range(size):
             v = e[o + z]
             e[o + size + z] = v - u[z]
@@ -107,7 +109,8 @@ def internal_energies(coupling, sites, i, n, e, o, f, u):  # type: ignore[no-unt
 def frame_energies(coupling, sites, bits, row_bits, e, f, u):  # type: ignore[no-untyped-def]
     """Tables of energies of a tile, for one frame: rows, then pairs of row-numbering spins, then row numbers."""
     size = 1 << row_bits
-    internal_energies(coupling, sites, 0, row_bits, e, 0, f, u)
+    zero = np.intp(0)
+    internal_energies(coupling, sites, zero, row_bits, e, zero, f, u)
     o = size
     for pair in range(row_bits, max(bits, row_bits + 1), 2):
         for which in range(2):
@@ -119,7 +122,7 @@ def frame_energies(coupling, sites, bits, row_bits, e, f, u):  # type: ignore[no
                     v += coupling[sites[pair + 1], sites[k]]
                 f[k] = v
             e[o] = 0.0
-            add_fields(f, 0, row_bits, e, o)
+            add_fields(f, zero, row_bits, e, o)
             o += size
     internal_energies(coupling, sites, row_bits, bits - row_bits, e, o, f, u)
 
@@ -142,7 +145,7 @@ def pair_phases(phi, e, o, levels, row_bits, c, s, w, d):  # type: ignore[no-unt
 @njit(cache=True)
 def tile_phases(phi, scale, coupling, field, sites, bits, total, row_bits, index, e, o, f, u, c, s, w, t, r):  # type: ignore[no-untyped-def]
     """w[t:] = T and w[r:] = R of a tile whose outer spins sites[bits:total] are set to the bits of `index`."""
-    size, number = 1 << row_bits, 1 << (bits - row_bits)
+    size, number, zero = 1 << row_bits, 1 << (bits - row_bits), np.intp(0)
     for k in range(bits):
         f[k] = field[sites[k]]
     outer = 0.0
@@ -155,16 +158,16 @@ def tile_phases(phi, scale, coupling, field, sites, bits, total, row_bits, index
         for k in range(bits):
             f[k] += coupling[sites[j], sites[k]] * spin
     u[0] = 0.0
-    add_fields(f, 0, row_bits, u, 0)
+    add_fields(f, zero, row_bits, u, zero)
     for z in range(size):
         u[z] += e[z]
-    unit_phases(phi, u, 0, size, c, s)
+    unit_phases(phi, u, zero, size, c, s)
     place(c, s, size, w, t, 1.0)
     u[0] = outer
-    add_fields(f, row_bits, bits - row_bits, u, 0)
+    add_fields(f, row_bits, bits - row_bits, u, zero)
     for z in range(number):
         u[z] += e[o + z]
-    unit_phases(phi, u, 0, number, c, s)
+    unit_phases(phi, u, zero, number, c, s)
     for z in range(number):
         w[r + 2 * z] = scale * c[z]
         w[r + 2 * z + 1] = scale * s[z]

@@ -39,7 +39,7 @@ class Vector(types.Type):
 
     def __init__(self, base: Any) -> None:
         self.base, self.lanes = base, VECTOR_BYTES * 8 // base.bitwidth
-        super().__init__(name=f"vector({base},{self.lanes})")  # type: ignore[no-untyped-call]
+        super().__init__(name=f"vector({base},{self.lanes})")
 
     @property
     def ir(self) -> ir.VectorType:
@@ -50,7 +50,7 @@ class Vector(types.Type):
 @register_model(Vector)
 class _VectorModel(models.PrimitiveModel):
     def __init__(self, manager: Any, kind: Any) -> None:
-        super().__init__(manager, kind, kind.ir)
+        super().__init__(manager, kind, kind.ir)  # type: ignore[no-untyped-call]
 
 
 VECTORS = {types.float64: Vector(types.float64), types.float32: Vector(types.float32)}
@@ -87,7 +87,7 @@ def emit_call(builder: Any, name: str, values: list[Any]) -> Any:
 
 
 def emit_fma(builder: Any, a: Any, b: Any, c: Any) -> Any:
-    """A * b + c."""
+    """Multiply and add: a * b + c."""
     return emit_call(builder, "fma", [a, b, c])
 
 

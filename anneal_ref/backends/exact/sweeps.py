@@ -11,6 +11,7 @@ from __future__ import annotations
 
 from typing import Any, NamedTuple
 
+import numpy as np
 from numba import njit
 
 from anneal_ref.backends.exact.bundles import (
@@ -153,22 +154,24 @@ def signed_lanes(t, w, o, lanes):  # type: ignore[no-untyped-def]
 @njit(cache=True)
 def in_place(x, o, p, bit, count, w, t):  # type: ignore[no-untyped-def]
     """Turn `count` bits from `bit` on, anywhere above the row, in a tile or a piece at o."""
+    z = np.intp(0)  # typed, because numba compiles a variant of its own for a literal
     if bit >= p.piece_bits:
         step = p.stride << (bit - p.piece_bits)
         chunk = 2 << p.piece_bits
         for g in range(1 << (p.bits - bit - count)):
             h = o + g * (step << count)
             n = 1 << (bit - p.piece_bits)
-            rotate(x, h, 0, p.stride, 0, step, x, h, 0, p.stride, 0, step, n, chunk, w, t + bit, count)
+            rotate(x, h, z, p.stride, z, step, x, h, z, p.stride, z, step, n, chunk, w, t + bit, count)
     else:
         n = 1 << (min(p.bits, p.piece_bits) - bit - count)
         s = 2 << bit
-        rotate(x, o, 0, s << count, 0, s, x, o, 0, s << count, 0, s, n, s, w, t + bit, count)
+        rotate(x, o, z, s << count, z, s, x, o, z, s << count, z, s, n, s, w, t + bit, count)
 
 
 @njit(cache=True)
 def edge_in_place(x, o, p, w, t, f):  # type: ignore[no-untyped-def]
     """Do the edge pass of a tile that lies in memory."""
+    z = np.intp(0)
     if p.pairs:
         bit = p.bits - 3
         if bit >= p.piece_bits:
@@ -177,7 +180,7 @@ def edge_in_place(x, o, p, w, t, f):  # type: ignore[no-untyped-def]
             n, chunk, u = 1, 2 << bit, 2 << bit
         q = 2 << (bit + 1) if bit + 1 < p.piece_bits else p.stride << (bit + 1 - p.piece_bits)
         a = p.stride
-        rotate_pairs(x, o, o + u, 0, a, 0, q, x, o, o + u, 0, a, 0, q, n, chunk, w, t + bit + 1, w, f, 0, p.odd)
+        rotate_pairs(x, o, o + u, z, a, z, q, x, o, o + u, z, a, z, q, n, chunk, w, t + bit + 1, w, f, z, p.odd)
     elif p.edge < p.bits:
         in_place(x, o, p, p.edge, p.bits - p.edge, w, t)
 
@@ -192,6 +195,7 @@ def column(p, c):  # type: ignore[no-untyped-def]
 @njit(cache=True)
 def edge_copy(x, y, o, p, c, last, w, t, f, out):  # type: ignore[no-untyped-def]
     """Do the edge pass of tile c between memory x and the buffer y at o; `last` numbers the last chunk."""
+    z = np.intp(0)
     s = p.piece_bits - p.chunk_bits
     chunk = 2 << p.chunk_bits
     bit = p.bits - 2 if p.pairs else p.edge
@@ -208,16 +212,16 @@ def edge_copy(x, y, o, p, c, last, w, t, f, out):  # type: ignore[no-untyped-def
             c >>= 1
         if out:
             rotate_pairs(
-                y, o, v, s, p.stride, chunk, g, x, a, b, 0, p.row, 0, q, n, chunk, w, t + bit, w, f, even, p.odd
+                y, o, v, s, p.stride, chunk, g, x, a, b, z, p.row, z, q, n, chunk, w, t + bit, w, f, even, p.odd
             )
         else:
             rotate_pairs(
-                x, a, b, 0, p.row, 0, q, y, o, v, s, p.stride, chunk, g, n, chunk, w, t + bit, w, f, even, p.odd
+                x, a, b, z, p.row, z, q, y, o, v, s, p.stride, chunk, g, n, chunk, w, t + bit, w, f, even, p.odd
             )
     elif out:
-        rotate(y, o, s, p.stride, chunk, g, x, a, 0, p.row, 0, q, n, chunk, w, t + bit, p.bits - bit)
+        rotate(y, o, s, p.stride, chunk, g, x, a, z, p.row, z, q, n, chunk, w, t + bit, p.bits - bit)
     else:
-        rotate(x, a, 0, p.row, 0, q, y, o, s, p.stride, chunk, g, n, chunk, w, t + bit, p.bits - bit)
+        rotate(x, a, z, p.row, z, q, y, o, s, p.stride, chunk, g, n, chunk, w, t + bit, p.bits - bit)
 
 
 @njit(cache=True)
@@ -242,7 +246,7 @@ def sweep(x, w, e, f, u, c, s, p, start, stop, coupling, field, phi, scale, lane
     count = p.passes.shape[0]
     for tile in range(start, stop):
         if high:
-            edge_copy(x, w, buffer, p, tile, last, w, b - TANGENTS, sb, False)
+            edge_copy(x, w, buffer, p, tile, last, w, b - TANGENTS, sb, np.intp(0))
             y, o = w, buffer
         else:
             y, o = x, tile * p.row
@@ -278,7 +282,7 @@ def sweep(x, w, e, f, u, c, s, p, start, stop, coupling, field, phi, scale, lane
             for k in range(above, count):
                 in_place(y, here, p, p.passes[k, 0], p.passes[k, 1], w, a - TANGENTS)
         if high:
-            edge_copy(x, w, buffer, p, tile, last, w, a - TANGENTS, sa, True)
+            edge_copy(x, w, buffer, p, tile, last, w, a - TANGENTS, sa, np.intp(1))
         else:
             edge_in_place(x, o, p, w, a - TANGENTS, sa)
 
@@ -321,7 +325,7 @@ def run(x, w, e, f, u, c, s, tilings, groups, group, coupling, field, signs, fra
             tangents(tans, k, p, w, b, lane_bits)
             signed_lanes(tans[k, n], w, sb, lanes)
         tangents(tans, k + 1, p, w, a, lane_bits)
-        signed_lanes(tans[k + 1, n], w, sa, lanes)
+        signed_lanes(tans[k + 1, n], w, sa, np.intp(1))
         end = min(stop, p.tiles)
         sweep(x, w, e[group], f, u, c, s, p, start, end, coupling[1], field[1], phis[k], scales[k], lane_bits)
         group = (group + 1) % groups
