@@ -102,7 +102,7 @@ class _Search:
 
     def offer(self, spins: NDArray[np.int8]) -> None:
         """Improve a configuration and keep it if it is the best."""
-        energy, spins = searched(self.graph, spins, 10 * self.graph.n_sites)
+        energy, spins = searched(self.graph, spins, 10)
         if energy < self.energy:
             self.energy, self.spins = energy, spins
 

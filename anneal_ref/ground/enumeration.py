@@ -16,8 +16,8 @@ MOST_CONFIGURATIONS = 2.0**40
 
 
 def enumeration_cost(problem: Problem) -> float:
-    """Number of configurations that are looked at: half of all when there are no fields."""
-    return 2.0 ** (problem.n_sites - (not problem.has_fields))
+    """Return the number of configurations that are looked at: half of all when there are no fields."""
+    return 2.0 ** min(1000, problem.n_sites - (not problem.has_fields))
 
 
 def enumerate_states(problem: Problem, limit: int = 1) -> tuple[int, int, NDArray[np.int8]]:
@@ -75,7 +75,7 @@ def enumerate_states(problem: Problem, limit: int = 1) -> tuple[int, int, NDArra
 
 
 def _spins(n_sites: int, steps: NDArray[np.int64], places: NDArray[np.int64]) -> NDArray[np.int8]:
-    """Configurations, shape (k, n_sites), from the steps of the Gray code and the inner configurations."""
+    """Return configurations, shape (k, n_sites), from the steps of the Gray code and the inner configurations."""
     inside = min(n_sites, INNER_SPINS)
     bits = places | (steps ^ (steps >> 1)) << inside
     return (1 - 2 * ((bits[:, None] >> np.arange(n_sites)) & 1)).astype(np.int8)

@@ -72,7 +72,7 @@ class GroundEnergy:
         return f"{self.value:.10g} proved{states} ({self.how})"
 
 
-def ground_energy(instance: Instance, method: str | None = None, nodes: int = 50) -> GroundEnergy:
+def ground_energy(instance: Instance, method: str | None = None, nodes: int = 20) -> GroundEnergy:
     """Find the least energy over all spin configurations, and prove it or say how far the proof got.
 
     Parts that are not coupled to each other are solved one by one. Each goes to enumeration (up to about 35 spins) or
@@ -85,7 +85,7 @@ def ground_energy(instance: Instance, method: str | None = None, nodes: int = 50
     method : {"enumeration", "strips", "cuts"}, optional
         Use this method alone, at a cost of up to minutes.
     nodes : int
-        The most nodes of the branch-and-cut tree, for each part. The result does not depend on the speed of the machine.
+        The most nodes of the branch-and-cut tree, for each part; never a time, so that results can be repeated.
 
     Returns
     -------

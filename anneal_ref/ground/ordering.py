@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import heapq
 from collections.abc import Iterator
 from dataclasses import dataclass
 
@@ -82,20 +83,26 @@ def _followed(neighbours: list[int], sweep: list[int]) -> Ordering | None:
 
 def _greedy(neighbours: list[int], fill: bool) -> Ordering | None:
     remaining, order, frontiers = list(neighbours), [], []
-    left = set(range(len(neighbours)))
-    scores = {site: _score(remaining, site, fill) for site in left}
-    while left:
-        site = min(left, key=lambda s: (scores[s], s))
+    scores = {site: _score(remaining, site, fill) for site in range(len(neighbours))}
+    queue = [(score, site) for site, score in scores.items()]
+    heapq.heapify(queue)
+    while scores:
+        score, site = heapq.heappop(queue)
+        if scores.get(site) != score:
+            # eliminated, or queued again with another score
+            continue
         if remaining[site].bit_count() > WIDEST:
             return None
         frontier = _eliminate(remaining, site)
-        left.remove(site)
+        del scores[site]
         order.append(site)
         frontiers.append(frontier)
         stale = set(frontier)
         if fill:
             stale.update(*(_bits(remaining[other]) for other in frontier))
-        scores.update({other: _score(remaining, other, fill) for other in stale})
+        for other in stale:
+            scores[other] = _score(remaining, other, fill)
+            heapq.heappush(queue, (scores[other], other))
     return Ordering(tuple(order), tuple(frontiers))
 
 

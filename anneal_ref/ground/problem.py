@@ -125,7 +125,9 @@ class Problem:
         fields[others] += self.couplings[at_site]
         edges = self.edges[~at_site]
         edges = edges - (edges > site)
-        reduced = Problem(edges, self.couplings[~at_site], np.delete(fields, site), self.unit, self.rounding, self.slack)
+        reduced = Problem(
+            edges, self.couplings[~at_site], np.delete(fields, site), self.unit, self.rounding, self.slack
+        )
         return reduced, int(self.fields[site])
 
     def contracted(self, group: NDArray[np.intp], sign: NDArray[np.int8]) -> tuple[Problem, int]:

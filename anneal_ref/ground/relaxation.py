@@ -1,7 +1,7 @@
 """Linear relaxation of the cut problem, tightened by odd-cycle inequalities; its bounds hold whatever the solver does.
 
-With x_e = 1 on broken pairs (s_i != s_j), E = sum J - 2 sum J x. A cycle meets every cut an even number of times, so for
-each cycle C and each odd part F of it, x(F) - x(C without F) <= |F| - 1.
+With x_e = 1 on pairs with s_i != s_j, E = sum J - 2 sum J x. A cycle changes side an even number of times, so for each
+cycle C and each odd part F of it, x(F) - x(C without F) <= |F| - 1.
 """
 
 from __future__ import annotations
@@ -21,6 +21,7 @@ from anneal_ref.ground.problem import Problem
 # among cycles that are violated equally short ones are better; small enough not to hide a violated one that matters
 STEP_WEIGHT = 1e-6
 LEAST_VIOLATION = 1e-5
+SOURCES = 512
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,8 +58,8 @@ class Bound:
 def relax(problem: Problem, cuts: list[Cut], low: NDArray[np.float64], high: NDArray[np.float64]) -> Bound | None:
     """Minimise the energy over the box and the cuts; None where the solver gives no multipliers.
 
-    For any multipliers y >= 0 of A x <= b, the minimum of c x is at least -y b + sum_e min over the box of (c + A^T y)_e x_e
-    (weak duality).
+    For any multipliers y >= 0 of A x <= b, the minimum of c x over the box is at least -y b plus the minimum over the
+    box of (c + A^T y) x (weak duality); the latter is found edge by edge.
     """
     scale = float(np.abs(problem.couplings).max())
     cost = -2.0 * problem.couplings / scale
@@ -67,7 +68,7 @@ def relax(problem: Problem, cuts: list[Cut], low: NDArray[np.float64], high: NDA
         cost,
         A_ub=matrix if cuts else None,
         b_ub=limits if cuts else None,
-        bounds=np.stack([low, high], axis=1),
+        bounds=list(zip(low.tolist(), high.tolist(), strict=True)),
         method="highs-ds",
     )
     if result.x is None:
@@ -79,9 +80,7 @@ def relax(problem: Problem, cuts: list[Cut], low: NDArray[np.float64], high: NDA
     magnitude = multipliers @ limits + np.abs(cost).sum() + (abs(matrix).T @ multipliers).sum()
     rounding = (len(cuts) + 8) * 2.0**-52 * magnitude
     value = float(problem.couplings.sum()) + scale * (math.fsum(terms) - rounding)
-    return Bound(
-        value - 2.0**-50 * problem.weight, scale * prices, np.clip(result.x, low, high), multipliers > 1e-9
-    )
+    return Bound(value - 2.0**-50 * problem.weight, scale * prices, np.clip(result.x, low, high), multipliers > 1e-9)
 
 
 def separate(problem: Problem, x: NDArray[np.float64]) -> list[Cut]:
@@ -99,25 +98,26 @@ def separate(problem: Problem, x: NDArray[np.float64]) -> list[Cut]:
     columns = np.concatenate([second, second + n_sites, second + n_sites, second])
     weights = np.concatenate([stay, stay, cross, cross])
     doubled = csr_array((weights, (rows, columns)), shape=(2 * n_sites, 2 * n_sites))
-    distances, previous = dijkstra(
-        doubled, directed=False, indices=np.arange(n_sites), return_predecessors=True, limit=1.0
-    )
-    # a path to either copy of the other end is closed by the edge itself, so that it ends in the second copy of the first
-    by_stay = distances[first, second + n_sites] + stay
-    by_cross = distances[first, second] + cross
-    last = np.where(by_stay <= by_cross, second + n_sites, second)
     edge_of = {pair: place for place, pair in enumerate(map(tuple, np.sort(problem.edges, axis=1).tolist()))}
     cuts: dict[Cut, float] = {}
-    for edge in np.flatnonzero(np.minimum(by_stay, by_cross) < 1 - LEAST_VIOLATION).tolist():
-        source = int(first[edge])
-        cycle = _simple_cycle(previous[source], source + n_sites, int(last[edge]), n_sites)
-        if (cycle[0] < n_sites) == (cycle[-1] < n_sites):
-            # the path ran through the edge itself, so a worse cycle is found at another edge; this one is even
-            continue
-        cut = _cut(cycle, n_sites, edge_of)
-        excess = float(x[list(cut.odd)].sum() - x[list(cut.even)].sum()) - (len(cut.odd) - 1)
-        if excess > LEAST_VIOLATION:
-            cuts[cut] = excess
+    for start in range(0, n_sites, SOURCES):
+        # the table of distances is as wide as the doubled graph, so only a block of sources at a time
+        edges = np.flatnonzero((first >= start) & (first < start + SOURCES))
+        sources, row = np.unique(first[edges], return_inverse=True)
+        distances, previous = dijkstra(doubled, directed=False, indices=sources, return_predecessors=True, limit=1.0)
+        # a path to either copy of the other end, then the edge itself, ends in the second copy of the first end
+        by_stay = distances[row, second[edges] + n_sites] + stay[edges]
+        by_cross = distances[row, second[edges]] + cross[edges]
+        last = np.where(by_stay <= by_cross, second[edges] + n_sites, second[edges])
+        for k in np.flatnonzero(np.minimum(by_stay, by_cross) < 1 - LEAST_VIOLATION).tolist():
+            cycle = _simple_cycle(previous[row[k]], int(first[edges[k]]) + n_sites, int(last[k]), n_sites)
+            if (cycle[0] < n_sites) == (cycle[-1] < n_sites):
+                # the path ran through the edge itself, so a worse cycle is found at another edge; this one is even
+                continue
+            cut = _cut(cycle, n_sites, edge_of)
+            excess = float(x[list(cut.odd)].sum() - x[list(cut.even)].sum()) - (len(cut.odd) - 1)
+            if excess > LEAST_VIOLATION:
+                cuts[cut] = excess
     return sorted(cuts, key=lambda cut: (-cuts[cut], cut.odd, cut.even))
 
 

@@ -10,9 +10,11 @@ from scipy.sparse.csgraph import connected_components, minimum_spanning_tree
 from anneal_ref.ground.problem import Problem
 from anneal_ref.ground.search_kernels import improve
 
+MOST_LOOKS = 10**7
 
-def searched(problem: Problem, spins: NDArray[np.int8], steps: int) -> tuple[int, NDArray[np.int8]]:
-    """Improve a configuration by a tabu search: energy in units, and the best configuration met.
+
+def searched(problem: Problem, spins: NDArray[np.int8], sweeps: int) -> tuple[int, NDArray[np.int8]]:
+    """Improve a configuration by a tabu search of some flips per spin: energy in units, and the best that was met.
 
     References
     ----------
@@ -21,6 +23,8 @@ def searched(problem: Problem, spins: NDArray[np.int8], steps: int) -> tuple[int
     graph = problem.with_ghost().graph()
     ghosts = graph.shape[0] - problem.n_sites
     full = np.concatenate([spins, np.ones(ghosts, dtype=np.int8)])
+    # each flip looks at all spins: on large lattices there are fewer
+    steps = min(sweeps * full.size, MOST_LOOKS // full.size)
     improve(graph.indptr, graph.indices, graph.data, full, steps, 5 + problem.n_sites // 20)
     best = full[: problem.n_sites] * (full[-1] if ghosts else np.int8(1))
     return problem.energy(best), best
@@ -30,7 +34,7 @@ def first_guess(problem: Problem, starts: int = 16) -> tuple[int, NDArray[np.int
     """Best of several searches from fixed pseudo-random configurations."""
     random = np.random.Generator(np.random.PCG64(20))
     bits = random.integers(0, 2, size=(starts, problem.n_sites), dtype=np.int8)
-    found = [searched(problem, 2 * row - 1, 40 * problem.n_sites) for row in bits.astype(np.int8)]
+    found = [searched(problem, 2 * row - 1, 40) for row in bits]
     return min(found, key=lambda item: item[0])
 
 

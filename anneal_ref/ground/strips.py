@@ -161,9 +161,7 @@ def _places(
     return halves[0], halves[1], weight[site]
 
 
-def _backward(
-    n_sites: int, ordering: Ordering, choices: list[NDArray[np.uint8]], limit: int
-) -> NDArray[np.int8]:
+def _backward(n_sites: int, ordering: Ordering, choices: list[NDArray[np.uint8]], limit: int) -> NDArray[np.int8]:
     """Read the configurations back, last spin first; where both directions are as good, follow both up to the limit."""
     spins = np.ones((1, n_sites), dtype=np.int8)
     for site, frontier, packed in zip(
