@@ -178,7 +178,7 @@ def judge_correlation_error(
         )
 
     alpha = 1 - acceptance_level
-    if accepting <= present <= rejecting:
+    if num > 0 and accepting <= present <= rejecting:
         return Finding("correlation_error", limit, low, high, outcome, None, _TRUTH_LIMITS)
     side = margin(accepting, alpha) if present < accepting else margin(rejecting, alpha / tests)
     more_shots, advice = _needed(side, shots, unit)

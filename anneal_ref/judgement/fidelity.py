@@ -87,8 +87,8 @@ def fidelity(
     need, shots = support(p), len(spins)
     if shots < need.shots_needed:
         raise NotSupported(
-            f"the shots do not support a fidelity: it takes about {SHOTS_PER_STATE} for each of the {need.states} states that hold "
-            f"{SUPPORT_SHARE:.0%} of the probability, {need.shots_needed} in all; there are {shots}",
+            f"the shots do not support a fidelity: it takes about {SHOTS_PER_STATE} for each of the {need.states} "
+            f"states that hold {SUPPORT_SHARE:.0%} of the probability, {need.shots_needed} in all; there are {shots}",
             alternatives=("log_likelihood",),
         )
     index = state_index(spins)

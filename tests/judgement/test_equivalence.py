@@ -118,7 +118,7 @@ def test_at_the_limit_no_number_is_named() -> None:
 
 
 def test_groups_are_named_in_the_advice() -> None:
-    finding = judge_correlation_error(measure(off_by(0.06), 1500, 1), 0.1, 1500, unit="shots in new gauges or batches")
+    finding = judge_correlation_error(measure(off_by(0.06), 400, 1), 0.1, 400, unit="shots in new gauges or batches")
     assert "new gauges" in finding.advice
 
 

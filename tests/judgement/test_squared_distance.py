@@ -257,6 +257,26 @@ def test_coverage(n: int, beta: float, eps: float, shots: int) -> None:
     assert misses(inverted, n, beta, eps, shots) <= ALLOWED
 
 
+@pytest.mark.parametrize("measure", [connected_distance, site_distance])
+@pytest.mark.parametrize("share", [0.0, 0.1, 1.0])
+def test_coverage_with_fields(measure: Callable[..., SquaredDistance], share: float) -> None:
+    rng = np.random.default_rng([11, int(10 * share)])
+    p, s = boltzmann(6, 1.0, 1, fields=0.5), states(6).astype(float)
+    q = (1 - share) * p + share * boltzmann(6, 1.0, 2, fields=0.5)
+
+    def target(law: np.ndarray) -> np.ndarray:
+        z = law @ s
+        return z if measure is site_distance else correlations(law) - np.outer(z, z)
+
+    difference = target(q) - target(p)
+    theta = float(np.sum((difference if measure is site_distance else difference[np.triu_indices(6, 1)]) ** 2))
+    count = 0
+    for _ in range(REPEATS):
+        distance = measure(draw(q, 400, rng), target(p), Clusters.of(400))
+        count += not distance.lower(0.975) <= theta * (1 + 1e-9) or not theta * (1 - 1e-9) <= distance.upper(0.975)
+    assert count <= ALLOWED
+
+
 @pytest.mark.parametrize("method", [bootstrap_percentile, not_debiased, gaussian_root])
 def test_wrong_twins_fail_the_coverage(method: Callable[..., tuple[float, float]]) -> None:
     assert misses(method, 10, 1.0, 0.05, 400) > ALLOWED
