@@ -209,8 +209,8 @@ class StateVector:
 
     def _steps(self, anneal: Anneal, marks: Sequence[float]) -> tuple[Splitting, Floats]:
         mesh = phase_mesh(anneal)
-        splitting = SPLITTINGS[self.scheme] if self.scheme else choose_splitting(self.tolerance, mesh.total)
-        density = step_density(splitting, self.tolerance, mesh.total)
+        splitting = SPLITTINGS[self.scheme] if self.scheme else choose_splitting(self.tolerance)
+        density = step_density(splitting, self.tolerance)
         if self.steps is not None:
             density = self.steps / max(mesh.total, 1e-12)
         return splitting, halved(time_grid(anneal, mesh, density, marks), self.halvings)

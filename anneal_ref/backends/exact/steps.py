@@ -1,14 +1,14 @@
 """The step rule: how many time steps a tolerance needs, told before the run from norms alone.
 
-The error of a splitting over a step is a sum of nested commutators of the two parts of H. Their size follows from two local
-frequencies, 2 G w (transverse) and 2 P f (problem), where w is the root-mean-square transverse weight and
-f^2 = sum_j J_ij^2 + h_i^2 averaged over the sites. Steps are equally long in the phase that `step_rate` accumulates,
-which weighs the commutator of degree seven that matters most, and their number is
+The error of a splitting over a step is a sum of nested commutators of the two parts of H and of their derivatives. Their size
+follows from two local frequencies, 2 G w (transverse) and 2 P f (problem), where w is the root-mean-square transverse weight and
+f^2 = sum_j J_ij^2 + h_i^2 averaged over the sites, and from how fast the schedule changes. Steps are equally long in the phase of
+`phase_mesh`, and their number is
 
-    steps = slope * tolerance^(-1/order) * (phase + offset)
+    steps = slope * tolerance^(-1/order) * phase
 
-for each splitting. The two constants were fitted by `benchmarks/step_rule.py` on one set of anneals, and hold on another that
-has other sizes, graphs, fields, weights and schedules.
+with one constant for each splitting, fitted by `benchmarks/step_rule.py` on one set of anneals. It holds on another set that has
+other sizes, graphs, fields, weights, schedules and waveforms.
 """
 
 from __future__ import annotations
@@ -27,25 +27,15 @@ if TYPE_CHECKING:
 _MESH = 256
 
 
-@dataclass(frozen=True, slots=True)
-class Rule:
-    """Constants of the number of steps of one splitting."""
-
-    slope: float
-    offset: float
-
-
-RULES = {
-    STRANG.name: Rule(0.17, 1.8),
-    BLANES_MOAN_4.name: Rule(0.115, 1.2),
-    BLANES_MOAN_6.name: Rule(0.163, 1.8),
-}
+SLOPES = {STRANG.name: 0.2, BLANES_MOAN_4.name: 0.105, BLANES_MOAN_6.name: 0.145}
+# phase that a change of the schedule from nothing to its maximum, or back, adds
+_CHANGE = 2.0
 # above this the errors no longer follow the power law, and steps cannot be longer
 _LOOSEST = 1e-3
 
 
 def step_rate(anneal: Anneal, times: Floats) -> Floats:
-    """Return the phase per unit of time at the given times; steps are equally long in this phase.
+    """Return the frequency that weighs the commutator of degree seven which matters most, at the given times.
 
     Parameters
     ----------
@@ -82,25 +72,32 @@ class Mesh:
 
 
 def phase_mesh(anneal: Anneal) -> Mesh:
-    """Return a mesh that is fine between all knots of the schedule."""
+    """Return a mesh that is fine between all knots of the schedule.
+
+    The phase is the integral of `step_rate`, and a share for the change of either schedule.
+    """
     knots = np.asarray(anneal.knots)
     count = max(2, -(-_MESH // (len(knots) - 1)))
     fractions = np.arange(count) / count
     times = np.append((knots[:-1, None] + np.diff(knots)[:, None] * fractions).ravel(), knots[-1])
     rate = step_rate(anneal, times)
-    phase = np.concatenate([[0.0], np.cumsum((rate[1:] + rate[:-1]) / 2 * np.diff(times))])
+    phase = (rate[1:] + rate[:-1]) / 2 * np.diff(times)
+    for strength in (anneal.transverse(times), anneal.problem(times)):
+        largest = np.abs(strength).max()
+        if largest > 0:
+            phase += _CHANGE / 2 * np.abs(np.diff(strength)) / largest
+    phase = np.concatenate([[0.0], np.cumsum(phase)])
     return Mesh(times, phase)
 
 
-def step_density(splitting: Splitting, tolerance: float, phase: float) -> float:
+def step_density(splitting: Splitting, tolerance: float) -> float:
     """Return the steps per unit of phase that keep all <Z> and <ZZ> within the tolerance."""
-    rule = RULES[splitting.name]
-    return rule.slope * min(tolerance, _LOOSEST) ** (-1 / splitting.order) * (1 + rule.offset / max(phase, 1e-12))
+    return SLOPES[splitting.name] * min(tolerance, _LOOSEST) ** (-1 / splitting.order)
 
 
-def choose_splitting(tolerance: float, phase: float) -> Splitting:
+def choose_splitting(tolerance: float) -> Splitting:
     """Return the splitting that needs the fewest layers."""
-    return min((BLANES_MOAN_6, BLANES_MOAN_4), key=lambda s: s.stages * step_density(s, tolerance, phase))
+    return min((BLANES_MOAN_6, BLANES_MOAN_4), key=lambda splitting: splitting.stages * step_density(splitting, tolerance))
 
 
 def time_grid(anneal: Anneal, mesh: Mesh, density: float, marks: Sequence[float] = ()) -> Floats:

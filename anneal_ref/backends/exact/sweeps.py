@@ -325,7 +325,7 @@ def run(x, w, e, f, u, c, s, tilings, groups, group, coupling, field, signs, fra
             tangents(tans, k, p, w, b, lane_bits)
             signed_lanes(tans[k, n], w, sb, lanes)
         tangents(tans, k + 1, p, w, a, lane_bits)
-        signed_lanes(tans[k + 1, n], w, sa, np.intp(1))
+        signed_lanes(tans[k + 1, n], w, sa, lanes)
         end = min(stop, p.tiles)
         sweep(x, w, e[group], f, u, c, s, p, start, end, coupling[1], field[1], phis[k], scales[k], lane_bits)
         group = (group + 1) % groups
