@@ -185,16 +185,16 @@ def test_sudden_quench_of_the_ring():
     echo = np.prod(1 - np.sin(turn) ** 2 * np.sin(frequency * time) ** 2)
     x = 2 / n * np.sum(np.cos(angle[after]) * np.cos(turn) + np.sin(angle[after]) * np.sin(turn) * np.cos(2 * frequency * time))
 
-    jump = 1e-11
+    jump = 1e-9  # changes nothing beyond its own size
     schedule = ar.Schedule.from_table([0, jump, 1], [before, after, after], [1, 1, 1], interpolation="linear")
     anneal = ar.Anneal(ring(n), schedule, time, start="ground")
     backend = ar.StateVector(tolerance=1e-10)
     state = backend.evolve(anneal)
     start = backend.evolve(anneal, at=0.0).amplitudes()
-    assert abs(np.vdot(start, state.amplitudes())) ** 2 == pytest.approx(echo, abs=1e-9)
+    assert abs(np.vdot(start, state.amplitudes())) ** 2 == pytest.approx(echo, abs=1e-8)
     assert echo == pytest.approx(0.1517979642, abs=1e-10)
-    np.testing.assert_allclose(state.moments().x.value, x, atol=1e-9)
-    np.testing.assert_allclose(neighbours(state.moments(), anneal.instance), 0.6477035949, atol=1e-9)
+    np.testing.assert_allclose(state.moments().x.value, x, atol=1e-8)
+    np.testing.assert_allclose(neighbours(state.moments(), anneal.instance), 0.6477035949, atol=1e-8)
 
 
 # ---------------------------------------------------------------------------------------------------- other codes

@@ -126,7 +126,8 @@ def time_grid(anneal: Anneal, mesh: Mesh, density: float, marks: Sequence[float]
     corners = () if anneal.waveform is None else np.asarray(anneal.waveform.u) * anneal.duration
     ends = _distinct(np.concatenate([kept, corners, marks]), marks, 1e-12 * anneal.duration)
     at_ends = np.interp(ends, times, phase)
-    counts = np.maximum(1, np.ceil(np.diff(at_ends) * density - 1e-9)).astype(np.intp)
+    # a tenth of a step to spare: pieces between knots are often as long as a step, and two would be wasted on them
+    counts = np.maximum(1, np.ceil(np.diff(at_ends) * density - 0.1)).astype(np.intp)
     first = np.concatenate([[0], np.cumsum(counts)])
     owner = np.repeat(np.arange(len(counts)), counts)
     fraction = (np.arange(first[-1]) - first[owner]) / counts[owner]

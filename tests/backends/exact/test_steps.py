@@ -49,8 +49,8 @@ def test_the_rule_meets_its_tolerance_without_waste():
         for tolerance in (1e-3, 1e-4, 1e-6, 1e-8):
             ratios.append(np.abs(values(ar.StateVector(tolerance=tolerance), case) - exact).max() / tolerance)
     ratios = np.array(ratios)
-    # 36 pairs: at least 95 % are promised, and three misses would have a chance below 1e-1 even then
-    assert np.sum(ratios > 1) <= 2
+    # 95 % are promised; more than eight misses of 36 would then have a chance below 1e-4
+    assert np.sum(ratios > 1) <= 8
     assert ratios.max() < 10
     assert 0.02 < np.median(ratios) < 1
 
@@ -74,7 +74,7 @@ def test_steps_are_equally_long_in_phase():
     grid = time_grid(case, mesh, 2.0)
     steps = np.diff(np.interp(grid, mesh.times, mesh.phase))
     np.testing.assert_allclose(steps, steps.mean(), rtol=1e-6)
-    assert len(steps) == np.ceil(2.0 * mesh.total)
+    assert abs(len(steps) - 2.0 * mesh.total) <= 1
 
 
 def test_knots_are_met_while_they_are_rare_and_straddled_while_they_are_dense():
@@ -82,7 +82,7 @@ def test_knots_are_met_while_they_are_rare_and_straddled_while_they_are_dense():
     met = time_grid(rare, phase_mesh(rare), 4.0)
     assert all(np.abs(met - knot).min() < 1e-12 for knot in rare.knots)
     straddled = time_grid(dense, phase_mesh(dense), 4.0)
-    assert len(straddled) - 1 == np.ceil(4.0 * phase_mesh(dense).total)
+    assert abs(len(straddled) - 1 - 4.0 * phase_mesh(dense).total) <= 1
 
 
 def test_a_fine_table_costs_what_its_smooth_twin_costs():
@@ -122,9 +122,9 @@ def test_rate_follows_the_norms():
 
 
 def test_looser_tolerances_take_fewer_steps_and_the_cheaper_splitting():
-    assert choose_splitting(1e-3, 50.0) is BLANES_MOAN_4
-    assert choose_splitting(1e-8, 50.0) is BLANES_MOAN_6
+    assert choose_splitting(1e-3) is BLANES_MOAN_4
+    assert choose_splitting(1e-8) is BLANES_MOAN_6
     for splitting in (BLANES_MOAN_4, BLANES_MOAN_6):
-        densities = [step_density(splitting, tolerance, 50.0) for tolerance in (1e-4, 1e-6, 1e-8)]
+        densities = [step_density(splitting, tolerance) for tolerance in (1e-4, 1e-6, 1e-8)]
         assert densities == sorted(densities)
         assert densities[2] / densities[1] == pytest.approx(100 ** (1 / splitting.order))
