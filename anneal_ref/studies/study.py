@@ -113,17 +113,7 @@ class Case:
         InputError
             A file that is malformed, or that says it belongs to another instance or duration.
         """
-        runs = []
-        for file in self.files:
-            run = Samples.read(file, self.values)
-            try:
-                runs.append(run.for_anneal(self.anneal))
-            except InputError as error:
-                raise InputError(f"{file}: {error}") from error
-        try:
-            return Samples.concatenate(runs) if len(runs) > 1 else runs[0]
-        except InputError as error:
-            raise InputError(f"the files of '{self.label}' do not go together: {error}") from error
+        return read_samples(self.files, self.anneal, self.values)
 
 
 @dataclass(frozen=True, slots=True)
@@ -200,6 +190,29 @@ class Study:
             cases.append(Case(name, anneal, files, table.samples.values))
         sha256 = hashlib.sha256(path.read_bytes()).hexdigest()
         return cls(table.name, table.description, path, sha256, schedule, tuple(cases), table)
+
+
+def read_samples(
+    paths: Sequence[str | Path], anneal: Anneal, values: Literal["spins", "bits"] | None = None
+) -> Samples:
+    """Read samples files of one anneal, hold each against it, and put them together; each is a gauge or batch.
+
+    Raises
+    ------
+    InputError
+        Names the file.
+    """
+    runs = []
+    for path in paths:
+        run = Samples.read(path, values)
+        try:
+            runs.append(run.for_anneal(anneal))
+        except InputError as error:
+            raise InputError(f"{path}: {error}") from error
+    try:
+        return Samples.concatenate(runs) if len(runs) > 1 else runs[0]
+    except InputError as error:
+        raise InputError(f"{paths[0]} and the files given with it do not go together: {error}") from error
 
 
 def time_unit(schedule: Schedule) -> str:

@@ -105,8 +105,8 @@ def suspects(verdict: Verdict) -> list[str]:
             sigma, gain = pairs.site_sigma(), pairs.site_gain()
             worst = int(np.argmax(sigma))
             lines.append(
-                f"{one.case.label}: {found} of {len(pairs)} pairs depart; most involved is spin {labels[worst]} "
-                f"(rms {sigma[worst]:.1f} sigma, its correlations {gain[worst]:.3f} times the true ones)"
+                f"{one.case.label}: {found} of {len(pairs)} pairs depart; most involved is spin {labels[worst]} (rms "
+                f"{sigma[worst]:.1f} sigma, its correlations {gain[worst]:.3f} times the true ones)"
             )
     return lines
 

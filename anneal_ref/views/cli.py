@@ -39,7 +39,7 @@ def main(argv: Sequence[str] | None = None) -> int:
     options = _parser().parse_args(argv)
     with warnings.catch_warnings():
         warnings.showwarning = _note
-        warnings.simplefilter("always", AnnealRefWarning)
+        warnings.simplefilter("default", AnnealRefWarning)
         try:
             return int(options.command(options))
         except AnnealRefError as error:
@@ -118,12 +118,14 @@ def _assess(options: argparse.Namespace) -> int:
 
 def _compare(options: argparse.Namespace) -> int:
     from anneal_ref.judgement.compare import compare
-    from anneal_ref.observe.samples import Samples
     from anneal_ref.studies.archive import read_reference
+    from anneal_ref.studies.study import read_samples
 
     reference = read_reference(options.reference)
-    read = [Samples.read(file, values=options.values).for_anneal(reference.anneal) for file in options.samples]
-    print(compare(reference, Samples.concatenate(read)))
+    print(compare(reference, read_samples(options.samples, reference.anneal, options.values)))
+    labels = reference.anneal.instance.lattice.labels.tolist()
+    if labels != list(range(len(labels))):
+        print(f"sites 0 to {len(labels) - 1} are, by their labels: {', '.join(map(str, labels))}")
     return OK
 
 

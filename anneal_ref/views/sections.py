@@ -25,7 +25,7 @@ from anneal_ref.views.content import Grid, Row, Section, picture
 
 MOST_LATTICES = 8
 MOST_ROWS = 40
-SCORED = (0, 1, 2, 3, 4, 5, 12, 13, 14)
+SCORED = (0, 2, 14, 4, 5, 12, 13, 1, 3)
 """Columns of a case that are about correlations and distributions ..."""
 MEASURED = (0, 2, 6, 7, 8, 9, 10, 11)
 """... and those about energy and order."""
@@ -68,9 +68,9 @@ def _errors(verdict: Verdict) -> Section:
     pooled_rows = tuple(
         Row(
             (
-                f"all at {at:g} {unit}".strip(), str(pooled.n_instances), str(pooled.n_shots), interval(pooled.score),
-                floor_text(pooled.score), "-" if pooled.score.disorder is None else f"{pooled.score.disorder:.2g}",
-                verdict.outcome_at(at),
+                f"all at {at:g} {unit}".strip(), verdict.outcome_at(at), interval(pooled.score),
+                floor_text(pooled.score), "-" if pooled.score.disorder is None else f"{pooled.score.disorder:.2g}", str(pooled.n_instances),
+                str(pooled.n_shots),
             ),
             pooled=True,
         )
@@ -80,15 +80,14 @@ def _errors(verdict: Verdict) -> Section:
     return Section(
         "How far the processor departs from quantum dynamics",
         (
-            "The correlation error is the distance between measured and true pair correlations, relative to the true "
-            "ones, "
-            "with the noise of the finite number of shots taken out. The verdict rests on the rows pooled over all "
-            "instances.",
+            "The correlation error is the distance between measured and true pair correlations, relative to the "
+            "true ones, with the noise of the finite number of shots taken out. The verdict rests on the rows "
+            "pooled over all instances.",
             *sentences(verdict)[1:],
         ),
         (
             Grid(
-                ("pooled", "instances", "shots", "correlation error", "perfect stays below", "disorder ±", "verdict"),
+                ("pooled", "verdict", "correlation error", "perfect stays below", "disorder ±", "instances", "shots"),
                 pooled_rows,
             ),
             Grid(
@@ -101,9 +100,8 @@ def _errors(verdict: Verdict) -> Section:
             picture(
                 axes,
                 "Correlation errors with intervals of every case and pooled, against the acceptance limit",
-                "Correlation error with its interval. The tick is what a perfect processor with the same shots stays "
-                "below in "
-                f"95 of 100 runs: an error to the left of it cannot be told from none.{less}",
+                "Correlation error with its interval. The tick is what a perfect processor with the same shots "
+                f"stays below in 95 of 100 runs: an error to the left of it cannot be told from none.{less}",
             ),
         ),
         _refusals(verdict),
@@ -193,10 +191,9 @@ def _where(verdict: Verdict) -> Section:
     dropped = len(verdict.judged) - len(chosen)
     texts = (
         "Bonds are coloured by the deviation of their correlation, in standard errors: blue where it is weaker than "
-        "the truth, "
-        "orange where it is stronger. Sites are coloured by the deviation of their magnetisation, blue for down. One "
-        "blue bond "
-        "points to a weak coupler, all bonds of a site blue to its readout, a tint of all bonds to the energy scale."
+        "the truth, orange where it is stronger. Sites are coloured by the deviation of their magnetisation, blue "
+        "for down. One blue bond points to a weak coupler, all bonds of a site blue to its readout, a tint of all "
+        "bonds to the energy scale."
         + (f" The {len(chosen)} cases with the clearest deviations are drawn, {dropped} are not." if dropped else ""),
     )
     grid = Grid(PAIR_HEADINGS, tuple(Row(cells) for cells in worst_pairs(verdict, 10)), title="Pairs that depart most")
@@ -227,20 +224,17 @@ def _method(verdict: Verdict) -> Section:
     fields = any(one.reference.anneal.instance.has_fields for one in verdict.judged)
     points = [
         "Truth: the Schrödinger equation with the given schedule, solved on the full state vector. Every case was "
-        "solved at least "
-        "three times with the step halved, and once with the sites in another order; the error bar is what these "
-        "runs differ by "
-        f"(tolerance {tolerance:g}, largest measured error {max(one.reference.error for one in verdict.judged):.1g}).",
+        "solved at least three times with the step halved, and once with the sites in another order; the error bar "
+        f"is what these runs differ by (tolerance {tolerance:g}, largest measured error "
+        f"{max(one.reference.error for one in verdict.judged):.1g}).",
         "Correlation error: root of the sum over pairs of (measured − true)² over the sum of true², the noise of "
-        "shots subtracted; a "
-        "negative value means less than noise alone gives on average. Gauges and batches count as the independent "
-        "units.",
+        "shots subtracted; a negative value means less than noise alone gives on average. Gauges and batches count "
+        "as the independent units.",
         f"Verdict: accept if the upper bound at level {level:.0%} of every pooled figure lies within its limit, "
-        "reject if the lower "
-        "bound of any lies beyond it (the error probability divided by the number of figures), else inconclusive.",
+        "reject if the lower bound of any lies beyond it (the error probability divided by the number of figures), "
+        "else inconclusive.",
         "Fidelity, (Σ √(p q))², is given only where there are about ten shots for each configuration that matters, "
-        "beside "
-        "what a perfect processor attains.",
+        "beside what a perfect processor attains.",
         "The statement holds for these instances, this schedule and these durations, for the time at which the "
         "samples were taken. "
         '"Disorder" is the error that remains if the instances are meant to stand for their whole ensemble.',
