@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from anneal_ref.backends.exact.simd import VECTOR_BYTES
 from anneal_ref.backends.exact.sweeps import TANGENTS, Tiling
+from anneal_ref.base.checks import integer
 
 ITEM_BYTES = {"double": 8, "single": 4}
 PIECE_BYTES = 1 << 14
@@ -110,13 +111,22 @@ def smallest(precision: str) -> int:
 
 
 def layout(bits: int, precision: str, low_bits: int | None = None, piece_bits: int | None = None) -> Layout:
-    """Layout of 2^bits amplitudes; `low_bits` and `piece_bits` override the measured choice."""
-    item = ITEM_BYTES[precision]
-    lane_bits = (VECTOR_BYTES // item).bit_length() - 1
+    """Layout of 2^bits amplitudes; `low_bits` and `piece_bits` override the measured choice.
+
+    Raises
+    ------
+    InputError
+        An override that leaves a tile or a piece smaller than a phase row.
+    """
+    item, least = ITEM_BYTES[precision], smallest(precision)
+    lane_bits = least - 3
     if low_bits is None:
         low_bits = bits if bits <= TILE_BITS else (bits + lane_bits + 2) // 2
     if piece_bits is None:
         piece_bits = (PIECE_BYTES // (2 * item)).bit_length() - 1
+    if low_bits != bits:
+        low_bits = integer("low_bits", low_bits, low=least, high=bits - 3)
+    piece_bits = integer("piece_bits", piece_bits, low=least)
     if low_bits <= piece_bits + 1:
         piece_bits = low_bits
     return Layout(bits, lane_bits, low_bits, piece_bits)

@@ -45,6 +45,9 @@ class Register:
         Store the half with the last spin up; needs zero fields and states of a definite spin-flip parity.
     precision : {"double", "single"}
     threads : int
+        Threads of layers and read-outs; the digits do not depend on it.
+    low_bits, piece_bits : int, optional
+        Override the measured choice of tiles (see `layout`); for tests and benchmarks.
 
     Raises
     ------
@@ -67,8 +70,9 @@ class Register:
         symmetric: bool = False,
         precision: str = "double",
         threads: int = 1,
-        _low_bits: int | None = None,
-        _piece_bits: int | None = None,
+        *,
+        low_bits: int | None = None,
+        piece_bits: int | None = None,
     ) -> None:
         self.couplings = finite("couplings", couplings, (None, None))
         self.n_sites = n = len(self.couplings)
@@ -83,7 +87,7 @@ class Register:
         self.threads = integer("threads", threads, low=1)
         self.symmetric = bool(symmetric)
         self._half = _is_half(n, self.symmetric, precision)
-        self._layout = place = layout(_stored_bits(n, self.symmetric, precision), precision, _low_bits, _piece_bits)
+        self._layout = place = layout(_stored_bits(n, self.symmetric, precision), precision, low_bits, piece_bits)
         self._tilings, space = tilings(place, self._half, n % 2 == 1)
         self._groups = 2 if place.rows > 1 else 1
         dtype = np.float64 if precision == "double" else np.float32
