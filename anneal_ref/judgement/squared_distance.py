@@ -20,6 +20,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,6 +33,10 @@ from anneal_ref.judgement.clusters import Clusters
 # without them correlations that were measured as exactly +-1 would claim to have no error at all.
 PSEUDO_SHOTS = 1.0
 _CHUNK = 8192
+
+_Floats = NDArray[np.floating[Any]]
+Features = Callable[[_Floats], _Floats]
+"""What is averaged: a function of spins, shape (shots, n_sites), with a row for each shot."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -190,7 +195,7 @@ def connected_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clus
     product = sum((sums.T @ sums for sums in pieces), np.zeros((len(mean), len(mean))))
     excess = product[first, second] / (clusters.shots**2 * clusters.spread)
 
-    def features(s: NDArray[np.float64]) -> NDArray[np.float64]:
+    def features(s: _Floats) -> _Floats:
         centred = s - mean
         return np.asarray(centred[:, first] * centred[:, second] + excess)
 
@@ -206,12 +211,12 @@ def _distance(
     spins: NDArray[np.int8],
     truth: NDArray[np.float64],
     clusters: Clusters,
-    features: Callable[[NDArray[np.float64]], NDArray[np.float64]],
+    features: Features,
 ) -> SquaredDistance:
     size = truth.size
     total, square, weighted = np.zeros(size), np.zeros((size, size)), np.zeros(size)
     for sums, sizes in cluster_sums(spins, clusters, features):
-        total += sums.sum(axis=0)
+        total += sums.sum(axis=0, dtype=np.float64)
         weighted += sizes @ sums
         square += sums.T @ sums
     shots, spread = clusters.shots, clusters.spread
@@ -251,16 +256,17 @@ def _traces(covariance: NDArray[np.float64], freedom: float) -> tuple[float, flo
     return first, second, third
 
 
-def cluster_sums(
-    spins: NDArray[np.int8], clusters: Clusters, features: Callable[[NDArray[np.float64]], NDArray[np.float64]]
-) -> Iterator[tuple[NDArray[np.float64], NDArray[np.float64]]]:
-    """Give sums of the features over clusters, with the sizes of these clusters, in bounded pieces."""
+def cluster_sums(spins: NDArray[np.int8], clusters: Clusters, features: Features) -> Iterator[tuple[_Floats, _Floats]]:
+    """Give sums of the features over clusters, with the sizes of these clusters, in bounded pieces.
+
+    Products of spins are +1 and -1, which single precision adds up exactly in pieces of this length.
+    """
     if clusters.independent:
         for start in range(0, len(spins), _CHUNK):
-            part = features(spins[start : start + _CHUNK].astype(np.float64))
+            part = features(spins[start : start + _CHUNK].astype(np.float32))
             yield part, np.ones(len(part))
         return
     for shots in clusters:
-        pieces = range(0, len(shots), _CHUNK)
-        total = sum(features(spins[shots[k : k + _CHUNK]].astype(np.float64)).sum(axis=0) for k in pieces)
+        pieces = (shots[k : k + _CHUNK] for k in range(0, len(shots), _CHUNK))
+        total = sum(features(spins[piece].astype(np.float32)).sum(axis=0, dtype=np.float64) for piece in pieces)
         yield np.asarray(total)[None, :], np.array([float(len(shots))])

@@ -195,7 +195,7 @@ def test_samples_without_any_scatter_claim_no_certainty() -> None:
 
 # ---- coverage: the interval holds the true value, and the tempting alternatives do not ----
 
-REPEATS = 400
+REPEATS = 300
 
 
 def bootstrap_percentile(
