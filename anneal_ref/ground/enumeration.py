@@ -11,6 +11,8 @@ from anneal_ref.ground.problem import Problem
 
 # energies of 2^10 inner configurations and the rows of the outer spins that flip most often fit the nearest cache
 INNER_SPINS = 10
+# configurations that are kept before it is known how many there are
+ROOM = 4096
 # some minutes
 MOST_CONFIGURATIONS = 2.0**40
 
@@ -65,8 +67,12 @@ def enumerate_states(problem: Problem, limit: int = 1) -> tuple[int, int, NDArra
     inner, crossing, outer = _tables(free)
     least, _ = minimum(inner.copy(), crossing, outer)
     copies = 2 if mirrored else 1
-    steps, places = np.zeros((2, -(-limit // copies)), dtype=np.int64)
-    count = collect(inner, crossing, outer, least + free.slack, steps, places)
+    wanted = -(-limit // copies)
+    steps, places = np.zeros((2, min(wanted, ROOM)), dtype=np.int64)
+    count = collect(inner.copy(), crossing, outer, least + free.slack, steps, places)
+    if min(wanted, count) > ROOM:
+        steps, places = np.zeros((2, min(wanted, count)), dtype=np.int64)
+        collect(inner, crossing, outer, least + free.slack, steps, places)
     spins = _spins(free.n_sites, steps[:count], places[:count])
     if mirrored:
         spins = np.concatenate([spins, np.ones_like(spins, shape=(len(spins), 1))], axis=1)

@@ -12,7 +12,7 @@ from anneal_ref.ground.problem import Problem
 from anneal_ref.ground.strips import eliminate, plan_strips
 
 # a configuration of the enumeration takes about this fraction of the time of a table entry of the elimination
-ENUMERATION_COST = 2.0**-6
+ENUMERATION_COST = 2.0**-7
 # up to here enumeration takes milliseconds, and it knows the degeneracy even of numbers with rounding
 ENUMERATION_FIRST = 2.0**26
 
@@ -34,7 +34,7 @@ def solve_exactly(problem: Problem, budget: float, memory: int, limit: int = 1) 
     ----------
     problem : Problem
     budget : float
-        Table entries of the elimination that may be computed (some ns each), or 64 times as many configurations.
+        Table entries of the elimination that may be computed (some ns each), or 128 times as many configurations.
     memory : int
         Bytes that the elimination may take.
     limit : int

@@ -211,7 +211,7 @@ def test_planar_against_matching_of_frustrated_plaquettes():
 @pytest.mark.parametrize("nodes", [0, 1])
 @pytest.mark.parametrize("law", ["plus_minus", "gaussian"])
 def test_few_nodes_give_an_honest_bound(nodes, law):
-    instance = drawn(lattices.complete(24), law, seed=3, fields=LAWS[law])
+    instance = drawn(lattices.complete(18), law, seed=3, fields=LAWS[law])
     exact = ground_energy(instance, method="enumeration")
     result = ground_energy(instance, method="cuts", nodes=nodes)
     assert result.bound <= exact.value <= result.value + 1e-12
