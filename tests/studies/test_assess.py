@@ -116,7 +116,10 @@ def test_optional_limits_decide_too(tmp_path: Path, truth: Archive) -> None:
     # a processor with couplings too weak ends above the true energy, by the mean over both instances
     mine = [one for one in verdict.judged if one.case.anneal.duration == 0.8]
     excess = np.mean(
-        [one.comparison.scores["residual_energy"].value - float(one.comparison.truth["residual_energy"]) for one in mine]
+        [
+            one.comparison.scores["residual_energy"].value - float(one.comparison.truth["residual_energy"])
+            for one in mine
+        ]
     )
     finding = next(f for at, f in verdict.findings if at == 0.8 and f.name == "residual_energy")
     assert finding.low < abs(excess) < finding.high

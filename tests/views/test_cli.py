@@ -141,10 +141,10 @@ def test_instances_with_bad_couplings(
     assert said in refused(["assess", str(study)], capsys)
 
 
-@pytest.mark.parametrize(("edge", "said"), [([1, 1], "two different sites"), ([1, 0], "coupled once"), ([0, 9], "join sites")])
-def test_instances_with_bad_edges(
-    study: Path, edge: list[int], said: str, capsys: pytest.CaptureFixture[str]
-) -> None:
+@pytest.mark.parametrize(
+    ("edge", "said"), [([1, 1], "two different sites"), ([1, 0], "coupled once"), ([0, 9], "join sites")]
+)
+def test_instances_with_bad_edges(study: Path, edge: list[int], said: str, capsys: pytest.CaptureFixture[str]) -> None:
     import json
 
     path = study.parent / "ring.json"
@@ -187,7 +187,9 @@ def test_a_damaged_archive_file_is_found_and_solved_again(
     (path,) = (study.parent / "truth").glob("*.h5")
     whole = path.read_bytes()
     middle = len(whole) // 2
-    path.write_bytes(whole[:middle] if damage == "cut" else whole[:middle] + bytes([whole[middle] ^ 4]) + whole[middle + 1 :])
+    path.write_bytes(
+        whole[:middle] if damage == "cut" else whole[:middle] + bytes([whole[middle] ^ 4]) + whole[middle + 1 :]
+    )
     capsys.readouterr()
     assert main(["audit", str(study.parent / "truth")]) == 1
     assert "1 with problems" in capsys.readouterr().out
