@@ -13,6 +13,7 @@ from anneal_ref.base.run import Run
 from anneal_ref.observe.moments import Moments
 from anneal_ref.studies.text import aligned
 from anneal_ref.truth.reference import Reference
+from anneal_ref.truth.refinement import SAFETY
 
 BARS = 3.0
 """Deviation of a recomputed number, in error bars, that is beyond chance; a bar covers about 95 % of the entries."""
@@ -85,11 +86,12 @@ def deviation(reference: Reference, run: Run) -> float:
     pairs = [(stored.z, again.z), (stored.zz, again.zz)]
     if stored.x is not None and again.x is not None:
         pairs.append((stored.x, again.x))
-    worst = [float((np.abs(b.value - a.value) / (a.num + reference.decay.rounding)).max()) for a, b in pairs]
+    # twice the layers: the new run has up to twice the rounding errors of the stored one, on top of the stored bars
+    own = 2 * SAFETY * reference.decay.rounding
+    worst = [float((np.abs(b.value - a.value) / (a.num + own)).max()) for a, b in pairs]
     table = reference.probabilities
     if table is not None and hasattr(state, "probabilities"):
-        bar = reference.error + reference.decay.rounding
-        worst.append(float(np.abs(np.asarray(state.probabilities()) - table).max()) / bar)
+        worst.append(float(np.abs(np.asarray(state.probabilities()) - table).max()) / (reference.error + own))
     return max(worst)
 
 

@@ -78,6 +78,7 @@ def decay_of(anneal: Anneal, runs: Sequence[Evolution], reordered: Evolution) ->
         [entries(run.moments) for run in runs[-RUNS:]],
         entries(reordered.moments) - entries(runs[0].moments),
         growth=float(ledger.get("layers", 2 ** (len(runs) - 1))) / float(coarsest.get("layers", 1)),
+        drift=float(ledger.get("norm_drift", 0.0)),
         order=_order(ledger),
     )
 

@@ -14,8 +14,9 @@ geometric series, d2 r/(1 - r). That is the estimate, with three reservations:
 - *Rounding does not shrink.* It is measured by solving the coarsest run again with the sites in another order: the
   same truncation error to the last digit, another sequence of roundings. Its size grows with the number of layers, by
   no more than in proportion. Differences at that level are taken out of the measured decay, and twice the level is
-  added to every bar. (The drift of the norm is a check, no measure: it does not see errors of the phases, and it
-  cancels in moments that are divided by the norm.)
+  added to every bar. The drift of the norm is a check and a poor measure: it does not see errors of the
+  phases, and it cancels in moments that are divided by the norm. It stands in only where another order changes no bit,
+  as for a single spin.
 
 None of this uses the tolerance that was asked for, and an entry's bar comes from that entry's own differences.
 
@@ -86,7 +87,7 @@ class Decay:
 
 
 def measure_decay(
-    values: Sequence[NDArray[np.float64]], reordered: NDArray[np.float64], growth: float, order: float
+    values: Sequence[NDArray[np.float64]], reordered: NDArray[np.float64], growth: float, drift: float, order: float
 ) -> Decay:
     """Return the decay of the changes over all entries.
 
@@ -98,17 +99,19 @@ def measure_decay(
         What the coarsest run of all changes by when its sites are solved in another order.
     growth : float
         Layers of the finest run over layers of the coarsest.
+    drift : float
+        Norm of the finest state minus one.
     order : float
         Order of the scheme, which the decay is never taken to exceed.
 
     Examples
     --------
     >>> runs = [np.array([0.3, -0.7]) + 2.0 ** (-6 * k) * np.array([1e-4, 2e-4]) for k in range(3)]
-    >>> decay = measure_decay(runs, np.array([1e-16, -1e-16]), growth=4, order=6)
+    >>> decay = measure_decay(runs, np.array([1e-16, -1e-16]), growth=4, drift=0.0, order=6)
     >>> round(1 / decay.ratio), decay.settled
     (64, True)
     """
-    rounding = max(growth * _rms(reordered), _ULP)
+    rounding = max(growth * _rms(reordered) or abs(drift), _ULP)
     first, second = _rms(values[1] - values[0]), _rms(values[2] - values[1])
     measured = max(second - rounding, 0.0) / first if first > 0 else (0.0 if second <= rounding else np.inf)
     return Decay(max(measured, 2.0**-order, _SECOND_ORDER * first), rounding, growth)

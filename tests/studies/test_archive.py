@@ -17,6 +17,7 @@ from anneal_ref.studies.records import to_record
 TABLE = ar.Schedule.from_table(
     [0, 0.2, 0.5, 0.8, 1], [3.0, 2.2, 0.9, 0.1, 0.0], [0.0, 0.3, 1.0, 1.9, 2.4], unit="GHz", prefactor=0.5
 )
+SINGLE = ar.StateVector(tolerance=1e-4, precision="single")
 RAMP = ar.Schedule.linear(transverse=(6.0, 0.0), problem=(0.0, 5.0))
 
 
@@ -70,9 +71,19 @@ def assert_same(a, b):
         lambda: solve(waveform=ar.Waveform([0, 0.4, 0.7, 1], [0, 0.5, 0.5, 1]), backend=ar.StateVector(steps=7)),
         lambda: solve(lattice=ar.lattices.from_edges(3, [(0, 2)])),
         lambda: solve(lattice=ar.lattices.from_edges(1, [])),
+        lambda: solve(n=1, lattice=ar.lattices.from_edges(1, []), fields=ar.disorder.constant(0.7), backend=SINGLE),
         lambda: solve(tolerance=1e-15, max_runs=3),
     ],
-    ids=["ramp", "table", "diluted from the ground state", "waveform", "single spin", "no edge", "not converged"],
+    ids=[
+        "ramp",
+        "table",
+        "diluted from the ground state",
+        "waveform",
+        "single spin",
+        "no edge",
+        "single precision",
+        "not converged",
+    ],
 )
 def test_a_reference_comes_back_whole(make, tmp_path):
     reference = make()

@@ -183,3 +183,53 @@ def test_the_known_answers_are_right():
         exact = EXACT.evolve(anneal).moments()
         np.testing.assert_allclose(exact.zz.value, spins.T @ (p[:, None] * spins), atol=2e-10)
         np.testing.assert_allclose(exact.z.value, spins.T @ p, atol=2e-10)
+
+
+# second-order weights of an eighth-order composition: W. Kahan and R.-C. Li, Math. Comput. 66, 1089 (1997), s = 17
+KAHAN_LI = [
+    "0.13020248308889008088", "0.56116298177510838456", "-0.38947496264484728641", "0.15884190655515560090",
+    "-0.39590389413323757734", "0.18453964097831570709", "0.25837438768632204729", "0.29501172360931029887",
+]  # fmt: skip
+
+
+def extended(anneal, steps):
+    """Moments z, zz of a ramp in extended precision, with the integrals of its schedule written out by hand."""
+    real = np.longdouble
+    first = [real(weight) for weight in KAHAN_LI]
+    weights = [*first, 1 - 2 * sum(first), *first[::-1]]
+    instance, n, duration = anneal.instance, anneal.n_sites, real(anneal.duration)
+    spins = (1 - 2 * ((np.arange(1 << n)[:, None] >> np.arange(n)) & 1)).astype(real)
+    energies = spins @ instance.fields.astype(real)
+    for (i, j), coupling in zip(instance.lattice.edges, instance.couplings, strict=True):
+        energies = energies + real(coupling) * spins[:, i] * spins[:, j]
+    psi = np.full(1 << n, np.sqrt(real(2)) ** -n, dtype=np.clongdouble)
+    t, h = real(0), duration / steps
+    for weight in weights * steps:
+        ends = np.array([t, t + weight * h / 2, t + weight * h])
+        problem = 6 * ends**2 / (2 * duration)
+        transverse = 8 * (ends - ends**2 / (2 * duration))
+        angle = transverse[2] - transverse[0]
+        psi = psi * np.exp(-1j * (problem[1] - problem[0]) * energies)
+        for i in range(n):
+            view = psi.reshape(-1, 2, 1 << i)
+            psi = (np.cos(angle) * view + 1j * np.sin(angle) * view[:, ::-1]).reshape(-1)
+        psi = psi * np.exp(-1j * (problem[2] - problem[1]) * energies)
+        t = ends[2]
+    p = psi.real**2 + psi.imag**2
+    return spins.T @ p, spins.T @ (p[:, None] * spins)
+
+
+@pytest.mark.skipif(np.finfo(np.longdouble).eps > 2e-19, reason="this machine has no extended precision")
+def test_bars_are_honest_down_to_rounding():
+    inside = []
+    for seed in (1, 2):
+        fields = ar.disorder.gaussian(0.3)
+        instance = ar.draw_instance(ar.lattices.chain(4), ar.disorder.gaussian(), fields=fields, seed=seed)
+        anneal = ar.Anneal(instance, RAMP, 1.0)
+        z, zz = extended(anneal, 150)
+        for tolerance in (1e-8, 1e-9, 1e-10, 1e-11):
+            found = reference(anneal, backend=ar.StateVector(tolerance=tolerance), samples=1).moments()
+            assert found.zz.num.max() < 1e-11
+            inside.extend(np.abs(found.z.value - z) <= found.z.num)
+            inside.extend((np.abs(found.zz.value - zz) <= found.zz.num)[np.triu_indices(4, 1)])
+    assert np.mean(inside) >= 0.95
