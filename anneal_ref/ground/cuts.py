@@ -92,11 +92,12 @@ class _Search:
         self.push(self.possible(-graph.weight), np.zeros(size), np.ones(size), [])
 
     def possible(self, bound: float) -> int:
-        """Lowest energy that a configuration can have, given that it is at least `bound`."""
+        """Return the lowest energy that a configuration can have, given that it is at least `bound`."""
         least = math.ceil(bound)
         return least + (int(self.graph.couplings.sum()) - least) % self.step
 
     def push(self, bound: int, low: NDArray[np.float64], high: NDArray[np.float64], cuts: list[Cut]) -> None:
+        """Put a box among the open nodes."""
         self.serial += 1
         heapq.heappush(self.open, _Node(bound, self.serial, low, high, cuts))
 
@@ -157,7 +158,8 @@ class _Search:
             self.pool.update(dict.fromkeys(new))
             if history[-1] > history[-2]:
                 node.cuts = [cut for cut, active in zip(node.cuts, relaxed.active.tolist(), strict=True) if active]
-            node.cuts = node.cuts + [cut for cut in new if cut not in set(node.cuts)]
+            kept = set(node.cuts)
+            node.cuts = node.cuts + [cut for cut in new if cut not in kept]
 
     def separated(self, x: NDArray[np.float64]) -> list[Cut]:
         """Look for cuts halfway to the best configuration, where they are deeper, then at x itself.
