@@ -115,7 +115,7 @@ def coverage(repeats: int, sizes: tuple[int, ...], shots: tuple[int, ...], epsil
     for n, size, eps in itertools.product(sizes, shots, epsilons):
         held: dict[str, list[float]] = {name: [] for name in METHODS}
         uppers = []
-        for kind, beta in (("graph", 1.0), ("graph", 2.5), ("chain", 0.7)):
+        for kind, beta in (("graph", 1.0), ("graph", 2.5), ("graph", 5.0), ("chain", 0.7)):
             for fault in ("noise", "scale", "other") if eps else ("noise",):
                 world = model(n, kind, beta, eps, fault)
                 rng = np.random.default_rng([n, size, int(1000 * eps)])

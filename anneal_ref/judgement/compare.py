@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import zlib
 from collections.abc import Mapping
-from types import MappingProxyType
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -155,9 +154,9 @@ def compare(
     if acceptance is not None:
         decision = _decision(acceptance, correlation, scores, truth, clusters)
     return Comparison(
-        MappingProxyType(scores),
-        MappingProxyType(truth),
-        MappingProxyType(sigma),
+        scores,
+        truth,
+        sigma,
         correlation,
         floor,
         pair_deviations(spins, moments.zz, clusters),

@@ -31,7 +31,7 @@ from anneal_ref.judgement.clusters import Clusters
 
 # Random shots added to the noise (not to the value), in the manner of Agresti and Coull, Am. Stat. 52, 119 (1998):
 # without them correlations that were measured as exactly +-1 would claim to have no error at all.
-PSEUDO_SHOTS = 1.0
+PSEUDO_SHOTS = 2.0
 _CHUNK = 8192
 
 _Floats = NDArray[np.floating[Any]]

@@ -1,5 +1,6 @@
 from __future__ import annotations
 
+import pickle
 from dataclasses import replace
 
 import numpy as np
@@ -205,6 +206,13 @@ def test_same_seed_same_answer(plain: Reference) -> None:
     texts = {str(compare(plain, samples, seed=seed)) for seed in (1, 1)}
     assert len(texts) == 1
     assert compare(plain, samples, seed=2).floor.raw_mean != compare(plain, samples, seed=1).floor.raw_mean
+
+
+def test_a_comparison_survives_a_pickle(plain: Reference) -> None:
+    result = compare(plain, plain.sample(300, seed=15), Acceptance(0.1))
+    again = pickle.loads(pickle.dumps(result))
+    assert str(again) == str(result)
+    assert pool([again]).score.value == pool([result]).score.value
 
 
 def test_the_table_is_readable(plain: Reference) -> None:
