@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import math
+import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
-from itertools import count
 from typing import Any
 
 import numpy as np
@@ -13,7 +13,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from anneal_ref.backends.exact import measure
 from anneal_ref.backends.exact.layout import ITEM_BYTES, aligned, layout, smallest, tilings
-from anneal_ref.backends.exact.sweeps import run
+from anneal_ref.backends.exact.sweeps import Scratch, run
 from anneal_ref.base.checks import choice, finite, integer, signs
 from anneal_ref.base.errors import AnnealRefError, InputError
 
@@ -93,18 +93,18 @@ class Register:
         dtype = np.float64 if precision == "double" else np.float32
         self._x = aligned(place.floats, dtype)
         bits, kept = place.bits, min(n, place.bits)
-        self._coupling, self._field = np.zeros((2, bits, bits)), np.zeros((2, bits))
-        self._coupling[0, :kept, :kept] = self.couplings[:kept, :kept]
-        self._field[0, :kept] = self.couplings[:kept, -1] if self._half else self.fields
+        coupling, field = np.zeros((2, bits, bits)), np.zeros((2, bits))
+        coupling[0, :kept, :kept] = self.couplings[:kept, :kept]
+        field[0, :kept] = self.couplings[:kept, -1] if self._half else self.fields
         self._shares = self.threads if self._groups == 2 else 1
         self._scratch = [
-            (
+            Scratch(
                 aligned(space.work, dtype),
                 aligned(2 * space.energies, np.float64).reshape(2, -1),
                 np.empty(2 * bits + 16),
                 *(aligned(space.tables, np.float64) for _ in range(3)),
-                self._coupling.copy(),
-                self._field.copy(),
+                coupling.copy(),
+                field.copy(),
                 np.empty(bits + 1),
             )
             for _ in range(self._shares)
@@ -238,57 +238,57 @@ class Register:
     def _advance(self, phi: Floats, scales: Floats, frames: Floats, tangents: Floats) -> None:
         """Sweep; with two groups the rotations of the group not swept last stay owed."""
         self._whole = False
-        amplitudes = 1 << self._layout.bits
-        if self._shares == 1 and amplitudes <= CALL_AMPLITUDES:
-            self._run(0, self._group, frames, phi, scales, tangents, 0, amplitudes)
-        else:
-            for k in range(len(phi)):
-                one = slice(k, k + 1)
-                group = (self._group + k) % self._groups
-                self._share(group, frames[one], phi[one], scales[one], tangents[k : k + 2])
+        shared = np.zeros(1 + 2 * len(phi), np.int64)
+        tiles = [tiling.tiles for tiling in self._tilings]
+        parts = 16 * self._shares if self._shares > 1 else max(1, (1 << self._layout.bits) // CALL_AMPLITUDES)
+        steps = np.array([max(1, count // parts) for count in tiles])
+        limit = max(1, CALL_AMPLITUDES // ((1 << self._layout.bits) // max(tiles)))
+
+        def loop(share: int) -> None:
+            k = 0
+            while k < len(phi) and not shared[0]:
+                k = run(
+                    self._x, self._scratch[share], self._tilings, self._groups, self._group,
+                    frames, phi, scales, tangents, steps, shared, k, limit,
+                )  # fmt: skip
+                if k < len(phi):
+                    time.sleep(0)
+
+        def stop() -> None:
+            shared[0] = 1
+
+        self._together(loop, stop)
         self._group = (self._group + len(phi)) % self._groups
         self._whole = True
 
-    def _run(self, share: int, group: int, frames: Floats, phi: Floats, scales: Floats, *rest: Any) -> None:
-        work, e, f, u, c, s, coupling, field, signs = self._scratch[share]
-        tangents, start, stop = rest
-        run(
-            self._x, work, e, f, u, c, s, self._tilings, self._groups, group, coupling, field, signs, frames, phi,
-            scales, tangents, start, stop,
-        )  # fmt: skip
+    def _spread(self, work: Callable[[int], None], jobs: int) -> None:
+        """Call work(job) for all jobs, on the threads of the register."""
+        waiting = list(range(jobs))[::-1]
 
-    def _share(self, group: int, frames: Floats, phi: Floats, scales: Floats, tangents: Floats) -> None:
-        """One sweep, its tiles handed out in small chunks to whichever thread is free."""
-        tiles = self._tilings[group].tiles
-        parts = max(16 * self._shares, (1 << self._layout.bits) // CALL_AMPLITUDES)
-        step = max(1, tiles // parts)
+        def loop(_: int) -> None:
+            while waiting:
+                try:
+                    job = waiting.pop()
+                except IndexError:  # another thread was faster
+                    return
+                work(job)
 
-        def work(share: int, start: int) -> None:
-            self._run(share, group, frames, phi, scales, tangents, start, min(tiles, start + step))
+        self._together(loop, waiting.clear)
 
-        self._spread(work, -(-tiles // step), step)
-
-    def _spread(self, work: Callable[[int, int], None], jobs: int, step: int = 1) -> None:
-        """Call work(share, job * step) for all jobs, on the threads of the register."""
-        if self._shares == 1 or jobs == 1:
-            for job in range(jobs):
-                work(0, job * step)
+    def _together(self, loop: Callable[[int], None], stop: Callable[[], None]) -> None:
+        """Run loop(share) on every thread, this one included; `stop` makes all of them end soon."""
+        if self._shares == 1:
+            loop(0)
             return
-        ticket = count()
-
-        def loop(share: int) -> None:
-            while (job := next(ticket)) < jobs:
-                work(share, job * step)
-
         with ThreadPoolExecutor(self._shares - 1) as pool:
             others = [pool.submit(loop, share) for share in range(1, self._shares)]
             try:
                 loop(0)
-            finally:
-                for _ in range(jobs):
-                    next(ticket)
-            for other in others:
-                other.result()
+                for other in others:
+                    other.result()
+            except BaseException:
+                stop()
+                raise
 
     def _settle(self) -> None:
         """Apply the rotations still owed."""
@@ -416,7 +416,7 @@ class Register:
         chunks, inside = self._chunks()
         weights = np.empty(chunks << inside)
 
-        def work(share: int, k: int) -> None:
+        def work(k: int) -> None:
             measure.chunk_weights(self._x, self._shape, k << inside, (k + 1) << inside, self._piece(), weights)
 
         self._spread(work, chunks)
@@ -429,7 +429,7 @@ class Register:
         b = low + inside
         z, zz = np.empty((chunks, b + 1)), np.empty((chunks, b, b))
 
-        def work(share: int, k: int) -> None:
+        def work(k: int) -> None:
             total, first = np.empty((1 << low, 1)), np.empty((1 << inside, low + 1))
             measure.chunk_moments(self._x, self._shape, k, inside, self._piece(), total, first, z[k], zz[k])
 
@@ -458,7 +458,7 @@ class Register:
         out = np.empty((chunks, place.bits + 1))
         odd = place.bits % 2
 
-        def work(share: int, k: int) -> None:
+        def work(k: int) -> None:
             scratch = aligned(place.lanes * place.lane_bits, self._x.dtype)
             start, stop = k << inside, (k + 1) << inside
             measure.chunk_currents(

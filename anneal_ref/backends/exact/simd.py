@@ -307,3 +307,26 @@ def lane_currents(typingctx: Any, re: Any, im: Any, x: Any, i: Any) -> Any:
         return context.get_dummy_value()
 
     return types.void(re, im, x, types.intp), codegen
+
+
+# ------------------------------------------------------------------------------------------------ between threads
+@intrinsic
+def add_shared(typingctx: Any, x: Any, i: Any, n: Any) -> Any:
+    """add_shared(x, i, n): x[i] += n as one step for all threads; returns the value before."""
+
+    def codegen(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return builder.atomic_rmw(
+            "add", pointer_to(context, builder, sig.args[0], args[0], args[1]), args[2], "seq_cst"
+        )
+
+    return types.int64(x, types.intp, types.int64), codegen
+
+
+@intrinsic
+def read_shared(typingctx: Any, x: Any, i: Any) -> Any:
+    """read_shared(x, i): x[i] as other threads left it, and all they wrote before."""
+
+    def codegen(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return builder.load_atomic(pointer_to(context, builder, sig.args[0], args[0], args[1]), "acquire", 8)
+
+    return types.int64(x, types.intp), codegen

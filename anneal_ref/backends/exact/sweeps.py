@@ -24,8 +24,10 @@ from anneal_ref.backends.exact.bundles import (
 from anneal_ref.backends.exact.phases import frame_energies, pair_phases, tile_phases
 from anneal_ref.backends.exact.rotations import rotate, rotate_pairs
 from anneal_ref.backends.exact.simd import (
+    add_shared,
     lanes_of,
     prefetch,
+    read_shared,
     vfma,
     vload,
     vmul,
@@ -35,6 +37,10 @@ from anneal_ref.backends.exact.simd import (
 
 TANGENTS = 64
 """Room for the tangents of all bits of a tile, below the tables of the lanes."""
+
+
+PATIENCE = 1 << 14
+"""Looks at the work of other threads before a thread gives its processor away (some hundred microseconds)."""
 
 
 class Tiling(NamedTuple):
@@ -55,6 +61,20 @@ class Tiling(NamedTuple):
     passes: Any  # (., 2) first bit and number of bits of the other passes above the row, bits ascending
     sites: Any  # (n,) local bits first, then those that number the tiles
     work: Any  # offsets of T, D, R, tangents before, after, signed lanes, buffer in the work array
+
+
+class Scratch(NamedTuple):
+    """Work space of one thread, and its copy of the problem."""
+
+    work: Any  # like the state: tables, tangents, buffer
+    energies: Any  # (2, .) tables of energies of each group, in double precision like all that follows
+    fields: Any  # fields on the spins of a tile
+    sums: Any  # energies of a tile
+    cosines: Any
+    sines: Any
+    coupling: Any  # (2, n, n) of the problem, and in the frame
+    field: Any  # (2, n) likewise
+    signs: Any  # (n + 1,) the frame
 
 
 @njit(cache=True)
@@ -288,13 +308,17 @@ def sweep(x, w, e, f, u, c, s, p, start, stop, coupling, field, phi, scale, lane
 
 
 @njit(cache=True, nogil=True)
-def run(x, w, e, f, u, c, s, tilings, groups, group, coupling, field, signs, frames, phis, scales, tans, start, stop):  # type: ignore[no-untyped-def]
-    """Layers 0, 1, ... of `phis` on tiles start .. stop-1 (of every sweep), the first on tilings[group].
+def run(x, scratch, tilings, groups, first, frames, phis, scales, tans, steps, shared, k, tiles):  # type: ignore[no-untyped-def]
+    """Layers k, k + 1, ... of `phis`, the first of all on tilings[first]; returns the layer to go on with.
 
     frames (layers, n + 1) are the frame signs of a layer, the left-out spin last; tans (layers + 1, n + 1) are the
-    tangents, those of the layer before first. coupling (2, n, n) and field (2, n) hold the numbers of the problem
-    first, then those in the frame (scratch), like signs (n + 1,).
+    tangents, those of the layer before first.
+
+    Any number of threads may call this at once with the same `shared` (1 + 2 layers,) of zeros: a stop mark, then for
+    every layer the chunks claimed and the chunks done. A chunk is steps[group] tiles. The call returns early after
+    about `tiles` tiles, after waiting long for another thread, or when the stop mark is set; then it is called again.
     """
+    w, e, f, u, c, s, coupling, field, signs = scratch
     lanes = lanes_of(x)
     lane_bits = 0
     while 1 << lane_bits < lanes:
@@ -303,7 +327,9 @@ def run(x, w, e, f, u, c, s, tilings, groups, group, coupling, field, signs, fra
     n = signs.size - 1
     signs[:] = 0.0
     ready = 0
-    for k in range(phis.size):
+    layers = phis.size
+    while k < layers:
+        group = (first + k) % groups
         p = tilings[group]
         levels = max(1, (p.bits - row_bits + 1) // 2)
         for i in range(n + 1):
@@ -326,6 +352,22 @@ def run(x, w, e, f, u, c, s, tilings, groups, group, coupling, field, signs, fra
             signed_lanes(tans[k, n], w, sb, lanes)
         tangents(tans, k + 1, p, w, a, lane_bits)
         signed_lanes(tans[k + 1, n], w, sa, lanes)
-        end = min(stop, p.tiles)
-        sweep(x, w, e[group], f, u, c, s, p, start, end, coupling[1], field[1], phis[k], scales[k], lane_bits)
-        group = (group + 1) % groups
+        step = steps[group]
+        chunks = (p.tiles + step - 1) // step
+        while True:
+            if tiles <= 0:
+                return k
+            start = step * add_shared(shared, 1 + 2 * k, 1)
+            if start >= p.tiles or read_shared(shared, 0):
+                break
+            end = min(p.tiles, start + step)
+            sweep(x, w, e[group], f, u, c, s, p, start, end, coupling[1], field[1], phis[k], scales[k], lane_bits)
+            add_shared(shared, 2 + 2 * k, 1)
+            tiles -= end - start
+        patience = PATIENCE
+        while read_shared(shared, 2 + 2 * k) < chunks:
+            patience -= 1
+            if patience == 0 or read_shared(shared, 0):
+                return k
+        k += 1
+    return k
