@@ -27,11 +27,11 @@ if TYPE_CHECKING:
 _MESH = 256
 
 
-SLOPES = {STRANG.name: 0.2, BLANES_MOAN_4.name: 0.105, BLANES_MOAN_6.name: 0.145}
+SLOPES = {STRANG.name: 0.19, BLANES_MOAN_4.name: 0.109, BLANES_MOAN_6.name: 0.149}
 # phase that a change of the schedule from nothing to its maximum, or back, adds
 _CHANGE = 2.0
 # above this the errors no longer follow the power law, and steps cannot be longer
-_LOOSEST = 1e-3
+_LOOSEST = 3e-4
 
 
 def step_rate(anneal: Anneal, times: Floats) -> Floats:
