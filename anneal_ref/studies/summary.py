@@ -14,10 +14,12 @@ from anneal_ref.studies.text import aligned
 if TYPE_CHECKING:
     from anneal_ref.studies.assess import Judged, Verdict
 
-HEADINGS = (
-    "instance", "N", "duration", "shots", "correlation error", "perfect <", "energy", "truth", "sigma",
-    "q2", "truth", "sigma", "fidelity", "perfect", "this case",
+SCORE_HEADINGS = (
+    "instance", "duration", "this case", "correlation error", "perfect <", "fidelity", "perfect", "log-lik.", "perfect",
+    "sigma", "N", "shots",
 )  # fmt: skip
+ENERGY_HEADINGS = ("instance", "duration", "residual energy", "truth", "sigma", "q2", "truth", "sigma")
+POOLED_HEADINGS = ("pooled", "verdict", "correlation error", "perfect <", "disorder ±", "instances", "shots")
 PAIR_HEADINGS = ("case", "pair", "truth", "processor", "sigma", "adjusted p")
 WORDS = {"accept": "ACCEPTED", "reject": "REJECTED", "inconclusive": "INCONCLUSIVE"}
 
@@ -25,60 +27,86 @@ WORDS = {"accept": "ACCEPTED", "reject": "REJECTED", "inconclusive": "INCONCLUSI
 def summary(verdict: Verdict) -> str:
     """Return all tables of a verdict."""
     study, level = verdict.study, verdict.decision.level
-    unit = time_unit(study.schedule)
     lines = [
         f"{study.name}: {len(verdict.judged)} cases, limit on the correlation error "
         f"{study.acceptance.correlation_error:g}",
         "",
     ]
-    lines.append(aligned([HEADINGS, *(case_row(one) for one in verdict.judged)], left=(0, len(HEADINGS) - 1)))
-    lines.append("")
-    rows = [("pooled at", "instances", "shots", "correlation error", "perfect <", "disorder ±", "verdict")]
-    for duration, pooled in verdict.pooled:
-        disorder = "-" if pooled.score.disorder is None else f"{pooled.score.disorder:.2g}"
-        rows.append(
-            (
-                f"{duration:g} {unit}".strip(), str(pooled.n_instances), str(pooled.n_shots), interval(pooled.score),
-                floor_text(pooled.score), disorder, verdict.outcome_at(duration),
-            )
-        )  # fmt: skip
-    lines += [aligned(rows, left=(0, 6)), ""]
+    lines += [aligned([SCORE_HEADINGS, *map(score_row, verdict.judged)], left=(0, 2)), ""]
+    lines += [aligned([ENERGY_HEADINGS, *map(energy_row, verdict.judged)]), ""]
+    lines += [aligned([POOLED_HEADINGS, *pooled_rows(verdict)], left=(0, 1)), ""]
     lines.append("pairs of spins that depart most (adjusted p: all pairs of a case looked at together, Holm)")
     lines += [aligned([PAIR_HEADINGS, *worst_pairs(verdict)], left=(0, 1)), *suspects(verdict), ""]
-    for one in verdict.judged:
-        lines += [f"note: {one.case.label}: {note}" for note in one.comparison.notes if note != refused(one)]
+    lines += [f"note: {note}" for note in notes(verdict)]
     lines.append(
         f"intervals at level {level:.0%}; perfect <: what a perfect processor with the same shots stays below in 95 "
         "of 100 runs;"
     )
-    lines += ["energy: residual energy per spin in units of J; sigma: (processor - truth) in standard errors", ""]
+    lines.append("sigma: (processor - truth) in standard errors; residual energy per spin in units of J")
+    lines += ["log-lik.: log-likelihood per shot under the truth, in nats, beside what a perfect processor scores", ""]
     lines += [f"{WORDS[verdict.outcome]}. {sentences(verdict)[0]}", *sentences(verdict)[1:]]
     return "\n".join(lines)
 
 
-def case_row(one: Judged) -> tuple[str, ...]:
-    """Return the cells of one case, in the order of `HEADINGS`."""
+def score_row(one: Judged) -> tuple[str, ...]:
+    """Return the scores of one case, cells in the order of `SCORE_HEADINGS`."""
     result = one.comparison
-    energy, order, fidelity = (result.scores.get(name) for name in ("residual_energy", "order_parameter", "fidelity"))
-    cells = [one.case.name, str(result.n_sites), f"{result.duration:g}", str(result.n_shots)]
-    cells += [interval(result.correlation_error), floor_text(result.correlation_error)]
-    for name, score in (("residual_energy", energy), ("order_parameter", order)):
-        cells += (
-            [measured(score), f"{float(result.truth[name]):.4f}", f"{result.sigma[name]:+.1f}"]
-            if score
-            else ["-", "-", "-"]
-        )
-    cells += (
-        [f"{fidelity.value:.3f}", floor_text(fidelity)]
-        if fidelity
-        else ["too few shots" if "shots" in refused(one) else "-", "-"]
-    )
-    return (*cells, result.verdict or "-")
+    error, fidelity, likelihood = (result.scores.get(k) for k in ("correlation_error", "fidelity", "log_likelihood"))
+    cells = [one.case.name, f"{result.duration:g}", result.verdict or "-"]
+    cells += [interval(error), floor_text(error)] if error else ["-", "-"]
+    if fidelity:
+        cells += [f"{fidelity.value:.3f}", floor_text(fidelity)]
+    else:
+        cells += ["too few shots" if "shots" in refused(one) else "-", "-"]
+    if likelihood:
+        cells += [f"{likelihood.value:.3f}", floor_text(likelihood), f"{result.sigma['log_likelihood']:+.1f}"]
+    else:
+        cells += ["-", "-", "-"]
+    return (*cells, str(result.n_sites), str(result.n_shots))
+
+
+def energy_row(one: Judged) -> tuple[str, ...]:
+    """Return energy and order of one case, cells in the order of `ENERGY_HEADINGS`."""
+    result = one.comparison
+    cells = [one.case.name, f"{result.duration:g}"]
+    for name in ("residual_energy", "order_parameter"):
+        score = result.scores[name]
+        cells.append(f"{score.value:.4f} ± {float(score.estimate.stat):.4f}")
+        cells += [f"{float(result.truth[name]):.4f}", f"{result.sigma[name]:+.1f}"]
+    return tuple(cells)
+
+
+def pooled_rows(verdict: Verdict) -> list[tuple[str, ...]]:
+    """Return a row for each duration, cells in the order of `POOLED_HEADINGS`."""
+    rows = []
+    for duration, pooled in verdict.pooled:
+        disorder = "-" if pooled.score.disorder is None else f"{pooled.score.disorder:.2g}"
+        cells = [f"all at {_at(verdict, duration)}", verdict.outcome_at(duration), interval(pooled.score)]
+        cells += [floor_text(pooled.score), disorder, str(pooled.n_instances), str(pooled.n_shots)]
+        rows.append(tuple(cells))
+    return rows
 
 
 def refused(one: Judged) -> str:
     """Return why there is no fidelity, or nothing."""
+    if "fidelity" in one.comparison.scores:
+        return ""
     return next((note for note in one.comparison.notes if "fidelity" in note), "")
+
+
+def notes(verdict: Verdict) -> list[str]:
+    """Return what the reader should know about the cases, each note once with its cases; refusals are apart."""
+    cases: dict[str, list[str]] = {}
+    for one in verdict.judged:
+        for note in one.comparison.notes:
+            if note != refused(one):
+                cases.setdefault(note, []).append(one.case.label)
+    lines = []
+    for note, labels in cases.items():
+        others = f" and {len(labels) - 6} more" if len(labels) > 6 else ""
+        where = "every case" if len(labels) == len(verdict.judged) else "; ".join(labels[:6]) + others
+        lines.append(f"{note} ({where})")
+    return lines
 
 
 def worst_pairs(verdict: Verdict, count: int = 6, each: int = 2) -> list[tuple[str, ...]]:
@@ -178,11 +206,6 @@ def _said(finding: Finding) -> str:
 def interval(score: Score) -> str:
     """Return value and interval."""
     return f"{score.value:.3f} ({score.low:.3f} to {score.high:.3f})"
-
-
-def measured(score: Score) -> str:
-    """Return value and standard error, in four decimals."""
-    return f"{score.value:.4f} ± {float(score.estimate.stat):.4f}"
 
 
 def floor_text(score: Score) -> str:

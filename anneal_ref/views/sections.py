@@ -10,12 +10,15 @@ from numpy.typing import NDArray
 from anneal_ref.studies.assess import Judged, Verdict
 from anneal_ref.studies.study import time_unit
 from anneal_ref.studies.summary import (
-    HEADINGS,
+    ENERGY_HEADINGS,
     PAIR_HEADINGS,
-    case_row,
-    floor_text,
-    interval,
+    POOLED_HEADINGS,
+    SCORE_HEADINGS,
+    energy_row,
+    notes,
+    pooled_rows,
     refused,
+    score_row,
     sentences,
     suspects,
     worst_pairs,
@@ -25,10 +28,6 @@ from anneal_ref.views.content import Grid, Row, Section, picture
 
 MOST_LATTICES = 8
 MOST_ROWS = 40
-SCORED = (0, 2, 14, 4, 5, 12, 13, 1, 3)
-"""Columns of a case that are about correlations and distributions ..."""
-MEASURED = (0, 2, 6, 7, 8, 9, 10, 11)
-"""... and those about energy and order."""
 
 
 def sections(verdict: Verdict) -> list[Section]:
@@ -58,25 +57,13 @@ def facts(verdict: Verdict) -> list[tuple[str, str]]:
 
 
 def _errors(verdict: Verdict) -> Section:
-    rows = [case_row(one) for one in verdict.judged]
     shown = sorted(verdict.judged, key=lambda one: -one.comparison.correlation_error.value)[:MOST_ROWS]
     shown = [one for one in verdict.judged if one in shown]
     unit = time_unit(verdict.study.schedule)
     labels = [one.case.label for one in shown] + [f"all at {at:g} {unit}".strip() for at, _ in verdict.pooled]
     scores = [one.comparison.correlation_error for one in shown] + [pooled.score for _, pooled in verdict.pooled]
     axes = plots.correlation_errors(labels, scores, verdict.study.acceptance.correlation_error)
-    pooled_rows = tuple(
-        Row(
-            (
-                f"all at {at:g} {unit}".strip(), verdict.outcome_at(at), interval(pooled.score),
-                floor_text(pooled.score), "-" if pooled.score.disorder is None else f"{pooled.score.disorder:.2g}", str(pooled.n_instances),
-                str(pooled.n_shots),
-            ),
-            pooled=True,
-        )
-        for at, pooled in verdict.pooled
-    )  # fmt: skip
-    less = "" if len(shown) == len(rows) else f" The {len(shown)} cases with the largest errors are drawn."
+    less = "" if len(shown) == len(verdict.judged) else f" The {len(shown)} cases with the largest errors are drawn."
     return Section(
         "How far the processor departs from quantum dynamics",
         (
@@ -86,15 +73,8 @@ def _errors(verdict: Verdict) -> Section:
             *sentences(verdict)[1:],
         ),
         (
-            Grid(
-                ("pooled", "verdict", "correlation error", "perfect stays below", "disorder ±", "instances", "shots"),
-                pooled_rows,
-            ),
-            Grid(
-                tuple(head.replace("perfect <", "perfect stays below") for head in _picked(HEADINGS, SCORED)),
-                tuple(Row(_picked(row, SCORED)) for row in rows),
-                title="Every case",
-            ),
+            Grid(_spelled(POOLED_HEADINGS), tuple(Row(cells, pooled=True) for cells in pooled_rows(verdict))),
+            Grid(_spelled(SCORE_HEADINGS), tuple(Row(score_row(one)) for one in verdict.judged), title="Every case"),
         ),
         (
             picture(
@@ -104,8 +84,14 @@ def _errors(verdict: Verdict) -> Section:
                 f"stays below in 95 of 100 runs: an error to the left of it cannot be told from none.{less}",
             ),
         ),
-        _refusals(verdict),
+        (*_refusals(verdict), *notes(verdict)),
     )
+
+
+def _spelled(heads: tuple[str, ...]) -> tuple[str, ...]:
+    """Write out the headings that the text tables abbreviate."""
+    words = {"perfect <": "perfect stays below", "log-lik.": "log-likelihood"}
+    return tuple(words.get(head, head) for head in heads)
 
 
 def _refusals(verdict: Verdict, most: int = 6) -> tuple[str, ...]:
@@ -163,8 +149,7 @@ def _energies(verdict: Verdict) -> Section:
                 f"{caption} Lines: truth; points: processor, with {verdict.decision.level:.0%} intervals.",
             )
         )
-    heads = tuple({"energy": "residual energy"}.get(head, head) for head in _picked(HEADINGS, MEASURED))
-    grid = Grid(heads, tuple(Row(_picked(case_row(one), MEASURED)) for one in verdict.judged))
+    grid = Grid(ENERGY_HEADINGS, tuple(Row(energy_row(one)) for one in verdict.judged))
     text = "Residual energy per spin in units of J, and order parameter q2; sigma is the difference in standard errors."
     return Section("Energy and order", (text,), (grid,), tuple(pictures))
 
@@ -260,7 +245,3 @@ def identities(verdict: Verdict) -> Iterator[tuple[str, str]]:
         yield f"instance {name}", one.reference.anneal.instance.identity
     for one in verdict.judged:
         yield f"reference {one.case.label}", one.reference.identity
-
-
-def _picked(cells: tuple[str, ...], columns: tuple[int, ...]) -> tuple[str, ...]:
-    return tuple(cells[k] for k in columns)

@@ -183,7 +183,7 @@ def test_the_tables_hold_a_row_for_each_case_and_each_duration(tmp_path: Path, t
     lines = str(verdict).splitlines()
     for name in ("ring", "ladder"):
         assert sum(line.startswith(f"{name} ") and "4000" in line for line in lines) == 2
-    assert sum(line.startswith(("0.3 ns", "0.8 ns")) for line in lines) == 2
+    assert sum(line.startswith(("all at 0.3 ns", "all at 0.8 ns")) for line in lines) == 2
     assert any(line.startswith("REJECTED. The processor misses") for line in lines)
     assert "pairs of spins that depart most" in str(verdict)
     row = next(line for line in lines if line.startswith("ring ") and " 0.8 " in line)
