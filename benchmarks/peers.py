@@ -4,23 +4,30 @@
     python benchmarks/peers.py --full      N = 12, 14, 16 at T = 1 and 7 (about an hour on a quiet machine)
     python benchmarks/peers.py --quick --half     gives the others the even half of the space too, set up by hand
 
-Problem: cylinders with +-1 couplings, G = 20 (1 - s)^3, P = 10 s (0.05 + 0.95 s) rad/ns, from |+...+>. Every contender is given
-the loosest tolerance, on a ladder of four rungs a decade, whose largest error over all <Z_i Z_j> is at most 1e-6; the ladder is
-climbed at N = 12, and further where a larger N needs it. CPU time of one thread; assembly of the Hamiltonians is
-excluded, everything else of ours is included (steps, angles, correlations). The ratio is to our time in the same run; a contender
-that was far behind at N = 12 is left out beyond.
+Problem: cylinders with +-1 couplings, G = 20 (1 - s)^3, P = 10 s (0.05 + 0.95 s) rad/ns, from |+...+>. Every contender
+is given the loosest tolerance, on a ladder of four rungs a decade, whose largest error over all <Z_i Z_j> is at most
+1e-6; the ladder is climbed at N = 12, and further where a larger N needs it. CPU time of one thread; assembly of the
+Hamiltonians is excluded, everything else of ours is included (steps, angles, correlations). The ratio is to our time in
+the same run; a contender that was far behind at N = 12 is left out beyond.
 """
 
 from __future__ import annotations
 
 import os
 
-for _variable in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS", "QUTIP_NUM_PROCESSES"):
+for _variable in (
+    "OMP_NUM_THREADS",
+    "OPENBLAS_NUM_THREADS",
+    "MKL_NUM_THREADS",
+    "NUMBA_NUM_THREADS",
+    "QUTIP_NUM_PROCESSES",
+):
     os.environ[_variable] = "1"
 
 import argparse  # noqa: E402
 import time  # noqa: E402
 from collections.abc import Callable  # noqa: E402
+from functools import partial  # noqa: E402
 
 import numpy as np  # noqa: E402
 import qutip  # noqa: E402
@@ -74,6 +81,7 @@ class Assembled:
         self.start = np.full(size, size**-0.5, complex)
 
     def correlations(self, psi: np.ndarray) -> np.ndarray:
+        """Return <Z_i Z_j>."""
         p = np.abs(psi) ** 2
         return self.spins.T @ (self.spins * (p / p.sum())[:, None])
 
@@ -124,7 +132,9 @@ def qutip_sesolve(method: str, kind: str) -> Callable[[Assembled, float], np.nda
             parts = [qutip.Qobj(part).to(kind) for part in (case.flip, case.diagonal)]
             strengths = (lambda t: transverse(t / duration), lambda t: problem(t / duration))
             prepared.clear()
-            prepared[id(case)] = qutip.QobjEvo([[part, strength] for part, strength in zip(parts, strengths, strict=True)])
+            prepared[id(case)] = qutip.QobjEvo(
+                [[part, strength] for part, strength in zip(parts, strengths, strict=True)]
+            )
             return solve(case, 1e-2)
         options = {
             "method": method, "rtol": tolerance, "atol": 1e-2 * tolerance, "nsteps": 10**8,
@@ -176,16 +186,17 @@ def ours(anneal: ar.Anneal, exact: np.ndarray) -> tuple[float, float, dict]:
 def contender(
     solve: Callable[[Assembled, float], np.ndarray], case: Assembled, exact: np.ndarray, first: float, limit: float
 ) -> tuple[float, float, float]:
-    """Return CPU seconds, error and tolerance of the loosest rung that reaches the target within the limit of seconds a run."""
+    """Return CPU seconds, error and tolerance of the loosest rung that reaches the target."""
     tolerance = first
     solve(case, 1e-2)
     while tolerance > 1e-13:
-        seconds, psi = timed(lambda: solve(case, tolerance), 0.0)
+        call = partial(solve, case, tolerance)
+        seconds, psi = timed(call, 0.0)
         seconds = getattr(solve, "seconds", seconds)
         error = np.abs(case.correlations(psi) - exact).max()
         if error <= TARGET:
             if seconds < 2:
-                again, _ = timed(lambda: solve(case, tolerance), 2.0)
+                again, _ = timed(call, 2.0)
                 seconds = min(seconds, again)
             return seconds, error, tolerance
         if seconds > limit:
@@ -202,8 +213,9 @@ def table(sizes: list[int], durations: list[float], half: bool) -> None:
             exact = ar.StateVector(tolerance=1e-10, halvings=1).evolve(anneal).moments().zz.value
             seconds, error, ledger = ours(anneal, exact)
             print(
-                f"N = {n}, T = {duration:g}: ours {1e3 * seconds:.2f} ms, error {error:.1e}, {ledger['layers']} layers of "
-                f"{ledger['scheme']}, {1e9 * seconds / ledger['layers'] / 2 ** (n - 1):.2f} ns a layer and stored amplitude",
+                f"N = {n}, T = {duration:g}: ours {1e3 * seconds:.2f} ms, error {error:.1e}, "
+                f"{ledger['layers']} layers of {ledger['scheme']}, "
+                f"{1e9 * seconds / ledger['layers'] / 2 ** (n - 1):.2f} ns a layer and stored amplitude",
                 flush=True,
             )
             case = Assembled(anneal, half)
@@ -215,7 +227,8 @@ def table(sizes: list[int], durations: list[float], half: bool) -> None:
                 if took < np.inf:
                     found[name] = (took, tolerance)
                     print(
-                        f"    {name:18s} {took:9.3f} s, error {off:.1e} at rtol {tolerance:.1e}: {took / seconds:7.0f} x",
+                        f"    {name:18s} {took:9.3f} s, error {off:.1e} at rtol {tolerance:.1e}: "
+                        f"{took / seconds:7.0f} x",
                         flush=True,
                     )
             fastest = min(found, key=lambda name: found[name][0])

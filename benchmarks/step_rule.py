@@ -3,8 +3,10 @@
     python benchmarks/step_rule.py --quick     a tenth of the cases, held-out coverage only (a minute)
     python benchmarks/step_rule.py --full      the fit and the coverage on both sets (about twenty minutes)
 
-For each anneal and splitting the error over all <Z> and <ZZ> is measured against a run with at least ten times finer steps. The
-fit gives the slope of `steps = slope * tolerance^(-1/order) * phase` that 97 % of the fit set stays below. Coverage is the share of (anneal, tolerance) pairs whose true error stays within the tolerance when the shipped rule chooses the steps.
+For each anneal and splitting the error over all <Z> and <ZZ> is measured against a run with at least ten times finer
+steps. The fit gives the slope of `steps = slope * tolerance^(-1/order) * phase` that 97 % of the fit set stays below.
+Coverage is the share of (anneal, tolerance) pairs whose true error stays within the tolerance when the shipped rule
+chooses the steps.
 """
 
 from __future__ import annotations
@@ -53,7 +55,9 @@ def schedule(kind: int, transverse: float, problem: float, generator: np.random.
     rows = int(generator.choice([11, 41, 201]))
     s = np.linspace(0, 1, rows)
     if kind == 0:
-        return ar.Schedule.polynomial(transverse * np.array([1.0, -3.0, 3.0, -1.0]), problem * np.array([0.0, 0.05, 0.95]))
+        return ar.Schedule.polynomial(
+            transverse * np.array([1.0, -3.0, 3.0, -1.0]), problem * np.array([0.0, 0.05, 0.95])
+        )
     if kind == 1:
         return ar.Schedule.linear((transverse, 0.0), (0.0, problem))
     if kind == 2:
@@ -64,7 +68,7 @@ def schedule(kind: int, transverse: float, problem: float, generator: np.random.
 
 
 def anneals(which: str, count: int) -> list[ar.Anneal]:
-    """Draw anneals over graphs, laws, fields, weights, durations of 0.1 to 50 and schedules, waveforms with pauses among them."""
+    """Draw anneals over graphs, laws, fields, weights, durations from 0.1 to 50, schedules and waveforms."""
     generator = np.random.default_rng(SEEDS[which])
     held = which == "held-out"
     kinds = ["cylinder", "chain", "dense", "dense-normalised", "random", "biclique", "ring"]
@@ -82,7 +86,10 @@ def anneals(which: str, count: int) -> list[ar.Anneal]:
         weights = np.ones(n) if generator.random() < 0.6 else generator.uniform(0.3, 1.7, n)
         duration = float(10 ** generator.uniform(-1, 1.7 if held else 1.5))
         path = schedule(
-            int(generator.integers(4 if held else 3)), generator.choice([3.0, 10.0, 20.0]), generator.choice([3.0, 8.0, 12.0]), generator
+            int(generator.integers(4 if held else 3)),
+            generator.choice([3.0, 10.0, 20.0]),
+            generator.choice([3.0, 8.0, 12.0]),
+            generator,
         )
         waveform = None
         if generator.random() < 0.25:
@@ -101,7 +108,7 @@ def truth(anneal: ar.Anneal) -> np.ndarray:
 
 
 def needed_slopes(anneal: ar.Anneal, name: str, exact: np.ndarray) -> list[float]:
-    """Return density * tolerance^(1/order) for each tolerance, from the density beyond which the error stays below it."""
+    """Return density * tolerance^(1/order) for each tolerance, where the error stays below it from."""
     order, tolerances = SPLITTINGS[name].order, TOLERANCES[name]
     phase = phase_mesh(anneal).total
     densities, errors = [], []
@@ -126,7 +133,8 @@ def fit(count: int) -> None:
         slopes = np.array([slope for anneal, exact in cases for slope in needed_slopes(anneal, name, exact)])
         print(
             f"{name:14s} {len(slopes)} points: median slope {np.median(slopes):.4f}, scatter of its logarithm "
-            f"{np.log(slopes).std():.2f}, {COVERED:.0%} quantile {np.quantile(slopes, COVERED):.4f}; shipped: {SLOPES[name]}"
+            f"{np.log(slopes).std():.2f}, {COVERED:.0%} quantile {np.quantile(slopes, COVERED):.4f}; "
+            f"shipped: {SLOPES[name]}"
         )
 
 
@@ -147,7 +155,10 @@ def coverage(which: str, count: int) -> None:
             f"  tolerance {tolerance:.0e} ({', '.join(sorted(schemes))}): within {np.mean(np.array(ratios) <= 1):.3f}, "
             f"error / tolerance median {np.median(ratios):.3f}, largest {max(ratios):.2f}"
         )
-    print(f"  all: within {np.mean(np.array(total) <= 1):.4f} of {len(total)}, median {np.median(total):.3f}, largest {max(total):.2f}")
+    print(
+        f"  all: within {np.mean(np.array(total) <= 1):.4f} of {len(total)}, "
+        f"error / tolerance median {np.median(total):.3f}, largest {max(total):.2f}"
+    )
 
 
 def main() -> None:

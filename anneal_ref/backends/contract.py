@@ -146,7 +146,12 @@ def check_kicks(kicks: Sequence[Kick], n_sites: int, end: float = 1.0) -> tuple[
 
 
 def _readable_seconds(seconds: float) -> str:
-    for limit, factor, unit in ((1.0, 1e3, "ms"), (120.0, 1.0, "s"), (7200.0, 1 / 60, "min"), (172800.0, 1 / 3600, "h")):
+    for limit, factor, unit in (
+        (1.0, 1e3, "ms"),
+        (120.0, 1.0, "s"),
+        (7200.0, 1 / 60, "min"),
+        (172800.0, 1 / 3600, "h"),
+    ):
         if seconds < limit:
             return f"{seconds * factor:.2g} {unit}"
     return f"{seconds / 86400:.2g} days"

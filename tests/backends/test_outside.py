@@ -99,7 +99,9 @@ def test_no_coupling_is_a_product_of_single_spins():
             psi = expm(-1j * 2.0 / steps * (-3.0 * (1 - s) * weight * X + 2.0 * s * field * Z)) @ psi
         expected.append(abs(psi[0]) ** 2 - abs(psi[1]) ** 2)
     np.testing.assert_allclose(moments.z.value, expected, atol=1e-6)
-    np.testing.assert_allclose(moments.zz.value, np.outer(expected, expected) + np.diag(1 - np.square(expected)), atol=1e-6)
+    np.testing.assert_allclose(
+        moments.zz.value, np.outer(expected, expected) + np.diag(1 - np.square(expected)), atol=1e-6
+    )
 
 
 def test_no_field_keeps_every_magnetisation_at_zero():
@@ -119,14 +121,18 @@ def test_a_slow_anneal_ends_in_the_ground_state():
     instance = ar.Instance(ar.lattices.chain(6), [1.0, -0.8, 1.2, 0.7, -1.1], fields=[0.3, 0, 0, 0.2, 0, 0])
     state = ar.StateVector(tolerance=1e-6).evolve(ar.Anneal(instance, ramp(), 400.0))
     assert state.ground_probability() > 0.999
-    assert state.energy() == pytest.approx(2.0 * min(instance.energies(1 - 2 * ((np.arange(64)[:, None] >> np.arange(6)) & 1))), abs=5e-3)
+    assert state.energy() == pytest.approx(
+        2.0 * min(instance.energies(1 - 2 * ((np.arange(64)[:, None] >> np.arange(6)) & 1))), abs=5e-3
+    )
 
 
 # ------------------------------------------------------------------------------------------------- uniform chains
 CRITICAL = constant(1.0, 1.0)
 
 
-@pytest.mark.parametrize(("n", "energy", "bond"), [(8, -10.2516617910, 0.6407288619), (12, -15.3225951511, 0.6384414646)])
+@pytest.mark.parametrize(
+    ("n", "energy", "bond"), [(8, -10.2516617910, 0.6407288619), (12, -15.3225951511, 0.6384414646)]
+)
 @pytest.mark.parametrize("coupling", [-1.0, 1.0], ids=["ferromagnet", "antiferromagnet"])
 def test_critical_ring(n, energy, bond, coupling):
     # source: P. Pfeuty, Ann. Phys. 57, 79 (1970): E0 = -2 / sin(pi/2N), <X> = -sign(J) <ZZ> = 1/(N sin(pi/2N))
@@ -183,7 +189,13 @@ def test_sudden_quench_of_the_ring():
     turn = angle[after] - angle[before]
     frequency = 2 * np.sqrt(1 + after**2 - 2 * after * np.cos(k))
     echo = np.prod(1 - np.sin(turn) ** 2 * np.sin(frequency * time) ** 2)
-    x = 2 / n * np.sum(np.cos(angle[after]) * np.cos(turn) + np.sin(angle[after]) * np.sin(turn) * np.cos(2 * frequency * time))
+    x = (
+        2
+        / n
+        * np.sum(
+            np.cos(angle[after]) * np.cos(turn) + np.sin(angle[after]) * np.sin(turn) * np.cos(2 * frequency * time)
+        )
+    )
 
     jump = 1e-9  # changes nothing beyond its own size
     schedule = ar.Schedule.from_table([0, jump, 1], [before, after, after], [1, 1, 1], interpolation="linear")

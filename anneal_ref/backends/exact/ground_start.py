@@ -1,9 +1,9 @@
 """The ground state of H(0), as the start of an anneal.
 
-With every transverse weight above zero the off-diagonal elements of H(0) have one sign and connect all configurations, so the
-ground state is unique and positive (Perron and Frobenius), and even under the global spin flip when there are no fields. With
-G(0) = 0 the problem part alone decides: its ground state must be unique, or unique up to the global flip; then the even
-superposition is taken, which is the limit of G(0) -> 0.
+With every transverse weight above zero the off-diagonal elements of H(0) have one sign and connect all configurations,
+so the ground state is unique and positive (Perron and Frobenius), and even under the global spin flip when there are no
+fields. With G(0) = 0 the problem part alone decides: its ground state must be unique, or unique up to the global flip;
+then the even superposition is taken, which is the limit of G(0) -> 0.
 """
 
 from __future__ import annotations
@@ -141,8 +141,8 @@ def _positive_ground(energies: NDArray[np.float64], weights: NDArray[np.float64]
     found = GroundStart(full, energy, residual, residual / gap if gap > 0 else np.inf)
     if not found.angle <= _ANGLE:
         raise NotConverged(
-            f"the ground state of H(0) is known to an angle of {found.angle:.1e} only (residual {residual:.1e}, gap {gap:.1e}); "
-            f"{_ANGLE:.0e} is asked for, so choose a start with a wider gap",
+            f"the ground state of H(0) is known to an angle of {found.angle:.1e} only "
+            f"(residual {residual:.1e}, gap {gap:.1e}); {_ANGLE:.0e} is asked for, so choose a start with a wider gap",
             found,
         )
     return found

@@ -2,19 +2,22 @@ r"""Splittings: the evolution over one step as a product of exact exponentials o
 
 A step of length h from time t is (BAB order, the part B = P E outside)
 
-    D(phi_1) X(theta_1) D(phi_2) ... X(theta_s) D(phi_s+1),    D(phi) = exp(-i phi E),  X(theta) = exp(+i theta sum_i w_i X_i)
+    D(phi_1) X(theta_1) D(phi_2) ... X(theta_s) D(phi_s+1),
+    D(phi) = exp(-i phi E),  X(theta) = exp(+i theta sum_i w_i X_i)
 
 and every angle is the exact integral of its own schedule over its own clock,
 
     phi_k   = \int P over [t + h (b_1 + ... + b_k-1), t + h (b_1 + ... + b_k)],
     theta_k = \int G over [t + h (a_1 + ... + a_k-1), t + h (a_1 + ... + a_k)].
 
-Each part with a clock of its own, d/dt_A + A(t_A) and d/dt_B + B(t_B), is autonomous, so a splitting keeps the order that
-it has for autonomous problems as long as the schedules are smooth within the step. All clocks stay inside the step.
+Each part with a clock of its own, d/dt_A + A(t_A) and d/dt_B + B(t_B), is autonomous, so a splitting keeps the order
+that it has for autonomous problems as long as the schedules are smooth within the step. All clocks stay inside the
+step.
 
 A step that straddles knots of the schedule (a table is often finer than the steps) sees, in place of each schedule, the
-polynomial with the same first Legendre moments over the step. By the Magnus expansion the evolution over a step depends on
-higher moments only at high order, for rough schedules too; using the exact integrals of a rough schedule would not do.
+polynomial with the same first Legendre moments over the step. By the Magnus expansion the evolution over a step depends
+on higher moments only at high order, for rough schedules too; with the exact integrals of a rough schedule the order is
+lost.
 """
 
 from __future__ import annotations

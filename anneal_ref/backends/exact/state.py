@@ -29,8 +29,9 @@ class ExactState:
     at : float
         Fraction of the duration that the state belongs to.
     ledger : dict
-        Deterministic counters and checks of the run (`scheme`, `steps`, `layers`, `kicks`, `symmetric`, `precision`, `bytes`,
-        `norm_drift`, `ground_energy` and `ground_residual` after start="ground"), and its wall time in `seconds`.
+        Deterministic counters and checks of the run (`scheme`, `steps`, `layers`, `kicks`, `symmetric`, `precision`,
+        `bytes`, `norm_drift`, `ground_energy` and `ground_residual` after start="ground"), and its wall time in
+        `seconds`.
 
     Examples
     --------
@@ -41,7 +42,7 @@ class ExactState:
     >>> float((1 - state.moments().zz.value[0, 1]) / 2)
     0.0957402
     >>> state.ground_probability(), state.entropy([0, 1, 2, 3])
-    (0.4521, 0.9512)
+    (0.61745, 1.21580)
     """
 
     def __init__(self, anneal: Anneal, at: float, register: Register, ledger: dict[str, Any]) -> None:
@@ -53,7 +54,8 @@ class ExactState:
 
     def __repr__(self) -> str:
         """Return size, time and scheme."""
-        return f"<ExactState of {self.anneal.n_sites} spins at {self.at:g}; {self.ledger['layers']} layers of {self.ledger['scheme']}>"
+        work = f"{self.ledger['layers']} layers of {self.ledger['scheme']}"
+        return f"<ExactState of {self.anneal.n_sites} spins at {self.at:g}; {work}>"
 
     def moments(self) -> Moments:
         """Return <Z_i>, <Z_i Z_j> and <X_i>, divided by the norm; `stat` is 0 and `num` is not measured."""
@@ -70,12 +72,16 @@ class ExactState:
         time = self.at * self.anneal.duration
         pairs = np.sum(np.triu(instance.coupling_matrix(), 1) * moments.zz.value)
         problem = pairs + instance.fields @ moments.z.value
-        return float(self.anneal.problem(time) * problem - self.anneal.transverse(time) * (instance.transverse @ moments.x.value))
+        return float(
+            self.anneal.problem(time) * problem - self.anneal.transverse(time) * (instance.transverse @ moments.x.value)
+        )
 
     def sample(self, shots: int, seed: int) -> Samples:
         """Return `shots` independent measurements in the Z basis, the same ones for the same seed."""
         shots, seed = integer("shots", shots, low=1), integer("seed", seed, low=0)
-        manifest = Manifest(instance=self.anneal.instance.identity, duration=self.anneal.duration, source="state vector")
+        manifest = Manifest(
+            instance=self.anneal.instance.identity, duration=self.anneal.duration, source="state vector"
+        )
         return Samples(self._amplitudes().sample(shots, seed), manifest)
 
     def amplitudes(self) -> NDArray[np.complex128]:
@@ -87,13 +93,13 @@ class ExactState:
         """Return the probabilities of all configurations, shape (2^N,), in the same order; they add up to 1."""
         self._require(8, "the array of all probabilities")
         probabilities = self._amplitudes().probabilities()
-        return probabilities / probabilities.sum()
+        return np.asarray(probabilities / probabilities.sum())
 
     def log_probability(self, spins: ArrayLike) -> NDArray[np.float64]:
         """Return the natural logarithm of the probability of each row of `spins` (shots, N); -inf where it is zero."""
         register = self._amplitudes()
         rows = signs("spins", spins, (None, self.anneal.n_sites))
-        return register.log_probability(rows) - np.log(self._norm)
+        return np.asarray(register.log_probability(rows) - np.log(self._norm))
 
     def ground_probability(self, ground: ArrayLike | None = None) -> float:
         """Return the probability of the classical ground states, all of them together.
@@ -136,7 +142,9 @@ class ExactState:
         small, large = sorted((chosen, rest), key=len)
         if not small:
             return 0.0
-        require_memory((32 << n) + (64 << 2 * len(small)), f"the entropy of {len(small)} of {n} spins", ("fewer sites",))
+        require_memory(
+            (32 << n) + (64 << 2 * len(small)), f"the entropy of {len(small)} of {n} spins", ("fewer sites",)
+        )
         psi = self._amplitudes().amplitudes().reshape((2,) * n)
         # axis k of the tensor is site n - 1 - k
         matrix = psi.transpose([n - 1 - site for site in (*small, *large)]).reshape(1 << len(small), -1)
@@ -155,8 +163,8 @@ class ExactState:
     def _amplitudes(self) -> Register:
         if self._register is None:
             raise InputError(
-                f"the amplitudes at {self.at:g} have moved on to a later time; ask a state of states(...) before the next one is "
-                f"taken, or call evolve(anneal, at={self.at:g})"
+                f"the amplitudes at {self.at:g} have moved on to a later time; "
+                f"ask a state of states(...) before the next one is taken, or call evolve(anneal, at={self.at:g})"
             )
         return self._register
 

@@ -82,8 +82,9 @@ class StateVector:
         put(self, "tolerance", number("tolerance", self.tolerance, 0.0, 0.1))
         if self.tolerance < _FLOORS[self.precision]:
             raise InputError(
-                f"tolerance must be at least {_FLOORS[self.precision]:g} in {self.precision} precision, where rounding reaches it; "
-                f"got {self.tolerance:g}" + ("; use precision='double'" if self.precision == "single" else "")
+                f"tolerance must be at least {_FLOORS[self.precision]:g} in {self.precision} precision, "
+                f"where rounding reaches it; got {self.tolerance:g}"
+                + ("; use precision='double'" if self.precision == "single" else "")
             )
         if self.steps is not None:
             put(self, "steps", integer("steps", self.steps, low=1))
@@ -149,13 +150,15 @@ class StateVector:
     def states(self, anneal: Anneal, at: Sequence[float], run: Run = Run()) -> Iterator[ExactState]:  # noqa: B008
         """Give the states at ascending fractions of the duration, in one pass of time.
 
-        There is one set of amplitudes: a state answers until the next one is taken, and afterwards only with the moments that
-        it has been asked for before.
+        There is one set of amplitudes: a state answers until the next one is taken, and afterwards only with the
+        moments that it has been asked for before.
         """
         check_anneal(anneal)
         return self._march(anneal, check_times(at), (), run)
 
-    def _march(self, anneal: Anneal, stops: tuple[float, ...], kicks: tuple[Kick, ...], run: Run) -> Iterator[ExactState]:
+    def _march(
+        self, anneal: Anneal, stops: tuple[float, ...], kicks: tuple[Kick, ...], run: Run
+    ) -> Iterator[ExactState]:
         began = perf_counter()
         duration = anneal.duration
         times = sorted({u * duration for u in stops} | {u * duration for u, _ in kicks})

@@ -1,14 +1,14 @@
 """The step rule: how many time steps a tolerance needs, told before the run from norms alone.
 
-The error of a splitting over a step is a sum of nested commutators of the two parts of H and of their derivatives. Their size
-follows from two local frequencies, 2 G w (transverse) and 2 P f (problem), where w is the root-mean-square transverse weight and
-f^2 = sum_j J_ij^2 + h_i^2 averaged over the sites, and from how fast the schedule changes. Steps are equally long in the phase of
-`phase_mesh`, and their number is
+The error of a splitting over a step is a sum of nested commutators of the two parts of H and of their derivatives.
+Their size follows from two local frequencies, 2 G w (transverse) and 2 P f (problem), where w is the root-mean-square
+transverse weight and f^2 = sum_j J_ij^2 + h_i^2 averaged over the sites, and from how fast the schedule changes. Steps
+are equally long in the phase of `phase_mesh`, and their number is
 
     steps = slope * tolerance^(-1/order) * phase
 
-with one constant for each splitting, fitted by `benchmarks/step_rule.py` on one set of anneals. It holds on another set that has
-other sizes, graphs, fields, weights, schedules and waveforms.
+with one constant for each splitting, fitted by `benchmarks/step_rule.py` on one set of anneals. It holds on another set
+that has other sizes, graphs, fields, weights, schedules and waveforms.
 """
 
 from __future__ import annotations
@@ -92,19 +92,21 @@ def phase_mesh(anneal: Anneal) -> Mesh:
 
 def step_density(splitting: Splitting, tolerance: float) -> float:
     """Return the steps per unit of phase that keep all <Z> and <ZZ> within the tolerance."""
-    return SLOPES[splitting.name] * min(tolerance, _LOOSEST) ** (-1 / splitting.order)
+    return float(SLOPES[splitting.name] * min(tolerance, _LOOSEST) ** (-1 / splitting.order))
 
 
 def choose_splitting(tolerance: float) -> Splitting:
     """Return the splitting that needs the fewest layers."""
-    return min((BLANES_MOAN_6, BLANES_MOAN_4), key=lambda splitting: splitting.stages * step_density(splitting, tolerance))
+    return min(
+        (BLANES_MOAN_6, BLANES_MOAN_4), key=lambda splitting: splitting.stages * step_density(splitting, tolerance)
+    )
 
 
 def time_grid(anneal: Anneal, mesh: Mesh, density: float, marks: Sequence[float] = ()) -> Floats:
     """Return step ends from 0 to the duration, equally long in phase between the times that must be met.
 
-    Met are the marks, the corners of the waveform, and those knots of the schedule that lie next to an interval of at least a
-    step; runs of shorter intervals are straddled (see `splitting`).
+    Met are the marks, the corners of the waveform, and those knots of the schedule that lie next to an interval of at
+    least a step; runs of shorter intervals are straddled (see `splitting`).
 
     Parameters
     ----------
@@ -150,4 +152,4 @@ def _distinct(ends: Floats, marks: Sequence[float], slack: float) -> Floats:
     """Sort and drop near-doubles; a mark takes the place of the knot that it nearly meets."""
     others = ends[np.min(np.abs(ends[:, None] - np.asarray([*marks, np.inf])), axis=1) > slack]
     ends = np.unique(np.concatenate([others, np.asarray(marks, dtype=np.float64)]))
-    return ends[np.concatenate([[True], np.diff(ends) > slack])]
+    return np.asarray(ends[np.concatenate([[True], np.diff(ends) > slack])])

@@ -6,7 +6,14 @@ import pytest
 import anneal_ref as ar
 from anneal_ref.backends.exact import splitting as rooms
 from anneal_ref.backends.exact.register import Register
-from anneal_ref.backends.exact.splitting import BLANES_MOAN_4, BLANES_MOAN_6, SPLITTINGS, STRANG, merge_steps, step_angles
+from anneal_ref.backends.exact.splitting import (
+    BLANES_MOAN_4,
+    BLANES_MOAN_6,
+    SPLITTINGS,
+    STRANG,
+    merge_steps,
+    step_angles,
+)
 
 ALL = pytest.mark.parametrize("splitting", SPLITTINGS.values(), ids=SPLITTINGS.keys())
 

@@ -174,6 +174,7 @@ def test_a_state_that_has_moved_on_says_so():
 def test_kicks_are_z_at_their_times(fields):
     case, backend = small(fields), ar.StateVector(tolerance=1e-10)
     spins = configurations(6)
+
     def on(register, start, end):
         grid = np.linspace(start, end, 200) * case.duration
         problem, transverse = step_angles(case, grid, BLANES_MOAN_6)
