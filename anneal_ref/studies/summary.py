@@ -123,20 +123,25 @@ def worst_pairs(verdict: Verdict, count: int = 6, each: int = 2) -> list[tuple[s
     return [cells for _, _, cells in sorted(found)[:count]]
 
 
-def suspects(verdict: Verdict) -> list[str]:
+def suspects(verdict: Verdict, most: int = 8) -> list[str]:
     """Return a sentence for each case with significant pairs: how many, and which spin they have in common."""
-    lines = []
+    found: list[tuple[float, str]] = []
     for one in verdict.judged:
         pairs, labels = one.comparison.pairs, one.reference.anneal.instance.lattice.labels
-        found = pairs.significant(verdict.decision.level)
-        if found:
+        count = pairs.significant(verdict.decision.level)
+        if count:
             sigma, gain = pairs.site_sigma(), pairs.site_gain()
             worst = int(np.argmax(sigma))
-            lines.append(
-                f"{one.case.label}: {found} of {len(pairs)} pairs depart; most involved is spin {labels[worst]} (rms "
-                f"{sigma[worst]:.1f} sigma, its correlations {gain[worst]:.3f} times the true ones)"
+            text = (
+                f"{one.case.label}: {count} of {len(pairs)} pairs depart; most involved is spin {labels[worst]} "
+                f"(rms {sigma[worst]:.1f} sigma, its correlations {gain[worst]:.3f} times the true ones)"
             )
-    return lines
+            found.append((float(sigma[worst]), text))
+    least = sorted((sigma for sigma, _ in found), reverse=True)[: most + 1]
+    shown = [text for sigma, text in found if len(least) <= most or sigma > least[-1]]
+    return shown + (
+        [f"and {len(found) - len(shown)} more cases with pairs that depart"] if len(shown) < len(found) else []
+    )
 
 
 def sentences(verdict: Verdict) -> list[str]:
@@ -173,7 +178,13 @@ def headline(verdict: Verdict) -> str:
 
 
 def _details(verdict: Verdict, findings: list[tuple[float, Finding]], most: int = 4) -> str:
-    """Say what each finding found, with its duration where there are several."""
+    """Say what each finding found, with its duration where there are several; of those that accept, the worst."""
+    if all(finding.outcome == "accept" for _, finding in findings):
+        worst: dict[str, Finding] = {}
+        for _, finding in findings:
+            if finding.name not in worst or finding.high > worst[finding.name].high:
+                worst[finding.name] = finding
+        return "; ".join(_said(finding) for finding in worst.values())
     several = len({at for at, _ in findings}) > 1
     parts = [
         f"at {_at(verdict, at)} {_said(finding)}" if several else _said(finding) for at, finding in findings[:most]

@@ -41,10 +41,11 @@ def facts(verdict: Verdict) -> list[tuple[str, str]]:
     unit = time_unit(study.schedule)
     names = list(dict.fromkeys(case.name for case in study.cases))
     sizes = [one.comparison.n_sites for one in verdict.judged]
+    span = f"{min(sizes)}" if min(sizes) == max(sizes) else f"{min(sizes)} to {max(sizes)}"
     shots = sum(one.comparison.n_shots for one in verdict.judged)
     worst = max(one.reference.error for one in verdict.judged)
     found = [
-        ("Instances", f"{len(names)} ({min(sizes)} to {max(sizes)} spins)"),
+        ("Instances", f"{len(names)} of {span} spins"),
         ("Durations", f"{', '.join(f'{at:g}' for at, _ in verdict.pooled)} {unit}".strip()),
         ("Shots", f"{shots} in {len(verdict.judged)} cases"),
         ("Limit on the correlation error", f"{limits.correlation_error:.1%}"),

@@ -75,7 +75,9 @@ def test_a_perfect_processor_is_accepted(tmp_path: Path, truth: Archive) -> None
     assert [verdict.outcome_at(at) for at in (0.3, 0.8)] == ["accept", "accept"]
     assert [at for at, _ in verdict.pooled] == [0.3, 0.8]
     assert all(pooled.n_instances == 2 and pooled.n_shots == 8000 for _, pooled in verdict.pooled)
-    assert headline(verdict).startswith("The processor meets the limit at 0.3 ns and 0.8 ns: at 0.3 ns pair")
+    assert headline(verdict).startswith(
+        "The processor meets the limit at 0.3 ns and 0.8 ns: pair correlations are off by"
+    )
 
 
 @pytest.mark.parametrize("wrong", [-1.0, 0.7, 0.0])
