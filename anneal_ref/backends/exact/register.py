@@ -4,15 +4,15 @@ from __future__ import annotations
 
 import math
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from anneal_ref.backends.exact import measure
 from anneal_ref.backends.exact.layout import ITEM_BYTES, aligned, layout, smallest, tilings
+from anneal_ref.backends.exact.readout import CHUNK_BITS, QUARTERS, Reader, gauge
 from anneal_ref.backends.exact.sweeps import Scratch, run
 from anneal_ref.base.checks import choice, finite, integer, signs
 from anneal_ref.base.errors import AnnealRefError, InputError
@@ -23,10 +23,6 @@ CALL_AMPLITUDES = 1 << 26
 """Amplitudes treated in one compiled call, so that Ctrl-C is heard within a fraction of a second."""
 RIGHT_ANGLE = (1.5707963267341256, 6.077100506506192e-11)
 """pi/2 in two parts, the first of 33 bits, so that its multiples are exact."""
-QUARTERS = (1, 1j, -1, -1j)
-"""Powers of the imaginary unit."""
-CHUNK_BITS = 9
-"""Pieces of a chunk of a read-out (a power of two); fixed, so that sums do not depend on threads."""
 
 
 class Register:
@@ -102,7 +98,9 @@ class Register:
                 aligned(space.work, dtype),
                 aligned(2 * space.energies, np.float64).reshape(2, -1),
                 np.empty(2 * bits + 16),
-                *(aligned(space.tables, np.float64) for _ in range(3)),
+                aligned(space.tables, np.float64),
+                aligned(space.tables, np.float64),
+                aligned(space.tables, np.float64),
                 coupling.copy(),
                 field.copy(),
                 np.empty(bits + 1),
@@ -129,7 +127,7 @@ class Register:
         place, kept = self._layout, min(self.n_sites, self._layout.bits)
         low = np.arange(1 << place.low_bits, dtype=np.int64)
         value = np.where(low >> kept == 0, 2.0 ** (-self.n_sites / 2), 0.0)
-        patterns = [self._packed(value * _gauge(low) * QUARTERS[-k]) for k in range(4)]
+        patterns = [self._packed(value * gauge(low) * QUARTERS[-k]) for k in range(4)]
         for row in range(place.rows):
             place.blocks(self._x, row)[:] = patterns[row.bit_count() & 3]
         self._whole = True
@@ -158,7 +156,7 @@ class Register:
             given = state[row * size : (row + 1) * size]
             part[: len(given)] = given
             index = np.arange(row * size, (row + 1) * size, dtype=np.int64)
-            place.blocks(self._x, row)[:] = self._packed(part * _gauge(index))
+            place.blocks(self._x, row)[:] = self._packed(part * gauge(index))
         self._whole = True
 
     def _fresh(self, parity: int) -> None:
@@ -261,20 +259,6 @@ class Register:
         self._group = (self._group + len(phi)) % self._groups
         self._whole = True
 
-    def _spread(self, work: Callable[[int], None], jobs: int) -> None:
-        """Call work(job) for all jobs, on the threads of the register."""
-        waiting = list(range(jobs))[::-1]
-
-        def loop(_: int) -> None:
-            while waiting:
-                try:
-                    job = waiting.pop()
-                except IndexError:  # another thread was faster
-                    return
-                work(job)
-
-        self._together(loop, waiting.clear)
-
     def _together(self, loop: Callable[[int], None], stop: Callable[[], None]) -> None:
         """Run loop(share) on every thread, this one included; `stop` makes all of them end soon."""
         if self._shares == 1:
@@ -305,18 +289,14 @@ class Register:
             raise AnnealRefError("the register was interrupted in the middle of a layer; load a state and start again")
 
     # -------------------------------------------------------------------------------------------- read-outs
+    def _reader(self) -> Reader:
+        """Give access to the stored amplitudes, nothing owed."""
+        self._settle()
+        return Reader(self._x, self._layout, self._together)
+
     def amplitudes(self) -> NDArray[np.complex128]:
         """Amplitudes psi, shape (2^N,); site 0 is the least significant bit of the index."""
-        self._settle()
-        place, n = self._layout, self.n_sites
-        size = 1 << place.low_bits
-        stored = np.empty(1 << place.bits, np.complex128)
-        for row in range(place.rows):
-            view = place.blocks(self._x, row)
-            index = np.arange(row * size, (row + 1) * size, dtype=np.int64)
-            values = view[:, :, 0].astype(np.complex128).reshape(-1)
-            values += 1j * view[:, :, 1].reshape(-1)
-            stored[row * size : (row + 1) * size] = values * _gauge(index).conj()
+        stored, n = self._reader().stored(), self.n_sites
         full = np.concatenate([stored, self._parity * stored[::-1]]) if self._half else stored[: 1 << n]
         axes = tuple(n - 1 - i for i in range(n) if self._flips >> i & 1)  # axis n - 1 - i is site i
         cube: NDArray[np.complex128] = np.flip(np.asarray(full).reshape((2,) * n), axes)
@@ -334,7 +314,6 @@ class Register:
     def amplitude_of(self, spins: ArrayLike) -> NDArray[np.complex128]:
         """Amplitudes of the configurations spins (shots, N) of +-1."""
         rows = signs("spins", spins, (None, self.n_sites))
-        self._settle()
         n, place = self.n_sites, self._layout
         z = ((rows < 0).astype(np.int64) << np.arange(n)).sum(axis=1)
         sign = 1.0 - 2.0 * (np.bitwise_count(z & self._signs) & 1)
@@ -343,10 +322,8 @@ class Register:
             down = y >> place.bits & 1
             sign = np.where(down, self._parity * sign, sign)
             y = np.where(down, y ^ ((1 << n) - 1), y)
-        o = place.offsets(y)
-        values = self._x[o].astype(np.complex128) + 1j * self._x[o + place.lanes]
-        result: NDArray[np.complex128] = values * _gauge(y).conj() * sign * QUARTERS[self._turns % 4]
-        return result
+        values: NDArray[np.complex128] = self._reader().at(y) * sign * QUARTERS[self._turns % 4]
+        return values
 
     def log_probability(self, spins: ArrayLike) -> Floats:
         """Natural logarithms of the probabilities of spins (shots, N); -inf where a probability is 0."""
@@ -356,13 +333,13 @@ class Register:
 
     def norm(self) -> float:
         """Sum of the probabilities."""
-        return float(self._weights().sum()) * (2 if self._half else 1)
+        return float(self._reader().weights().sum()) * (2 if self._half else 1)
 
     def moments(self) -> tuple[Floats, Floats, Floats]:
         """<Z_i> (N,), <Z_i Z_j> (N, N) and <X_i> (N,), not divided by the norm."""
-        self._settle()
-        z, zz = self._spin_moments()
-        x = self._transverse_moments()
+        reader = self._reader()
+        z, zz = reader.spin_moments()
+        x = reader.transverse_moments(self._parity if self._half else 0)
         n, bits = self.n_sites, self._layout.bits
         if self._half:
             zz = np.pad(2 * zz, (0, 1))
@@ -377,100 +354,15 @@ class Register:
         """Draw configurations (shots, N) of +-1 from the probabilities; the same for the same seed."""
         shots = integer("shots", shots, low=0)
         generator = np.random.PCG64(integer("seed", seed, low=0))
-        weights = self._weights()
         place, n = self._layout, self.n_sites
-        uniform = (generator.random_raw(shots) >> np.uint64(11)) * 2.0**-53
+        uniform = (generator.random_raw(shots) >> np.uint64(11)).astype(np.float64) * 2.0**-53
         flip = (generator.random_raw(shots) >> np.uint64(63)).astype(np.int64)
-        edges = np.cumsum(weights)
-        order = np.argsort(uniform, kind="stable")
-        target = uniform[order] * edges[-1]
-        piece = np.searchsorted(edges, target, side="right")
-        piece = np.minimum(piece, np.flatnonzero(weights)[-1])
-        target -= np.where(piece > 0, edges[piece - 1], 0.0)
-        drawn, z = np.empty(shots, np.int64), np.empty(shots, np.int64)
-        measure.draw(self._x, self._shape, piece, target, self._piece(), drawn)
-        z[order] = drawn
+        z = self._reader().draw(uniform)
         z ^= self._flips & ((1 << place.bits) - 1)
         if self._half:
             last = self._flips >> place.bits & 1
             z = (z | last << place.bits) ^ (flip * ((1 << n) - 1))
         return (1 - 2 * (z[:, None] >> np.arange(n) & 1)).astype(np.int8)
-
-    @property
-    def _shape(self) -> tuple[int, int, int, int]:
-        place = self._layout
-        return place.low_bits - place.piece_bits, place.row, place.piece, place.piece_bits
-
-    def _piece(self) -> Floats:
-        return aligned(1 << self._layout.piece_bits, np.float64)
-
-    def _chunks(self) -> tuple[int, int]:
-        """Count the chunks of a read-out, and the pieces in each (as bits)."""
-        bits = self._layout.bits - self._layout.piece_bits
-        inside = min(bits, CHUNK_BITS)
-        return 1 << (bits - inside), inside
-
-    def _weights(self) -> Floats:
-        """Weights of the pieces."""
-        self._settle()
-        chunks, inside = self._chunks()
-        weights = np.empty(chunks << inside)
-
-        def work(k: int) -> None:
-            measure.chunk_weights(self._x, self._shape, k << inside, (k + 1) << inside, self._piece(), weights)
-
-        self._spread(work, chunks)
-        return weights
-
-    def _spin_moments(self) -> tuple[Floats, Floats]:
-        """Moments of the stored bits: z (bits + 1,), the weight last, and zz (bits, bits)."""
-        chunks, inside = self._chunks()
-        low = self._layout.piece_bits
-        b = low + inside
-        z, zz = np.empty((chunks, b + 1)), np.empty((chunks, b, b))
-
-        def work(k: int) -> None:
-            total, first = np.empty((1 << low, 1)), np.empty((1 << inside, low + 1))
-            measure.chunk_moments(self._x, self._shape, k, inside, self._piece(), total, first, z[k], zz[k])
-
-        self._spread(work, chunks)
-        top = self._layout.bits - b
-        spins = 1.0 - 2.0 * (np.arange(chunks)[:, None] >> np.arange(top) & 1)
-        first, second = np.zeros(b + top + 1), np.zeros((b + top, b + top))
-        weight = z[:, b]
-        first[:b], first[b : b + top], first[b + top] = z[:, :b].sum(0), weight @ spins, weight.sum()
-        second[:b, :b] = zz.sum(0)
-        second[b:, :b] = spins.T @ z[:, :b]
-        second[:b, b:] = second[b:, :b].T
-        second[b:, b:] = spins.T @ (spins * weight[:, None])
-        return first, second
-
-    def _transverse_moments(self) -> Floats:
-        """<X> of the stored bits and, in the symmetric half, of the last spin."""
-        place = self._layout
-        chunks, inside = self._chunks()
-        groups = np.array(
-            list(_triples(place.lane_bits, place.piece_bits))
-            + list(_triples(place.piece_bits, place.low_bits))
-            + list(_triples(place.low_bits, place.bits)),
-            np.int64,
-        )
-        out = np.empty((chunks, place.bits + 1))
-        odd = place.bits % 2
-
-        def work(k: int) -> None:
-            scratch = aligned(place.lanes * place.lane_bits, self._x.dtype)
-            start, stop = k << inside, (k + 1) << inside
-            measure.chunk_currents(
-                self._x, self._shape, place.bits, start, stop, groups, scratch, self._half, odd, out[k]
-            )
-
-        self._spread(work, chunks)
-        x: Floats = -2 * out.sum(0)
-        if self._half:
-            x *= 2
-            x[-1] *= -0.5 * self._parity * (1 - 2 * (place.bits // 2 % 2))
-        return x
 
 
 def _stored_bits(n: int, symmetric: bool, precision: str) -> int:
@@ -484,15 +376,3 @@ def _is_half(n: int, symmetric: bool, precision: str) -> bool:
 
 def _bits(mask: int, n: int) -> NDArray[np.int64]:
     return np.array([mask >> i & 1 for i in range(n)], np.int64)
-
-
-def _gauge(index: NDArray[np.int64]) -> NDArray[np.complex128]:
-    """(-i)^popcount(index)."""
-    phases: NDArray[np.complex128] = np.array(QUARTERS)[-np.bitwise_count(index).astype(np.int8) & 3]
-    return phases
-
-
-def _triples(first: int, last: int) -> Iterator[tuple[int, int]]:
-    while first < last:
-        yield first, min(3, last - first)
-        first += 3
