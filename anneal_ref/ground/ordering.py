@@ -54,8 +54,8 @@ def best_ordering(problem: Problem) -> Ordering | None:
         neighbours[second] |= 1 << first
     candidates = [_followed(neighbours, sweep) for sweep in _sweeps(problem)]
     candidates += [_greedy(neighbours, fill=False), _greedy(neighbours, fill=True)]
-    # ties go to the first of the list, so that the choice is the same everywhere
-    return min((c for c in candidates if c is not None), key=lambda c: c.cost, default=None)
+    # the widest table counts several times over, for its memory; ties go to the first of the list, the same everywhere
+    return min((c for c in candidates if c is not None), key=lambda c: c.cost + 8 * 2.0**c.width, default=None)
 
 
 def _sweeps(problem: Problem) -> Iterator[list[int]]:

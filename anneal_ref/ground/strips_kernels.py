@@ -47,8 +47,6 @@ def minimise(plus, minus, choices):  # type: ignore[no-untyped-def]
 def add_counts(plus, minus, choices):  # type: ignore[no-untyped-def]
     """Sum, in `plus`, the counts of the side or sides that won."""
     for x in range(plus.size):
-        choice = (choices[x >> 2] >> (2 * (x & 3))) & 3
-        if choice == 2:
-            plus[x] = minus[x]
-        elif choice == 3:
-            plus[x] += minus[x]
+        choice = choices[x >> 2] >> (2 * (x & 3))
+        # selections rather than branches: who wins is as good as random
+        plus[x] = (plus[x] if choice & 1 else 0.0) + (minus[x] if choice & 2 else 0.0)
