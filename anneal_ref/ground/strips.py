@@ -33,8 +33,8 @@ class StripPlan:
     def bytes(self) -> int:
         """Memory at the peak: tables of energies and counts in use, and the packed choices of all steps."""
         choices = sum(1 << max(0, len(frontier) - 2) for frontier in self.ordering.frontiers)
-        # up, down and the earlier table, for energies and for counts; further tables are smaller and few
-        return choices + 8 * 8 * (1 << self.ordering.width)
+        # up, down, the earlier table and a copy while they grow, for energies and for counts; then smaller ones
+        return choices + 12 * 8 * (1 << self.ordering.width)
 
 
 def plan_strips(problem: Problem) -> StripPlan | None:
