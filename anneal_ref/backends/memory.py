@@ -8,6 +8,9 @@ from pathlib import Path
 
 from anneal_ref.base.errors import TooLarge
 
+# asking takes a tenth of a millisecond, much of a small run
+_ALWAYS_THERE = 16 << 20
+
 
 def available_bytes() -> int:
     """Return the bytes that new arrays can take without swapping, control-group limits included.
@@ -32,6 +35,8 @@ def require_memory(needed: int, purpose: str, alternatives: tuple[str, ...] = ()
     alternatives : tuple of str
         What else would do.
     """
+    if needed < _ALWAYS_THERE:
+        return
     available = available_bytes()
     if needed > available:
         hint = "; alternatives: " + ", ".join(alternatives) if alternatives else ""

@@ -17,14 +17,18 @@ from anneal_ref.backends.exact.state import ExactState
 from anneal_ref.backends.exact.steps import choose_splitting, halved, phase_mesh, step_density, time_grid
 from anneal_ref.backends.memory import require_memory
 from anneal_ref.base.checks import choice, integer, number
-from anneal_ref.base.errors import InputError
+from anneal_ref.base.errors import InputError, NotSupported
 from anneal_ref.base.run import Bar, Run
 from anneal_ref.model.anneal import Anneal
 
-_FLOORS = {"double": 1e-11, "single": 3e-5}
-# time of a layer: per stored amplitude, and for its tables; one core of about 3 GHz with 256-bit vectors
-_LAYER_SECONDS = {"double": 4.8e-9, "single": 3.2e-9}
-_TABLE_SECONDS = 12e-6
+_FLOORS = {"double": 1e-11, "single": 5e-6}
+# rounding error of a correlation after L layers is below this times sqrt(L): measured, twice the largest of 14 runs of
+# 240 to 28 000 layers in single precision, and scaled by the unit roundoff to double
+_ROUNDING = {"double": 3e-16, "single": 1.5e-7}
+# time of a layer: per stored amplitude, and for its tables; measured at N = 10 to 22 on one core of about 3 GHz with
+# 256-bit vectors
+_LAYER_SECONDS = {"double": 2.0e-9, "single": 1.1e-9}
+_TABLE_SECONDS = 3e-6
 # interpreter, libraries and compiled kernels, beside the arrays
 _OVERHEAD = 120 << 20
 
@@ -36,8 +40,9 @@ class StateVector:
     Parameters
     ----------
     tolerance : float
-        Largest absolute error over all <Z_i> and <Z_i Z_j> that the steps are chosen for, from 1e-11 (1e-4 in single
-        precision) to 0.1. It is what the a-priori rule aims at, not a measured error; `reference` measures.
+        Largest absolute error over all <Z_i> and <Z_i Z_j> that the steps are chosen for, from 1e-11 (5e-6 in single
+        precision, more for long anneals) to 0.1. It is what the a-priori rule aims at, not a measured error;
+        `reference` measures.
     precision : {"double", "single"}
         Of the stored amplitudes.
     steps : int, optional
@@ -107,12 +112,14 @@ class StateVector:
 
         Raises
         ------
+        NotSupported
+            So many layers that rounding in this precision reaches the tolerance.
         TooLarge
             More memory than there is.
         """
         check_anneal(anneal)
         splitting, grid = self._steps(anneal, ())
-        needed = self._require_memory(anneal, splitting, grid)
+        needed = self._require(anneal, splitting, grid)
         layers = (len(grid) - 1) * splitting.stages + 1
         symmetric = not anneal.instance.has_fields
         stored = 1 << (anneal.n_sites - symmetric)
@@ -140,8 +147,8 @@ class StateVector:
 
         Raises
         ------
-        InputError, TooLarge
-            Something other than an anneal, times outside their range, kicks out of order; not enough memory.
+        InputError, NotSupported, TooLarge
+            Something other than an anneal, times outside their range, kicks out of order; see `plan`.
         """
         check_anneal(anneal)
         end = number("at", at, 0.0, 1.0)
@@ -163,7 +170,7 @@ class StateVector:
         duration = anneal.duration
         times = sorted({u * duration for u in stops} | {u * duration for u, _ in kicks})
         splitting, grid = self._steps(anneal, times)
-        self._require_memory(anneal, splitting, grid)
+        self._require(anneal, splitting, grid)
         grid = grid[: int(np.searchsorted(grid, stops[-1] * duration)) + 1]
         problem, transverse = step_angles(anneal, grid, splitting)
         register, ledger = self._start(anneal, run)
@@ -206,8 +213,6 @@ class StateVector:
             ground = ground_start(anneal)
             register.load(ground.amplitudes)
             ledger |= {"ground_energy": ground.energy, "ground_residual": ground.residual}
-        else:
-            register.load_plus()
         return register, ledger
 
     def _steps(self, anneal: Anneal, marks: Sequence[float]) -> tuple[Splitting, Floats]:
@@ -218,11 +223,19 @@ class StateVector:
             density = self.steps / max(mesh.total, 1e-12)
         return splitting, halved(time_grid(anneal, mesh, density, marks), self.halvings)
 
-    def _require_memory(self, anneal: Anneal, splitting: Splitting, grid: Floats) -> int:
-        """Return the bytes of a run, or raise `TooLarge`."""
+    def _require(self, anneal: Anneal, splitting: Splitting, grid: Floats) -> int:
+        """Return the bytes of a run, or raise `NotSupported` or `TooLarge`."""
+        layers = len(grid) * splitting.stages
+        rounding = _ROUNDING[self.precision] * layers**0.5
+        if rounding > self.tolerance:
+            raise NotSupported(
+                f"in {self.precision} precision {layers} layers may round to {rounding:.1e}, "
+                f"above the tolerance of {self.tolerance:g}",
+                ("StateVector(precision='double')", "a looser tolerance", "a shorter anneal"),
+            )
         n, symmetric = anneal.n_sites, not anneal.instance.has_fields
         # clocks, angles and merged angles of every step
-        needed = Register.bytes_needed(n, symmetric, self.precision) + 64 * len(grid) * splitting.stages
+        needed = Register.bytes_needed(n, symmetric, self.precision) + 64 * layers
         if anneal.start == "ground":
             needed += ground_start_bytes(n, symmetric)
         require_memory(needed, f"the state vector of {n} spins", self._alternatives())

@@ -113,7 +113,7 @@ def test_too_large_is_said_before_anything_is_allocated(monkeypatch):
     monkeypatch.setattr(memory, "available_bytes", lambda: 1 << 20)
     monkeypatch.setattr(ar.StateVector, "_start", allocate)
     with pytest.raises(TooLarge):
-        ar.StateVector().evolve(chain(20))
+        ar.StateVector().evolve(chain(22))
 
 
 # --------------------------------------------------------------------------------------------------------- states
@@ -256,6 +256,14 @@ def test_single_precision_is_as_good_as_it_says():
     exact = ar.StateVector(tolerance=1e-9).evolve(anneal).moments().zz.value
     single = ar.StateVector(tolerance=1e-4, precision="single").evolve(anneal)
     assert np.abs(single.moments().zz.value - exact).max() < 1e-4
+
+
+def test_single_precision_is_refused_where_it_rounds_too_much():
+    backend = ar.StateVector(tolerance=1e-5, precision="single")
+    assert backend.plan(small(duration=1.0)).layers > 0
+    with pytest.raises(NotSupported, match="round") as caught:
+        backend.plan(small(duration=3000.0))
+    assert any("double" in alternative for alternative in caught.value.alternatives)
 
 
 # --------------------------------------------------------------------------------------------------- ground starts
