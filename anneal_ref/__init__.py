@@ -22,7 +22,7 @@ _ROOMS = {
     "anneal_ref.model.instances": ("Instance", "draw_instance"),
     "anneal_ref.model.schedules": ("Schedule",),
     "anneal_ref.model.anneal": ("Anneal", "Waveform"),
-    "anneal_ref.ground.ground": ("GroundEnergy", "ground_energy"),
+    "anneal_ref.ground.ground": ("GroundEnergy", "ground_energy", "ground_states"),
     "anneal_ref.observe.moments": ("Moments",),
     "anneal_ref.observe.source": ("Source",),
     "anneal_ref.observe.samples": ("Samples",),

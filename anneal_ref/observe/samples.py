@@ -204,7 +204,8 @@ class Samples:
         """
         known = self.manifest
         if known.instance is not None and known.instance != instance.identity:
-            programmed = known.gauge is not None and known.instance == instance.gauge(known.gauge).identity
+            fits = known.gauge is not None and len(known.gauge) == instance.n_sites
+            programmed = fits and known.instance == instance.gauge(known.gauge).identity
             hint = (
                 "; it is this instance as programmed with the gauge, but the manifest must name it before the gauge"
                 if programmed

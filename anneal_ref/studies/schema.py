@@ -236,6 +236,9 @@ def _sentence(fault: Any) -> str:
         return f"unknown key {where}; {_hint(str(path[-1]), path[:-1])}"
     if fault["type"] == "missing":
         return f"key {where} is missing"
+    if fault["type"] == "string_pattern_mismatch":
+        allowed = "letters, digits, '_', '.' and '-', beginning with a letter or digit (it goes into file names)"
+        return f"{where} must be made of {allowed}; got {_toml(fault['input'])}"
     message = fault["msg"].removeprefix("Value error, ")
     if fault["type"] == "value_error":
         return f"{where}: {message}" if where else message

@@ -110,6 +110,8 @@ def test_mispaired_samples_are_refused(instance: Instance, spins: np.ndarray) ->
     other = Instance(instance.lattice, -instance.couplings, instance.fields)
     with pytest.raises(InputError, match="samples of another instance: manifest .*pair the file with its own instance"):
         Samples(spins, Manifest(other.identity)).for_instance(instance)
+    with pytest.raises(InputError, match="samples of another instance"):
+        Samples(spins[:, :4], Manifest(other.identity, gauge=[1, -1, 1, 1])).for_instance(instance)
     gauge = [1, -1, 1, 1, 1]
     with pytest.raises(InputError, match="the manifest must name it before the gauge"):
         Samples(spins, Manifest(instance.gauge(gauge).identity, gauge=gauge)).for_instance(instance)

@@ -228,3 +228,8 @@ def test_manifests_beside_samples_are_no_samples(folder: Path) -> None:
     study = read(folder, GOOD.replace("ns*.csv", "ns*"))
     assert [file.name for file in study.cases[1].files] == ["ring_2ns.csv"]
     assert study.cases[1].samples().manifest.duration == 2.0
+
+
+def test_a_name_that_cannot_be_part_of_a_file_name_is_refused_in_words(folder: Path) -> None:
+    with pytest.raises(StudyError, match=r"`instance\[0\].name` must be made of letters, digits.*got 'my ring'"):
+        read(folder, GOOD.replace('name = "ring"', 'name = "my ring"'))
