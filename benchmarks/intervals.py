@@ -118,7 +118,7 @@ def coverage(repeats: int, sizes: tuple[int, ...], shots: tuple[int, ...], epsil
         for kind, beta in (("graph", 1.0), ("graph", 2.5), ("graph", 5.0), ("chain", 0.7)):
             for fault in ("noise", "scale", "other") if eps else ("noise",):
                 world = model(n, kind, beta, eps, fault)
-                rng = np.random.default_rng([n, size, int(1000 * eps)])
+                rng = np.random.default_rng([n, size, int(1000 * eps), int(10 * beta), len(fault)])
                 inside = dict.fromkeys(METHODS, 0)
                 for _ in range(repeats):
                     spins = world.draw(size, rng)
