@@ -30,7 +30,7 @@ _ROUNDING = {"double": 3e-16, "single": 1.5e-7}
 _LAYER_SECONDS = {"double": 2.0e-9, "single": 1.1e-9}
 _TABLE_SECONDS = 3e-6
 # interpreter, libraries and compiled kernels, beside the arrays
-_OVERHEAD = 120 << 20
+_OVERHEAD = 200 << 20
 
 
 @dataclass(frozen=True, slots=True)
@@ -176,7 +176,7 @@ class StateVector:
         register, ledger = self._start(anneal, run)
         ledger |= {"scheme": splitting.name, "steps": 0, "layers": 0, "kicks": 0}
         done, pending = 0, 0.0
-        with run.track(problem.size, f"{anneal.n_sites} spins") as bar:
+        with run.track(transverse.size, f"{anneal.n_sites} spins") as bar:
             for time in times:
                 step = int(np.searchsorted(grid, time))
                 pending = _advance(register, problem[done:step], transverse[done:step], pending, bar)

@@ -4,8 +4,8 @@ For the exact evolution
 
     <H>(T) - <H>(0) = \int <dH/dt> dt = \int ( -sum_i w_i <X_i> dG + <E> dP ).
 
-What a computed evolution leaves of this equation shows a step that is too long or a Hamiltonian that is not the one of the
-schedule. It is no error bar: a projected evolution may obey the identity while being wrong.
+What a computed evolution leaves of this equation shows a step that is too long or a Hamiltonian that is not the one of
+the schedule. It is no error bar: a projected evolution may obey the identity while being wrong.
 """
 
 from __future__ import annotations
@@ -31,8 +31,8 @@ _GAUSS_NODES, _GAUSS_WEIGHTS = np.polynomial.legendre.leggauss(10)
 def work_identity(backend: StateVector, anneal: Anneal, run: Run = Run()) -> float:  # noqa: B008
     """Return <H>(T) - <H>(0) minus the work done, in the unit of the schedule.
 
-    One pass of time with a read-out of moments at some twelve times per two units of phase, so it costs a few times what an
-    evolution does; the additional stops make steps a little shorter than those of a plain run.
+    One pass of time with a read-out of moments at some twelve times per two units of phase, so it costs a few times
+    what an evolution does; the additional stops make steps a little shorter than those of a plain run.
 
     Parameters
     ----------
