@@ -133,10 +133,11 @@ def layout(bits: int, precision: str, low_bits: int | None = None, piece_bits: i
 
 
 def _passes(first: int, last: int) -> list[tuple[int, int]]:
-    """Cut bits first .. last-1 into passes of three (two and two for four)."""
-    cut = []
-    while first < last:
-        count = 2 if last - first == 4 else min(3, last - first)
+    """Cut bits first .. last-1 into the fewest passes of at most four, as equal as can be."""
+    bits, cut = last - first, []
+    parts = -(-bits // 4)
+    for k in range(parts):
+        count = bits // parts + (k < bits % parts)
         cut.append((first, count))
         first += count
     return cut
@@ -197,12 +198,9 @@ def tilings(place: Layout, pairs: bool, odd: bool) -> tuple[tuple[Tiling, Tiling
     def tiling(bits: int, tiles: int, chunk: int, step: int, paired: bool, sites: NDArray[np.int64]) -> Tiling:
         first = place.row_bits
         inner = min(bits, piece_bits)
-        if paired:
-            edge = bits - 2
-        else:
-            top = piece_bits if bits > piece_bits else first
-            edge = bits - (2 if bits - top == 4 else min(3, bits - top))
-        passes = _passes(first, min(inner, edge)) + _passes(max(inner, first), edge)
+        end = bits - 2 if paired else bits
+        passes = _passes(first, min(inner, end)) + _passes(max(inner, first), end)
+        edge = end if paired or not passes else passes.pop()[0]
         return Tiling(
             bits, tiles, chunk, piece_bits, place.piece, step, place.row, half, int(paired), int(odd), int(two), edge,
             np.array(passes, np.int64).reshape(-1, 2), sites, space.offsets,

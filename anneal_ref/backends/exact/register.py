@@ -41,7 +41,7 @@ class Register:
         Store the half with the last spin up; needs zero fields and states of a definite spin-flip parity.
     precision : {"double", "single"}
     threads : int
-        Threads of layers and read-outs; the digits do not depend on it.
+        Threads of layers and read-outs of a state too large for one tile; the digits do not depend on it.
     low_bits, piece_bits : int, optional
         Override the measured choice of tiles (see `layout`); for tests and benchmarks.
 

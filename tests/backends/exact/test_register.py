@@ -9,6 +9,7 @@ from scipy.stats import binom
 
 from anneal_ref.backends.exact import layout, phases
 from anneal_ref.backends.exact.register import Register
+from anneal_ref.backends.exact.sweeps import run
 from anneal_ref.base.errors import AnnealRefError, InputError
 
 # Largest error of an amplitude in units of 2^(-N/2), after half a dozen layers.
@@ -244,6 +245,25 @@ def test_progress_counts_every_layer(monkeypatch):
     assert len(done) > 1
 
 
+@pytest.mark.parametrize("threads", [1, 2])
+def test_a_run_cut_into_short_calls_changes_nothing(monkeypatch, threads):
+    """Ctrl-C is heard between calls: a large layer takes several, and every thread comes back to the same layer."""
+    n = 14
+    whole, cut = (Register(*problem(n, True), True, low_bits=8, threads=k) for k in (1, threads))
+    whole.layers(*angles(n))
+    calls = []
+
+    def counted(*arguments):
+        calls.append(run(*arguments))
+        return calls[-1]
+
+    monkeypatch.setattr("anneal_ref.backends.exact.register.CALL_AMPLITUDES", 1 << 10)
+    monkeypatch.setattr("anneal_ref.backends.exact.register.run", counted)
+    cut.layers(*angles(n))
+    assert len(calls) > 20
+    np.testing.assert_array_equal(whole.amplitudes(), cut.amplitudes())
+
+
 def test_an_interrupted_layer_makes_the_register_unusable_until_reloaded(monkeypatch):
     register = Register(*problem(12, False), low_bits=8)
     register.layers([0.1], [0.1])
@@ -319,6 +339,7 @@ def test_sines_and_cosines_of_the_phase_tables():
 NARROW = """
 import numpy as np
 from anneal_ref.backends.exact.register import Register
+from anneal_ref.backends.exact.sweeps import run
 from anneal_ref.backends.exact.simd import VECTOR_BYTES
 assert VECTOR_BYTES == 32
 n = 12
