@@ -171,14 +171,14 @@ class StateVector:
         times = sorted({u * duration for u in stops} | {u * duration for u, _ in kicks})
         splitting, grid = self._steps(anneal, times)
         self._require(anneal, splitting, grid)
-        grid = grid[: int(np.searchsorted(grid, stops[-1] * duration)) + 1]
+        grid = grid[: _nearest(grid, stops[-1] * duration) + 1]
         problem, transverse = step_angles(anneal, grid, splitting)
         register, ledger = self._start(anneal, run)
         ledger |= {"scheme": splitting.name, "steps": 0, "layers": 0, "kicks": 0}
         done, pending = 0, 0.0
         with run.track(transverse.size, f"{anneal.n_sites} spins") as bar:
             for time in times:
-                step = int(np.searchsorted(grid, time))
+                step = _nearest(grid, time)
                 pending = _advance(register, problem[done:step], transverse[done:step], pending, bar)
                 ledger["layers"] += (step - done) * splitting.stages
                 ledger["steps"] = done = step
@@ -243,7 +243,12 @@ class StateVector:
 
     def _alternatives(self) -> tuple[str, ...]:
         single = ("StateVector(precision='single', tolerance=1e-4)",) if self.precision == "double" else ()
-        return (*single, "MPS", "FreeFermions for chains and rings without fields")
+        return (*single, "a machine with more memory", "fewer spins")
+
+
+def _nearest(grid: Floats, time: float) -> int:
+    # times that differ by rounding alone share a step end
+    return int(np.abs(grid - time).argmin())
 
 
 def _advance(register: Register, problem: Floats, transverse: Floats, pending: float, bar: Bar) -> float:

@@ -1,6 +1,7 @@
 """The state-vector back-end: settings, plans, states, kicks and what is refused."""
 
 import pickle
+from contextlib import contextmanager
 from dataclasses import FrozenInstanceError
 
 import numpy as np
@@ -196,6 +197,43 @@ def test_kicks_are_z_at_their_times(fields):
     np.testing.assert_allclose(backend.evolve(case, kicks=[(1.0, 3)]).probabilities(), plain, atol=1e-9)
     x = backend.evolve(case, at=0.0, kicks=[(0.0, 3)]).moments().x.value
     np.testing.assert_allclose(x, [1, 1, 1, -1, 1, 1], atol=1e-12)
+
+
+def test_kicks_that_differ_by_rounding_come_at_one_time():
+    backend, case = ar.StateVector(tolerance=1e-8), small(FIELDS)
+    assert 0.1 + 0.2 != 0.3
+    one = backend.evolve(case, kicks=[(0.3, 1), (0.3, 4)])
+    other = backend.evolve(case, kicks=[(0.3, 1), (0.1 + 0.2, 4)])
+    assert one.ledger["steps"] == other.ledger["steps"]
+    np.testing.assert_allclose(one.amplitudes(), other.amplitudes(), atol=1e-12)
+
+
+def test_threads_change_no_bit():
+    instance = ar.draw_instance(ar.lattices.square(3, 6), ar.disorder.gaussian(), seed=2)
+    case = ar.Anneal(instance, SCHEDULE, 0.2)
+    backend = ar.StateVector(steps=2)
+    one, two = (backend.evolve(case, run=ar.Run(threads=threads, progress=False)).moments() for threads in (1, 2))
+    assert (one.zz.value == two.zz.value).all()
+    assert (one.x.value == two.x.value).all()
+
+
+def test_progress_counts_the_layers():
+    seen = []
+
+    class Watching:
+        threads = 1
+
+        @contextmanager
+        def track(self, total, label):
+            seen.append((total, label))
+            yield self
+
+        def update(self, n=1, note=""):
+            seen.append(n)
+
+    state = ar.StateVector(tolerance=1e-4).evolve(small(), run=Watching())
+    assert seen[0] == (state.ledger["layers"] - 1, "6 spins")
+    assert sum(seen[1:]) == seen[0][0]
 
 
 def test_samples_are_reproducible_and_follow_the_probabilities():
