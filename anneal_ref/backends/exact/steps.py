@@ -27,7 +27,7 @@ if TYPE_CHECKING:
 _MESH = 256
 
 
-SLOPES = {STRANG.name: 0.19, BLANES_MOAN_4.name: 0.109, BLANES_MOAN_6.name: 0.149}
+SLOPES = {STRANG.name: 0.195, BLANES_MOAN_4.name: 0.113, BLANES_MOAN_6.name: 0.149}
 # phase that a change of the schedule from nothing to its maximum, or back, adds
 _CHANGE = 2.0
 # above this the errors no longer follow the power law, and steps cannot be longer
