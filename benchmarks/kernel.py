@@ -106,7 +106,8 @@ def readout_table(sizes: list[int], repeats: int) -> None:
 
 
 MEMORY = """
-import resource, sys, time
+import sys, time
+from pathlib import Path
 import numpy as np
 from anneal_ref.backends.exact.register import Register
 n, symmetric = int(sys.argv[1]), sys.argv[2] == "half"
@@ -117,7 +118,8 @@ seconds = (time.perf_counter() - start) / 4
 register.moments()
 register.sample(1000, 0)
 state = 16 << (n - symmetric)
-peak = 1024 * resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+status = Path("/proc/self/status").read_text().split()
+peak = 1024 * int(status[status.index("VmHWM:") + 1])
 print(f"N = {n} {sys.argv[2]}: state {state / 2**20:8.0f} MiB, peak of the process {peak / 2**20:8.0f} MiB, "
       f"allowed {1.25 * state / 2**20 + 250e6 / 2**20:8.0f} MiB, {seconds:.2f} s a layer, norm {register.norm():.12f}")
 """
