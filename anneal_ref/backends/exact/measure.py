@@ -31,13 +31,13 @@ from anneal_ref.backends.exact.simd import (
 )
 
 
-@njit(cache=True)
+@njit
 def place(piece, shape):  # type: ignore[no-untyped-def]
     """Start of a piece; shape = (bits of pieces in a row, distance of rows, distance of pieces, bits of a piece)."""
     return (piece >> shape[0]) * shape[1] + (piece & ((1 << shape[0]) - 1)) * shape[2]
 
 
-@njit(cache=True)
+@njit
 def piece_probabilities(x, o, size, p):  # type: ignore[no-untyped-def]
     """p[:size] = probabilities of the piece at o."""
     lanes = lanes_of(x)
@@ -45,7 +45,7 @@ def piece_probabilities(x, o, size, p):  # type: ignore[no-untyped-def]
         squares(x, o + 2 * z, p, z)
 
 
-@njit(cache=True)
+@njit
 def fold_piece(p, bits, out):  # type: ignore[no-untyped-def]
     """Set out[i] to the sum of p with the sign of bit i, return the plain sum; overwrites p."""
     lanes = lanes_of(p)
@@ -79,7 +79,7 @@ def fold_piece(p, bits, out):  # type: ignore[no-untyped-def]
     return p[0]
 
 
-@njit(cache=True)
+@njit
 def bits_above(bits, lanes):  # type: ignore[no-untyped-def]
     """Bits that number whole vectors among 2^bits values."""
     count = 0
@@ -88,7 +88,7 @@ def bits_above(bits, lanes):  # type: ignore[no-untyped-def]
     return count
 
 
-@njit(cache=True)
+@njit
 def transform(v, count, width):  # type: ignore[no-untyped-def]
     """Walsh-Hadamard transform of `count` rows of v (count, width), in place."""
     step = 1
@@ -102,7 +102,7 @@ def transform(v, count, width):  # type: ignore[no-untyped-def]
         step *= 2
 
 
-@njit(cache=True, nogil=True)
+@njit
 def chunk_moments(x, shape, chunk, chunk_bits, p, total, first, z, zz):  # type: ignore[no-untyped-def]
     """First and second moments of a chunk of 2^chunk_bits pieces.
 
@@ -138,7 +138,7 @@ def chunk_moments(x, shape, chunk, chunk_bits, p, total, first, z, zz):  # type:
         zz[i, i] = first[0, bits]
 
 
-@njit(cache=True)
+@njit
 def currents(x, o, step, chunk, count, out, bit):  # type: ignore[no-untyped-def]
     """Add to out[bit : bit + count] the currents of `count` <= 3 bits reached by steps, over a chunk at o."""
     lanes = lanes_of(x)
@@ -164,7 +164,7 @@ def currents(x, o, step, chunk, count, out, bit):  # type: ignore[no-untyped-def
         out[bit] += vsum(one[0])
 
 
-@njit(cache=True)
+@njit
 def pair_overlap(x, shape, bits, piece, odd, scratch):  # type: ignore[no-untyped-def]
     """Sum over a piece of (-1)^pop(z) Re(c phi*(z) phi(~z)), c = 1, or i for an odd number of spins."""
     lanes = lanes_of(x)
@@ -194,7 +194,7 @@ def pair_overlap(x, shape, bits, piece, odd, scratch):  # type: ignore[no-untype
     return total
 
 
-@njit(cache=True, nogil=True)
+@njit
 def chunk_currents(x, shape, bits, start, stop, groups, scratch, pairs, odd, out):  # type: ignore[no-untyped-def]
     """Set out (bits + 1,) to sums of re im' - im re' for every stored bit, and for the left-out spin, over a chunk.
 
@@ -229,7 +229,7 @@ def chunk_currents(x, shape, bits, start, stop, groups, scratch, pairs, odd, out
             out[bits] += pair_overlap(x, shape, bits, piece, odd, scratch)
 
 
-@njit(cache=True, nogil=True)
+@njit
 def chunk_weights(x, shape, start, stop, p, weights):  # type: ignore[no-untyped-def]
     """weights[start:stop] = weights of the pieces."""
     size, wide = 1 << shape[3], lanes_of(p)
@@ -241,7 +241,7 @@ def chunk_weights(x, shape, start, stop, p, weights):  # type: ignore[no-untyped
         weights[piece] = vsum(total)
 
 
-@njit(cache=True, nogil=True)
+@njit
 def draw(x, shape, pieces, targets, p, out):  # type: ignore[no-untyped-def]
     """out[k] = the amplitude of pieces[k] (ascending) where the running sum of probabilities passes targets[k]."""
     size = 1 << shape[3]

@@ -20,7 +20,7 @@ TWO_OVER_PI = 0.6366197723675814
 HALF_PI_1, HALF_PI_2, HALF_PI_3 = 1.5707963267948966, 6.123233995736766e-17, -1.4973849048591833e-33
 
 
-@njit(cache=True)
+@njit
 def unit_phases(phi, e, i, n, c, s):  # type: ignore[no-untyped-def]
     """c[:n], s[:n] = cos(phi e[i:]), -sin(phi e[i:]); n is rounded up to whole vectors."""
     lanes = lanes_of(e)
@@ -57,7 +57,7 @@ def unit_phases(phi, e, i, n, c, s):  # type: ignore[no-untyped-def]
         vstore(s, z, vneg(vmul(sign_s, vfma(odd, cosine, vmul(keep, sine)))))
 
 
-@njit(cache=True)
+@njit
 def place(c, s, n, w, o, sign):  # type: ignore[no-untyped-def]
     """w[o:] = blocks of c + i sign s."""
     lanes = lanes_of(w)
@@ -66,7 +66,7 @@ def place(c, s, n, w, o, sign):  # type: ignore[no-untyped-def]
         vplace(s, z, w, o + 2 * z + lanes, sign)
 
 
-@njit(cache=True)
+@njit
 def add_fields(f, i, n, e, o):  # type: ignore[no-untyped-def]
     """e[o:][z] = e[o] + sum_k f[i + k] s_k(z) for all 2^n settings z of n spins."""
     lanes = lanes_of(e)
@@ -87,7 +87,7 @@ def add_fields(f, i, n, e, o):  # type: ignore[no-untyped-def]
         size *= 2
 
 
-@njit(cache=True)
+@njit
 def internal_energies(coupling, sites, i, n, e, o, f, u):  # type: ignore[no-untyped-def]
     """e[o:][z] = energy of the couplings among sites[i : i + n], for all settings; f, u are scratch."""
     zero = np.intp(0)  # typed, because numba compiles a variant of its own for a literal
@@ -105,7 +105,7 @@ def internal_energies(coupling, sites, i, n, e, o, f, u):  # type: ignore[no-unt
         size *= 2
 
 
-@njit(cache=True)
+@njit
 def frame_energies(coupling, sites, bits, row_bits, e, f, u):  # type: ignore[no-untyped-def]
     """Tables of energies of a tile, for one frame: rows, then pairs of row-numbering spins, then row numbers."""
     size = 1 << row_bits
@@ -127,7 +127,7 @@ def frame_energies(coupling, sites, bits, row_bits, e, f, u):  # type: ignore[no
     internal_energies(coupling, sites, row_bits, bits - row_bits, e, o, f, u)
 
 
-@njit(cache=True)
+@njit
 def pair_phases(phi, e, o, levels, row_bits, c, s, w, d):  # type: ignore[no-untyped-def]
     """w[d:] = the tables D of a layer: for each pair of spins the settings ++, -+, +-, -- (bit 0 of the pair first)."""
     size = 1 << row_bits
@@ -142,7 +142,7 @@ def pair_phases(phi, e, o, levels, row_bits, c, s, w, d):  # type: ignore[no-unt
         d += 8 * size
 
 
-@njit(cache=True)
+@njit
 def tile_phases(phi, scale, coupling, field, sites, bits, total, row_bits, index, e, o, f, u, c, s, w, t, r):  # type: ignore[no-untyped-def]
     """w[t:] = T and w[r:] = R of a tile whose outer spins sites[bits:total] are set to the bits of `index`."""
     size, number, zero = 1 << row_bits, 1 << (bits - row_bits), np.intp(0)

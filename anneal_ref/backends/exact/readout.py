@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from anneal_ref.backends.exact import measure
+from anneal_ref.backends.exact import compiled
 from anneal_ref.backends.exact.layout import Layout, aligned
 
 Floats = NDArray[np.float64]
@@ -66,7 +66,7 @@ class Reader:
         weights = np.empty(chunks << inside)
 
         def work(k: int) -> None:
-            measure.chunk_weights(self.x, self._shape, k << inside, (k + 1) << inside, self._piece(), weights)
+            compiled.chunk_weights(self.x, self._shape, k << inside, (k + 1) << inside, self._piece(), weights)
 
         self._spread(work, chunks)
         return weights
@@ -80,7 +80,7 @@ class Reader:
         piece = np.minimum(np.searchsorted(edges, target, side="right"), np.flatnonzero(weights)[-1])
         target -= np.where(piece > 0, edges[piece - 1], 0.0)
         drawn, z = np.empty(len(order), np.int64), np.empty(len(order), np.int64)
-        measure.draw(self.x, self._shape, piece, target, self._piece(), drawn)
+        compiled.draw(self.x, self._shape, piece, target, self._piece(), drawn)
         z[order] = drawn
         return z
 
@@ -93,7 +93,7 @@ class Reader:
 
         def work(k: int) -> None:
             total, first = np.empty((1 << low, 1)), np.empty((1 << inside, low + 1))
-            measure.chunk_moments(self.x, self._shape, k, inside, self._piece(), total, first, z[k], zz[k])
+            compiled.chunk_moments(self.x, self._shape, k, inside, self._piece(), total, first, z[k], zz[k])
 
         self._spread(work, chunks)
         top = self.place.bits - b
@@ -120,7 +120,7 @@ class Reader:
         def work(k: int) -> None:
             scratch = aligned(place.lanes * place.lane_bits, self.x.dtype)
             start, stop, pairs, odd = k << inside, (k + 1) << inside, parity != 0, place.bits % 2
-            measure.chunk_currents(self.x, self._shape, place.bits, start, stop, groups, scratch, pairs, odd, out[k])
+            compiled.chunk_currents(self.x, self._shape, place.bits, start, stop, groups, scratch, pairs, odd, out[k])
 
         self._spread(work, chunks)
         x: Floats = -2 * out.sum(0)

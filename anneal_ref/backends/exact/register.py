@@ -11,9 +11,10 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from anneal_ref.backends.exact.compiled import run
 from anneal_ref.backends.exact.layout import ITEM_BYTES, aligned, layout, smallest, tilings
 from anneal_ref.backends.exact.readout import CHUNK_BITS, QUARTERS, Reader, gauge
-from anneal_ref.backends.exact.sweeps import Scratch, run
+from anneal_ref.backends.exact.sweeps import Scratch
 from anneal_ref.base.checks import choice, finite, integer, signs
 from anneal_ref.base.errors import AnnealRefError, InputError
 

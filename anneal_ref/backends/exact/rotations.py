@@ -24,7 +24,7 @@ from anneal_ref.backends.exact.simd import (
 )
 
 
-@njit(cache=True)
+@njit
 def rotate(x, o, s, a, b, q, y, p, z, c, d, g, rows, chunk, t, i, k):  # type: ignore[no-untyped-def]
     """Turn k <= 4 bits with tangents t[i:], from x (o, s, a, b, q) to y (p, z, c, d, g)."""
     lanes = lanes_of(x)
@@ -58,7 +58,7 @@ def rotate(x, o, s, a, b, q, y, p, z, c, d, g, rows, chunk, t, i, k):  # type: i
                 h += lanes
 
 
-@njit(cache=True)
+@njit
 def rotate_pairs(x, o, u, s, a, b, q, y, p, v, z, c, d, g, rows, chunk, t, i, w, f, even, odd):  # type: ignore[no-untyped-def]
     """Turn two bits with tangents t[i:] and the spin left out of the symmetric half.
 

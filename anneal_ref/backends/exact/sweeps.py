@@ -77,7 +77,7 @@ class Scratch(NamedTuple):
     signs: Any  # (n + 1,) the frame
 
 
-@njit(cache=True)
+@njit
 def refresh(w, t, d, levels, row, size):  # type: ignore[no-untyped-def]
     """Partial products of phases for `row`: w[t:] holds one table a level, the base on top."""
     lanes = lanes_of(w)
@@ -94,7 +94,7 @@ def refresh(w, t, d, levels, row, size):  # type: ignore[no-untyped-def]
             vstore(w, b + j + lanes, vfma(p, h, vmul(q, g)))
 
 
-@njit(cache=True)
+@njit
 def rows_after(x, o, n, first, w, t, d, r, levels, b, a):  # type: ignore[no-untyped-def]
     """Phase, then rotations of all bits, on n rows at o; `first` numbers the first row in its tile."""
     lanes = lanes_of(x)
@@ -109,7 +109,7 @@ def rows_after(x, o, n, first, w, t, d, r, levels, b, a):  # type: ignore[no-unt
         o += size
 
 
-@njit(cache=True)
+@njit
 def rows_low(x, o, n, first, w, t, d, r, levels, b, a, ahead):  # type: ignore[no-untyped-def]
     """Rotations, phase, rotations of all bits on n rows at o; asks for the memory `ahead` floats further."""
     lanes = lanes_of(x)
@@ -127,7 +127,7 @@ def rows_low(x, o, n, first, w, t, d, r, levels, b, a, ahead):  # type: ignore[n
         o += size
 
 
-@njit(cache=True)
+@njit
 def rows_high(y, o, n, first, w, t, d, r, levels, b, a, x, ahead, count, step, chunk):  # type: ignore[no-untyped-def]
     """Do the same without the lanes, on a buffer; ask for `count` chunks of memory rows for the next tile."""
     lanes = lanes_of(y)
@@ -145,7 +145,7 @@ def rows_high(y, o, n, first, w, t, d, r, levels, b, a, x, ahead, count, step, c
         o += size
 
 
-@njit(cache=True)
+@njit
 def tangents(tans, k, p, w, o, lane_bits):  # type: ignore[no-untyped-def]
     """Tables at w[o:]: signed lanes; at w[o-4:] the three bits above them; at w[o-TANGENTS:] all bits of the tile."""
     lanes = 1 << lane_bits
@@ -158,7 +158,7 @@ def tangents(tans, k, p, w, o, lane_bits):  # type: ignore[no-untyped-def]
         w[o - 4 + b] = w[o - TANGENTS + lane_bits + b] if lane_bits + b < p.edge else 0.0
 
 
-@njit(cache=True)
+@njit
 def signed_lanes(t, w, o, lanes):  # type: ignore[no-untyped-def]
     """w[o:] = t times the parity sign of the lanes of an even block, then of an odd one."""
     for j in range(lanes):
@@ -171,7 +171,7 @@ def signed_lanes(t, w, o, lanes):  # type: ignore[no-untyped-def]
         w[o + lanes + j] = -v
 
 
-@njit(cache=True)
+@njit
 def in_place(x, o, p, bit, count, w, t):  # type: ignore[no-untyped-def]
     """Turn `count` bits from `bit` on, anywhere above the row, in a tile or a piece at o."""
     z = np.intp(0)  # typed, because numba compiles a variant of its own for a literal
@@ -188,7 +188,7 @@ def in_place(x, o, p, bit, count, w, t):  # type: ignore[no-untyped-def]
         rotate(x, o, z, s << count, z, s, x, o, z, s << count, z, s, n, s, w, t + bit, count)
 
 
-@njit(cache=True)
+@njit
 def edge_in_place(x, o, p, w, t, f):  # type: ignore[no-untyped-def]
     """Do the edge pass of a tile that lies in memory."""
     z = np.intp(0)
@@ -205,14 +205,14 @@ def edge_in_place(x, o, p, w, t, f):  # type: ignore[no-untyped-def]
         in_place(x, o, p, p.edge, p.bits - p.edge, w, t)
 
 
-@njit(cache=True)
+@njit
 def column(p, c):  # type: ignore[no-untyped-def]
     """Offset of chunk number c in a memory row."""
     z = c << p.chunk_bits
     return (z >> p.piece_bits) * p.piece + 2 * (z & ((1 << p.piece_bits) - 1))
 
 
-@njit(cache=True)
+@njit
 def edge_copy(x, y, o, p, c, last, w, t, f, out):  # type: ignore[no-untyped-def]
     """Do the edge pass of tile c between memory x and the buffer y at o; `last` numbers the last chunk."""
     z = np.intp(0)
@@ -244,7 +244,7 @@ def edge_copy(x, y, o, p, c, last, w, t, f, out):  # type: ignore[no-untyped-def
         rotate(x, a, z, p.row, z, q, y, o, s, p.stride, chunk, g, n, chunk, w, t + bit, p.bits - bit)
 
 
-@njit(cache=True)
+@njit
 def sweep(x, w, e, f, u, c, s, p, start, stop, coupling, field, phi, scale, lane_bits):  # type: ignore[no-untyped-def]
     """Tiles start .. stop-1 of one sweep; the tables of the layer are in place."""
     lanes = 1 << lane_bits
@@ -307,7 +307,7 @@ def sweep(x, w, e, f, u, c, s, p, start, stop, coupling, field, phi, scale, lane
             edge_in_place(x, o, p, w, a - TANGENTS, sa)
 
 
-@njit(cache=True, nogil=True)
+@njit
 def run(x, scratch, tilings, groups, first, frames, phis, scales, tans, steps, shared, k, tiles):  # type: ignore[no-untyped-def]
     """Layers k, k + 1, ... of `phis`, the first of all on tilings[first]; returns the layer to go on with.
 

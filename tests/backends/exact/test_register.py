@@ -9,7 +9,7 @@ from scipy.stats import binom
 
 from anneal_ref.backends.exact import layout, phases
 from anneal_ref.backends.exact.register import Register
-from anneal_ref.backends.exact.sweeps import run
+from anneal_ref.backends.exact.compiled import run
 from anneal_ref.base.errors import AnnealRefError, InputError
 
 # Largest error of an amplitude in units of 2^(-N/2), after half a dozen layers.
@@ -339,7 +339,7 @@ def test_sines_and_cosines_of_the_phase_tables():
 NARROW = """
 import numpy as np
 from anneal_ref.backends.exact.register import Register
-from anneal_ref.backends.exact.sweeps import run
+from anneal_ref.backends.exact.compiled import run
 from anneal_ref.backends.exact.simd import VECTOR_BYTES
 assert VECTOR_BYTES == 32
 n = 12
