@@ -204,8 +204,9 @@ class Samples:
         """
         known = self.manifest
         if known.instance is not None and known.instance != instance.identity:
-            fits = known.gauge is not None and len(known.gauge) == instance.n_sites
-            programmed = fits and known.instance == instance.gauge(known.gauge).identity
+            gauge = known.gauge
+            comparable = gauge is not None and len(gauge) == instance.n_sites
+            programmed = gauge is not None and comparable and known.instance == instance.gauge(gauge).identity
             hint = (
                 "; it is this instance as programmed with the gauge, but the manifest must name it before the gauge"
                 if programmed

@@ -212,9 +212,11 @@ def test_estimate_measures_the_error_of_a_derived_number():
         assert np.median(estimate.num) <= 30 * np.median(error)
         assert np.all(estimate.stat == 0)
     energy = truth.estimate(lambda moments: ar.observables.problem_energy(moments, problem.instance))
-    added_up = np.abs(problem.instance.coupling_matrix())[np.triu_indices(5, 1)] @ truth.moments().zz.num[
-        np.triu_indices(5, 1)
-    ] + np.abs(problem.instance.fields) @ truth.moments().z.num
+    added_up = (
+        np.abs(problem.instance.coupling_matrix())[np.triu_indices(5, 1)]
+        @ truth.moments().zz.num[np.triu_indices(5, 1)]
+        + np.abs(problem.instance.fields) @ truth.moments().z.num
+    )
     assert energy.num < 3 * added_up
 
 

@@ -8,8 +8,8 @@ import pytest
 from scipy.stats import binom
 
 from anneal_ref.backends.exact import layout, phases
-from anneal_ref.backends.exact.register import Register
 from anneal_ref.backends.exact.compiled import run
+from anneal_ref.backends.exact.register import Register
 from anneal_ref.base.errors import AnnealRefError, InputError
 
 # Largest error of an amplitude in units of 2^(-N/2), after half a dozen layers.
