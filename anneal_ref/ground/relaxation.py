@@ -92,7 +92,7 @@ def separate(problem: Problem, x: NDArray[np.float64]) -> list[Cut]:
     a doubled graph, where an edge costs x within a copy and 1 - x between the copies.
     """
     n_sites = problem.n_sites
-    first, second = problem.edges.T
+    first, second = problem.edges.T.astype(np.int32)  # scipy's graph routines want 32-bit indices
     stay, cross = np.maximum(x, 0) + STEP_WEIGHT, np.maximum(1 - x, 0) + STEP_WEIGHT
     rows = np.concatenate([first, first + n_sites, first, first + n_sites])
     columns = np.concatenate([second, second + n_sites, second + n_sites, second])

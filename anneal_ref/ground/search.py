@@ -50,8 +50,8 @@ def tied(
     sign : (n_sites,) array of int8
         Sign of each spin relative to its set.
     """
-    first, second = edges.T
-    shift = n_sites * broken
+    first, second = edges.T.astype(np.int32)  # scipy's graph routines want 32-bit indices
+    shift = np.int32(n_sites) * broken
     rows = np.concatenate([first, first + n_sites])
     columns = np.concatenate([second + shift, second + n_sites - shift])
     copies = csr_array((np.ones(rows.size), (rows, columns)), shape=(2 * n_sites, 2 * n_sites))
@@ -67,7 +67,7 @@ def rounded(problem: Problem, x: NDArray[np.float64]) -> NDArray[np.int8]:
     """Read a configuration off a relaxed solution, trusting the edges nearest to 0 or 1 first."""
     doubt = 1e-3 + np.minimum(x, 1 - x)
     n_sites = problem.n_sites
-    first, second = problem.edges.T
+    first, second = problem.edges.T.astype(np.int32)
     tree = minimum_spanning_tree(csr_array((doubt, (first, second)), shape=(n_sites, n_sites))).tocoo()
     wide = csr_array((x + 1, (first, second)), shape=(n_sites, n_sites))
     broken = np.asarray(wide[tree.row, tree.col]).ravel() > 1.5
