@@ -50,7 +50,8 @@ class PairTable:
     measured, stat : ndarray, shape (n_pairs,)
         Measured correlation and its standard error.
     sigma : ndarray, shape (n_pairs,)
-        Difference beyond the numerical error, in standard errors, with its sign.
+        Difference beyond the numerical error, with its sign, in standard errors: measured ones, or those of shots of
+        the truth where these are larger.
     p : ndarray, shape (n_pairs,)
         Probability of a difference at least as large if the pair is right, for one pair looked at alone.
     adjusted : ndarray, shape (n_pairs,)
@@ -119,8 +120,10 @@ def pair_deviations(spins: NDArray[np.int8], truth: Estimate, clusters: Clusters
     """Return the table of all pairs.
 
     Independent shots get exact binomial p-values (twice the smaller tail, C. J. Clopper and E. S. Pearson,
-    Biometrika 26, 404 (1934)); clusters of shots Student's t from the scatter between clusters. The truth may lie
-    anywhere within its numerical error; the most favourable place counts.
+    Biometrika 26, 404 (1934)). Clusters of shots get Student's t from the scatter between clusters, or the binomial
+    value where that is larger: clusters can only add to the noise of shots, and a correlation near +1 or -1 may by luck
+    show no scatter at all. For the same reason sigma never counts in less than the standard error that shots of the
+    truth would have. The truth may lie anywhere within its numerical error; the most favourable place counts.
 
     Parameters
     ----------
@@ -141,11 +144,11 @@ def pair_deviations(spins: NDArray[np.int8], truth: Estimate, clusters: Clusters
         variance = np.sum(centred**2, axis=0) / (shots**2 * clusters.spread)
     stat = np.sqrt(variance + PSEUDO_SHOTS * (1 + measured**2) / shots**2)
     nearest = np.clip(measured, target - num, target + num)
-    sigma = (measured - nearest) / stat
-    if clusters.independent:
-        p = _binomial(np.rint((1 + measured) / 2 * shots), shots, np.clip((1 + nearest) / 2, 0.0, 1.0))
-    else:
-        p = 2 * special.stdtr(clusters.freedom, -np.abs(sigma))
+    expected = np.clip(nearest, -1.0, 1.0)
+    sigma = (measured - nearest) / np.sqrt(np.maximum(stat**2, (1 - expected**2) / shots))
+    p = _binomial(np.rint((1 + measured) / 2 * shots), shots, (1 + expected) / 2)
+    if not clusters.independent:
+        p = np.maximum(p, 2 * special.stdtr(clusters.freedom, -np.abs(sigma)))
     order = np.lexsort((-np.abs(sigma), p))
     columns = (first, second, target, num, measured, stat, sigma, p, holm(p))
     return PairTable(*(frozen(np.ascontiguousarray(column[order])) for column in columns))

@@ -29,8 +29,8 @@ from scipy import optimize, special
 from anneal_ref.base.checks import frozen
 from anneal_ref.judgement.clusters import Clusters
 
-# Random shots added to the noise (not to the value), in the manner of Agresti and Coull, Am. Stat. 52, 119 (1998):
-# without them correlations that were measured as exactly +-1 would claim to have no error at all.
+# Uniformly random shots added to the noise (not to the value), in the manner of Agresti and Coull, Am. Stat. 52, 119
+# (1998): without them correlations that were measured as exactly +-1 would claim to have no error at all.
 PSEUDO_SHOTS = 2.0
 _CHUNK = 8192
 
@@ -183,7 +183,7 @@ def pair_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clusters:
         Which shots belong together.
     """
     first, second = np.triu_indices(spins.shape[1], 1)
-    return _distance(spins, truth[first, second], clusters, lambda s: s[:, first] * s[:, second])
+    return _distance(spins, truth[first, second], clusters, lambda s: s[:, first] * s[:, second], _Random(0.0))
 
 
 def connected_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters) -> SquaredDistance:
@@ -199,19 +199,33 @@ def connected_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clus
         centred = s - mean
         return np.asarray(centred[:, first] * centred[:, second] + excess)
 
-    return _distance(spins, truth[first, second], clusters, features)
+    lean = np.zeros((len(first), len(mean)))
+    rows = np.arange(len(first))
+    lean[rows, first], lean[rows, second] = mean[second], mean[first]
+    return _distance(spins, truth[first, second], clusters, features, _Random(mean[first] * mean[second] + excess, lean))
 
 
 def site_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters) -> SquaredDistance:
     """Squared distance of measured <Z_i> from their true values, shape (n_sites,)."""
-    return _distance(spins, truth, clusters, lambda s: s)
+    return _distance(spins, truth, clusters, lambda s: s, _Random(0.0))
+
+
+@dataclass(frozen=True, slots=True)
+class _Random:
+    """Features of a uniformly random shot: their mean, and their covariance 1 + lean lean^T (1 without a lean)."""
+
+    mean: NDArray[np.float64] | float
+    lean: NDArray[np.float64] | None = None
+
+    def about(self, mean: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Return the second moments of the features about a mean."""
+        away = self.mean - mean
+        spread = np.eye(len(mean)) + np.outer(away, away)
+        return np.asarray(spread if self.lean is None else spread + self.lean @ self.lean.T)
 
 
 def _distance(
-    spins: NDArray[np.int8],
-    truth: NDArray[np.float64],
-    clusters: Clusters,
-    features: Features,
+    spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters, features: Features, random: _Random
 ) -> SquaredDistance:
     size = truth.size
     total, square, weighted = np.zeros(size), np.zeros((size, size)), np.zeros(size)
@@ -227,7 +241,7 @@ def _distance(
     # mean of y_a . y_b over pairs of shots of different clusters, y being a shot's features minus the truth
     within = float(np.trace(square) - 2 * weighted @ truth + sizes2 * truth @ truth)
     unbiased = (shots**2 * float(d @ d) - within) / (shots**2 * spread)
-    padded = covariance + PSEUDO_SHOTS / shots**2 * (np.eye(size) + np.outer(mean, mean))
+    padded = covariance + PSEUDO_SHOTS / shots**2 * random.about(mean)
     spectrum, vectors = np.linalg.eigh(padded)
     return SquaredDistance(
         float(d @ d) - unbiased,

@@ -63,6 +63,23 @@ def test_false_alarms_stay_below_five_per_cent(groups: int | None) -> None:
     assert alarms <= stats.binom.isf(1e-4, 400, 0.05)
 
 
+def test_false_alarms_are_rare_for_strong_correlations_in_gauges() -> None:
+    """A chain of <Z_i Z_i+1> = 0.999: clusters without a single broken bond do not prove a correlation of 1."""
+    n, c, shots, groups = 12, 0.999, 4000, np.arange(4000) // 100
+    site, rng = np.arange(n), np.random.default_rng(1)
+    exact = Estimate(c ** np.abs(site[:, None] - site), 0.0, 0.0)
+    alarms = naive = 0
+    for _ in range(300):
+        bonds = np.where(rng.random((shots, n - 1)) < (1 - c) / 2, -1, 1)
+        spins = np.concatenate((np.ones((shots, 1)), np.cumprod(bonds, axis=1)), axis=1).astype(np.int8)
+        table = pair_deviations(spins, exact, Clusters.of(shots, groups))
+        alarms += table.significant() > 0
+        # the wrong twin: Student's t on the measured scatter alone
+        p = 2 * stats.t.sf(np.abs(table.measured - table.truth) / table.stat, 39)
+        naive += bool(np.any(holm(p) <= 0.05))
+    assert alarms <= stats.binom.isf(1e-4, 300, 0.05) < naive
+
+
 def test_one_coupler_off_shows_at_its_ends() -> None:
     off = RING.copy()
     off[3] *= 0.6

@@ -193,6 +193,21 @@ def test_samples_without_any_scatter_claim_no_certainty() -> None:
         assert np.isfinite(pair_distance(spins, np.ones((4, 4)), Clusters.of(500, groups)).upper(0.95))
 
 
+def test_pseudo_shots_are_uniformly_random_ones() -> None:
+    """The noise that they add is the second moment of their features about the measured mean, by enumeration."""
+    shots, n = 50, 4
+    spins = np.array([[1, 1, -1, 1]] * 49 + [[1, -1, -1, 1]], dtype=np.int8)
+    mean = spins.mean(axis=0)
+    first, second = np.triu_indices(n, 1)
+    away, every = states(n) - mean, spins - mean
+    centred = np.mean(every[:, first] * every[:, second], axis=0)
+    random = away[:, first] * away[:, second] - centred
+    covariance = np.cov((every[:, first] * every[:, second]).T, bias=True) / (shots - 1)
+    expected = covariance + 2.0 / shots**2 * (random.T @ random) / len(random)
+    distance = connected_distance(spins, np.zeros((n, n)), Clusters.of(shots))
+    np.testing.assert_allclose(np.sort(distance.spectrum), np.linalg.eigvalsh(expected), rtol=1e-5)
+
+
 # ---- coverage: the interval holds the true value, and the tempting alternatives do not ----
 
 REPEATS = 300
