@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import NDArray
 
 from anneal_ref.base.checks import integer, number
 from anneal_ref.base.errors import InputError, NotSupported
@@ -23,7 +24,7 @@ from anneal_ref.judgement.equivalence import (
     judge_correlation_error,
     judge_distance,
 )
-from anneal_ref.judgement.fidelity import fidelity
+from anneal_ref.judgement.fidelity import Fidelity, Refusal, fidelity
 from anneal_ref.judgement.perfect import Perfect, repeat
 from anneal_ref.judgement.scores import (
     correlation_score,
@@ -129,17 +130,9 @@ def compare(
     sigma = {score.name: standard_errors(score.estimate, target) for score, target in energies}
     scores["magnetisation_error"] = magnetisation_score(spins, moments.z, clusters, repetitions, level)
 
-    if table is None:
-        notes.append("no fidelity: the reference keeps no table of probabilities at this size")
-    else:
-        try:
-            scores["fidelity"] = fidelity(spins, table, not connected, clusters, level, seed)
-            notes.append(
-                "the fidelity is the plain one and falls short by shot noise, as a perfect processor's does; "
-                "its interval is for the fidelity without that bias"
-            )
-        except NotSupported as refusal:
-            notes.append(str(refusal))
+    overlap = _fidelity(spins, table, not connected, clusters, level, seed)
+    if isinstance(overlap, Fidelity):
+        scores["fidelity"] = overlap.score
     if table is not None if likelihood is None else likelihood:
         score, z, strays = likelihood_score(reference, spins, clusters, perfect, level)
         scores["log_likelihood"], sigma["log_likelihood"] = score, z
@@ -159,6 +152,7 @@ def compare(
         sigma,
         correlation,
         floor,
+        overlap,
         pair_deviations(spins, moments.zz, clusters),
         decision,
         tuple(notes),
@@ -169,6 +163,22 @@ def compare(
         len(clusters),
         level,
     )
+
+
+def _fidelity(
+    spins: NDArray[np.int8],
+    table: NDArray[np.float64] | None,
+    folded: bool,
+    clusters: Clusters,
+    level: float,
+    seed: int,
+) -> Fidelity | Refusal:
+    if table is None:
+        return Refusal("no table", "no fidelity: the reference keeps no table of probabilities at this size")
+    try:
+        return fidelity(spins, table, folded, clusters, level, seed)
+    except NotSupported as refusal:
+        return Refusal("too few shots", str(refusal))
 
 
 def _first_notes(reference: Reference, samples: Samples, clusters: Clusters) -> list[str]:

@@ -11,7 +11,10 @@ from anneal_ref.base.estimate import Estimate, Score
 from anneal_ref.judgement.correlation_error import CorrelationError
 from anneal_ref.judgement.deviations import PairTable
 from anneal_ref.judgement.equivalence import Decision
+from anneal_ref.judgement.fidelity import Fidelity, Refusal
 from anneal_ref.judgement.perfect import NoiseFloor
+
+_PLAIN = "  plain, shot noise included"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -22,9 +25,9 @@ class Comparison:
     ----------
     scores : mapping of str to Score
         In a fixed order: correlation_error, residual_energy, order_parameter, magnetisation_error, fidelity,
-        log_likelihood. One that the data cannot support is absent, and a note says why. The floor of a score is what a
-        perfect processor attains with the same shots: the 95 % quantile for the two errors, value and scatter for the
-        others.
+        log_likelihood. One that the data cannot support is absent; `fidelity` or a note says why. The floor of a score
+        is what a perfect processor attains with the same shots: the 95 % quantile for the two errors, value and scatter
+        for the others.
     truth : mapping of str to Estimate
         True values of the scores that have one: residual_energy, order_parameter, log_likelihood.
     sigma : mapping of str to float
@@ -33,6 +36,8 @@ class Comparison:
         The correlation error with all that pooling needs.
     floor : NoiseFloor
         Correlation errors of a perfect processor.
+    fidelity : Fidelity or Refusal
+        The fidelity with the plain one beside it, or why there is none.
     pairs : PairTable
         All pairs of spins, the most striking deviation first.
     decision : Decision or None
@@ -53,6 +58,7 @@ class Comparison:
     sigma: Mapping[str, float]
     correlation: CorrelationError
     floor: NoiseFloor
+    fidelity: Fidelity | Refusal
     pairs: PairTable
     decision: Decision | None
     notes: tuple[str, ...]
@@ -95,7 +101,10 @@ class Comparison:
             lines.append(row.rstrip())
             if name == "correlation_error":
                 plain = f"{self.floor.raw_mean:.3g}, below {self.floor.raw_quantile:.3g} (95%)"
-                lines.append(f"  {'  plain, shot noise included':<30}{self.correlation.raw:>10.4g}   {'':<22}{plain}")
+                lines.append(f"  {_PLAIN:<30}{self.correlation.raw:>10.4g}   {'':<22}{plain}")
+            if name == "fidelity" and isinstance(self.fidelity, Fidelity):
+                plain = _perfect(self.fidelity.plain_floor)
+                lines.append(f"  {_PLAIN:<30}{self.fidelity.plain:>10.4g}   {'':<22}{plain}")
         found, level = self.pairs.significant(self.level), f"{self.level:.0%}"
         lines.append(f"pairs of spins that differ at level {level} (Holm): {found} of {len(self.pairs)}; the largest:")
         lines.append(self.pairs.text())
@@ -104,7 +113,8 @@ class Comparison:
             worst = np.argsort(-site_sigma, kind="stable")[:3]
             named = ", ".join(f"{k} (rms sigma {site_sigma[k]:.1f}, gain {gain[k]:.2f})" for k in worst)
             lines.append(f"sites most involved: {named}")
-        lines += [f"note: {note}" for note in self.notes]
+        refused = [self.fidelity.reason] if isinstance(self.fidelity, Refusal) else []
+        lines += [f"note: {note}" for note in (*refused, *self.notes)]
         if self.decision is not None:
             lines.append(str(self.decision))
         return "\n".join(lines)

@@ -11,9 +11,12 @@ from scipy import special
 from anneal_ref.base.errors import NotSupported
 from anneal_ref.base.estimate import Estimate, Score
 from anneal_ref.judgement.clusters import Clusters
+from anneal_ref.observe.resample import jackknife
 
 SUPPORT_SHARE = 0.99
 SHOTS_PER_STATE = 10
+UNREMOVED = 0.2
+"""Share of the bias that a jackknife may leave where the shots are as few as is allowed; found by simulation."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,6 +54,34 @@ def support(probabilities: NDArray[np.float64]) -> Support:
     return Support(states, SHOTS_PER_STATE * states)
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class Fidelity:
+    """A fidelity freed of the bias of shots, beside the plain one.
+
+    Parameters
+    ----------
+    score : Score
+        The fidelity of the processor's distribution, with its interval; `num` bounds what is left of the bias. The
+        floor is what a perfect sampler comes out at in the same way.
+    plain : float
+        The fidelity of the measured frequencies, which fall short of 1 even for a perfect sampler.
+    plain_floor : Estimate
+        The plain fidelity of a perfect sampler with the same shots.
+    """
+
+    score: Score
+    plain: float
+    plain_floor: Estimate
+
+
+@dataclass(frozen=True, slots=True)
+class Refusal:
+    """Why there is no fidelity: in two or three words for a table, and in a sentence."""
+
+    short: str
+    reason: str
+
+
 def fidelity(
     spins: NDArray[np.int8],
     probabilities: NDArray[np.float64],
@@ -59,13 +90,12 @@ def fidelity(
     level: float = 0.95,
     seed: int = 0,
     replicas: int = 400,
-) -> Score:
-    """Return the fidelity (sum sqrt(p q))^2 of measured frequencies q and true probabilities p.
+) -> Fidelity:
+    """Return the fidelity (sum sqrt(p q))^2 of the processor's distribution q and true probabilities p.
 
-    Frequencies from n shots fall short of 1 even for a perfect sampler, by about (K - 1)/(4 n) for K states. The value
-    is the plain one, to be read beside the floor, a perfect sampler with the same shots. The interval is that of the
-    fidelity of the processor's true distribution: centred on the value with this bias removed by a jackknife, and never
-    narrower than the scatter of the perfect sampler allows.
+    Frequencies from n shots fall short of 1 even for a perfect sampler, by about (K - 1)/(4 n) for K states. A
+    jackknife takes this bias away, all but a part of order 1/n^2, for which the interval leaves room. A value beyond 1
+    is given as 1. The interval is never narrower than the scatter of a perfect sampler.
 
     Parameters
     ----------
@@ -94,20 +124,24 @@ def fidelity(
     index = state_index(spins)
     if folded:
         index = np.minimum(index, len(probabilities) - 1 - index)
-    value, corrected, stat = _jackknife(index, p, clusters)
-    perfect = np.random.default_rng(seed).multinomial(shots, p, size=replicas)
-    floor = (np.sqrt(perfect / shots) @ np.sqrt(p)) ** 2
-    spread = float(floor.std(ddof=1))
-    half = float(special.stdtrit(clusters.freedom, 0.5 + level / 2)) * max(stat, spread)
-    low, high = np.clip((corrected - half, corrected + half), 0.0, 1.0)
-    return Score(
+    plain, corrected, stat = _jackknife(index, p, clusters)
+    rng = np.random.default_rng(seed)
+    perfect = np.array([_by_counts(rng.multinomial(shots, p), p)[:2] for _ in range(replicas)])
+    plain_floor, floor = perfect[:, 0], np.minimum(perfect[:, 1], 1.0)
+    rest = UNREMOVED * float(1 - plain_floor.mean())
+    spread = max(stat, float(perfect[:, 1].std(ddof=1)))
+    half = float(special.stdtrit(clusters.freedom, 0.5 + level / 2)) * spread + rest
+    value = min(corrected, 1.0)
+    score = Score(
         "fidelity",
-        Estimate(value, stat, 0.0, "samples"),
-        float(low),
-        float(high),
+        Estimate(value, stat, rest, "samples"),
+        float(np.clip(corrected - half, 0.0, value)),
+        min(corrected + half, 1.0),
         level,
-        Estimate(float(floor.mean()), spread, 0.0, "perfect processor"),
+        Estimate(float(floor.mean()), float(floor.std(ddof=1)), rest, "perfect processor"),
     )
+    plain_scatter = Estimate(float(plain_floor.mean()), float(plain_floor.std(ddof=1)), 0.0, "perfect processor")
+    return Fidelity(score, plain, plain_scatter)
 
 
 def state_index(spins: NDArray[np.int8]) -> NDArray[np.int64]:
@@ -115,24 +149,26 @@ def state_index(spins: NDArray[np.int8]) -> NDArray[np.int64]:
     return np.asarray((spins < 0).astype(np.int64) @ (1 << np.arange(spins.shape[1], dtype=np.int64)))
 
 
+def _by_counts(counts: NDArray[np.int64], p: NDArray[np.float64]) -> tuple[float, float, float]:
+    """Value, value without its bias, and standard error, from how often each state was seen in independent shots."""
+    shots = int(counts.sum())
+    counts, root = counts[counts > 0], np.sqrt(p[counts > 0])
+    full = float((root @ np.sqrt(counts)) ** 2 / shots)
+    # leaving out any shot of a state does the same
+    without = (root @ np.sqrt(counts) - root * (np.sqrt(counts) - np.sqrt(counts - 1))) ** 2 / (shots - 1)
+    pseudo = shots * full - (shots - 1) * without
+    corrected = float(counts @ pseudo) / shots
+    return full, corrected, float(np.sqrt(counts @ (pseudo - corrected) ** 2 / (shots - 1) / shots))
+
+
 def _jackknife(index: NDArray[np.int64], p: NDArray[np.float64], clusters: Clusters) -> tuple[float, float, float]:
     """Value, value without its bias, and standard error, leaving out one cluster at a time."""
-    shots = len(index)
     seen, code, counts = np.unique(index, return_inverse=True, return_counts=True)
-    root = np.sqrt(p[seen])
-    full = float((root @ np.sqrt(counts)) ** 2 / shots)
+    root, shots = np.sqrt(p[seen]), len(index)
     if clusters.independent:
-        # leaving out any shot of a state does the same
-        amplitude = root @ np.sqrt(counts) - root * (np.sqrt(counts) - np.sqrt(counts - 1))
-        without, times, kept = amplitude**2 / (shots - 1), counts.astype(float), np.full(len(seen), shots - 1.0)
-    else:
-        rows = [counts - np.bincount(code[group], minlength=len(seen)) for group in clusters]
-        kept = shots - clusters.sizes.astype(float)
-        without, times = np.array([(root @ np.sqrt(row)) ** 2 for row in rows]) / kept, np.ones(len(rows))
-    # delete-m_j jackknife: F. M. T. A. Busing, E. Meijer and R. van der Leeden, Stat. Comput. 9, 3 (1999)
-    units = times.sum()
-    ratio = shots / (shots - kept)
-    corrected = units * full - float(times @ (without * kept)) / shots
-    pseudo = ratio * full - (ratio - 1) * without
-    variance = float(times @ ((pseudo - corrected) ** 2 / (ratio - 1))) / units
-    return full, corrected, float(np.sqrt(variance))
+        return _by_counts(counts, p[seen])
+    full = float((root @ np.sqrt(counts)) ** 2 / shots)
+    rows = (counts - np.bincount(code[group], minlength=len(seen)) for group in clusters)
+    left_out = np.array([(root @ np.sqrt(row)) ** 2 / row.sum() for row in rows])
+    corrected, error = jackknife(np.array(full), left_out, clusters.sizes)
+    return full, float(corrected), float(error)

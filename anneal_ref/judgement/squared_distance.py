@@ -202,7 +202,8 @@ def connected_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clus
     lean = np.zeros((len(first), len(mean)))
     rows = np.arange(len(first))
     lean[rows, first], lean[rows, second] = mean[second], mean[first]
-    return _distance(spins, truth[first, second], clusters, features, _Random(mean[first] * mean[second] + excess, lean))
+    random = _Random(mean[first] * mean[second] + excess, lean)
+    return _distance(spins, truth[first, second], clusters, features, random)
 
 
 def site_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters) -> SquaredDistance:

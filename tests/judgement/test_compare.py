@@ -12,6 +12,7 @@ from anneal_ref.base.errors import InputError
 from anneal_ref.judgement.compare import compare
 from anneal_ref.judgement.comparison import Comparison
 from anneal_ref.judgement.equivalence import Acceptance
+from anneal_ref.judgement.fidelity import Fidelity, Refusal
 from anneal_ref.judgement.pooling import disorder_error, pool
 from anneal_ref.observe.manifest import Manifest
 from anneal_ref.observe.samples import Samples
@@ -59,6 +60,9 @@ def test_a_perfect_processor(plain: Reference) -> None:
         score = result.scores[name]
         assert score.floor is not None
         assert abs(score.value - float(score.floor)) < 5 * float(score.floor.stat)
+    assert isinstance(result.fidelity, Fidelity)
+    assert abs(result.fidelity.plain - float(result.fidelity.plain_floor)) < 5 * float(result.fidelity.plain_floor.stat)
+    assert str(result).count("plain, shot noise included") == 2
     assert result.correlation_error.floor is not None
     assert 0 < float(result.correlation_error.floor) < result.floor.raw_quantile
 
@@ -164,6 +168,8 @@ def test_without_a_table_of_probabilities(plain: Reference) -> None:
     full, less = compare(plain, samples), compare(bare, samples)
     assert list(less.scores) == NAMES[:4]
     assert [note for note in less.notes if note.startswith("no ")] != []
+    assert isinstance(less.fidelity, Refusal)
+    assert less.fidelity.short == "no table"
     assert less.correlation_error.value == full.correlation_error.value
     assert float(less.correlation_error.floor or 0) == pytest.approx(float(full.correlation_error.floor or 0), rel=0.25)
     asked = compare(bare, samples, likelihood=True).scores["log_likelihood"]
@@ -175,7 +181,10 @@ def test_without_a_table_of_probabilities(plain: Reference) -> None:
 def test_too_few_shots_for_a_fidelity_say_so(plain: Reference) -> None:
     result = compare(plain, plain.sample(20, seed=11))
     assert "fidelity" not in result.scores
-    assert any("do not support a fidelity" in note for note in result.notes)
+    assert isinstance(result.fidelity, Refusal)
+    assert result.fidelity.short == "too few shots"
+    assert "do not support a fidelity" in result.fidelity.reason
+    assert result.fidelity.reason in str(result)
 
 
 def test_samples_that_are_too_good_are_noticed(plain: Reference) -> None:
