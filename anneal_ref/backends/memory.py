@@ -60,7 +60,7 @@ def readable_bytes(count: float) -> str:
         if count < 1024 or unit == "TiB":
             break
         count /= 1024
-    return f"{count:.0f} {unit}" if unit == "bytes" else f"{count:.1f} {unit}"
+    return f"{count:.0f} {unit}" if unit == "bytes" else f"{count:.1f} {unit}" if count < 1e4 else f"{count:.1e} {unit}"
 
 
 def _limits() -> Iterator[int]:

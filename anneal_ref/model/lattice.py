@@ -224,7 +224,10 @@ def _edges(given: ArrayLike, n: int) -> NDArray[np.intp]:
     edges = whole("edges", np.empty((0, 2)) if empty else given, (None, 2))
     outside = np.flatnonzero(((edges < 0) | (edges >= n)).any(axis=1))
     if outside.size:
-        raise InputError(f"edges must join sites 0 ... {n - 1}; edge {outside[0]} is {_pair(edges[outside[0]])}")
+        raise InputError(
+            f"edges must join sites 0 ... {n - 1}; edge {outside[0]} is {_pair(edges[outside[0]])}; "
+            "for a device's own labels use from_edges(n_sites, edges, labels=[...])"
+        )
     selfs = np.flatnonzero(edges[:, 0] == edges[:, 1])
     if selfs.size:
         raise InputError(f"an edge must join two different sites; edge {selfs[0]} is {_pair(edges[selfs[0]])}")

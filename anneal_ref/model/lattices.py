@@ -28,7 +28,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from anneal_ref.base.checks import choice, finite, integer
 from anneal_ref.base.errors import InputError
-from anneal_ref.model.lattice import Lattice
+from anneal_ref.model.lattice import Lattice, whole
 from anneal_ref.model.random_graphs import regular_edges
 
 __all__ = [
@@ -161,15 +161,48 @@ def random_regular(n: int, degree: int, seed: int) -> Lattice:
     )
 
 
-def from_edges(n_sites: int, edges: ArrayLike, coordinates: ArrayLike | None = None, name: str = "graph") -> Lattice:
+def from_edges(
+    n_sites: int,
+    edges: ArrayLike,
+    coordinates: ArrayLike | None = None,
+    name: str = "graph",
+    labels: ArrayLike | None = None,
+) -> Lattice:
     """Return any graph; see `Lattice`.
+
+    Parameters
+    ----------
+    n_sites : int
+    edges : array_like of int, shape (m, 2)
+        Pairs of sites 0 ... n_sites - 1; with `labels`, pairs of labels, as the list of a device's couplers gives them.
+    coordinates : array_like, shape (n_sites, 1 ... 3), optional
+    name : str
+    labels : array_like of int, shape (n_sites,), optional
+        The device's own label of every site.
+
+    Raises
+    ------
+    InputError
+        Edges of sites or labels that are not there, self edges, duplicate edges, labels that repeat.
 
     Examples
     --------
     >>> from_edges(3, [(0, 1), (2, 1)], name="fork")
     <Lattice fork: 3 sites, 2 edges>
+    >>> from_edges(3, [(101, 104), (104, 230)], labels=[101, 104, 230]).edges.tolist()
+    [[0, 1], [1, 2]]
     """
-    return Lattice(n_sites, edges, coordinates, name)
+    if labels is None:
+        return Lattice(n_sites, edges, coordinates, name)
+    known = whole("labels", labels, (integer("n_sites", n_sites, low=1),)).tolist()
+    site = {label: place for place, label in enumerate(known)}
+    pairs = whole("edges", np.empty((0, 2)) if np.size(edges) == 0 else edges, (None, 2))
+    for k, pair in enumerate(pairs.tolist()):
+        for label in pair:
+            if label not in site:
+                raise InputError(f"edges must join sites by their labels; edge {k} names {label}, which is no label")
+    joined = np.array([[site[a], site[b]] for a, b in pairs.tolist()], dtype=np.intp).reshape(-1, 2)
+    return Lattice(n_sites, joined, coordinates, name, labels=labels)
 
 
 def from_networkx(graph: Any, name: str | None = None) -> Lattice:

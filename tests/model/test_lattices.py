@@ -331,3 +331,13 @@ def test_edges_of_a_lattice_belong_to_it():
     lattice = lattices.from_edges(3, mine)
     mine[0] = 2
     assert lattice.edges.tolist() == [[0, 1], [1, 2]]
+
+
+def test_edges_between_device_labels():
+    lattice = lattices.from_edges(4, [(230, 101), (104, 230)], labels=[101, 104, 230, 7])
+    assert lattice.edges.tolist() == [[2, 0], [1, 2]]
+    assert lattice.labels.tolist() == [101, 104, 230, 7]
+    with pytest.raises(InputError, match="edge 0 names 102, which is no label"):
+        lattices.from_edges(3, [(101, 102)], labels=[101, 104, 230])
+    with pytest.raises(InputError, match=r"edge 0 is \(101, 104\); for a device's own labels use from_edges"):
+        lattices.from_edges(3, [(101, 104)])

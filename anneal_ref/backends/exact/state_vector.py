@@ -15,7 +15,7 @@ from anneal_ref.backends.exact.register import Register
 from anneal_ref.backends.exact.splitting import SPLITTINGS, Floats, Splitting, merge_steps, step_angles
 from anneal_ref.backends.exact.state import ExactState
 from anneal_ref.backends.exact.steps import choose_splitting, halved, phase_mesh, step_density, time_grid
-from anneal_ref.backends.memory import require_memory
+from anneal_ref.backends.memory import available_bytes, require_memory
 from anneal_ref.base.checks import choice, integer, number
 from anneal_ref.base.errors import InputError, NotSupported
 from anneal_ref.base.run import Bar, Run
@@ -29,6 +29,8 @@ _ROUNDING = {"double": 3e-16, "single": 1.5e-7}
 # 256-bit vectors
 _LAYER_SECONDS = {"double": 2.0e-9, "single": 1.1e-9}
 _TABLE_SECONDS = 3e-6
+# times, clocks, angles and merged angles
+_LAYER_BYTES = 64
 # interpreter, libraries and compiled kernels, beside the arrays
 _OVERHEAD = 200 << 20
 
@@ -221,6 +223,12 @@ class StateVector:
         density = step_density(splitting, self.tolerance)
         if self.steps is not None:
             density = self.steps / max(mesh.total, 1e-12)
+        steps = mesh.total * density * 2.0**self.halvings
+        require_memory(
+            int(_LAYER_BYTES * steps * splitting.stages),
+            f"an anneal of duration {anneal.duration:g} in about {steps:.1g} time steps",
+            ("a shorter duration", "a looser tolerance"),
+        )
         return splitting, halved(time_grid(anneal, mesh, density, marks), self.halvings)
 
     def _require(self, anneal: Anneal, splitting: Splitting, grid: Floats) -> int:
@@ -234,15 +242,15 @@ class StateVector:
                 ("StateVector(precision='double')", "a looser tolerance", "a shorter anneal"),
             )
         n, symmetric = anneal.n_sites, not anneal.instance.has_fields
-        # clocks, angles and merged angles of every step
-        needed = Register.bytes_needed(n, symmetric, self.precision) + 64 * layers
+        needed = Register.bytes_needed(n, symmetric, self.precision) + _LAYER_BYTES * layers
         if anneal.start == "ground":
             needed += ground_start_bytes(n, symmetric)
-        require_memory(needed, f"the state vector of {n} spins", self._alternatives())
+        require_memory(needed, f"the state vector of {n} spins", self._alternatives(n, symmetric))
         return needed
 
-    def _alternatives(self) -> tuple[str, ...]:
-        single = ("StateVector(precision='single', tolerance=1e-4)",) if self.precision == "double" else ()
+    def _alternatives(self, n: int, symmetric: bool) -> tuple[str, ...]:
+        fits = self.precision == "double" and Register.bytes_needed(n, symmetric, "single") <= available_bytes()
+        single = ("StateVector(precision='single', tolerance=1e-4)",) if fits else ()
         return (*single, "a machine with more memory", "fewer spins")
 
 

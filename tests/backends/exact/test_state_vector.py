@@ -370,3 +370,13 @@ def test_an_undecided_ground_start_is_refused():
 def test_bad_input_is_named(call, words):
     with pytest.raises(InputError, match=words):
         call(ar.StateVector(tolerance=1e-3))
+
+
+@pytest.mark.parametrize("duration", [1e9, 1e300])
+def test_endless_anneals_are_refused_before_their_steps_are_listed(duration):
+    instance = ar.draw_instance(ar.lattices.chain(4), ar.disorder.plus_minus(), seed=1)
+    schedule = ar.Schedule.linear(transverse=(20.0, 0.0), problem=(0.0, 10.0))
+    endless = ar.Anneal(instance, schedule, duration)
+    with pytest.raises(TooLarge, match="time steps needs .* a shorter duration") as caught:
+        ar.StateVector().plan(endless)
+    assert caught.value.needed_bytes > caught.value.available_bytes
