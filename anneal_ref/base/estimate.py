@@ -120,7 +120,8 @@ class Score:
     floor : Estimate, optional
         What a perfect processor attains with the same number of shots.
     disorder : float, optional
-        Standard error from the finite number of instances, kept apart from the shot error.
+        Standard error from the finite number of instances, kept apart from the shot error; 0 where the scatter between
+        instances is no more than shots make.
     unit : str
         Unit of the value; empty where it is 1.
     """
@@ -144,7 +145,7 @@ class Score:
         unit = f" {self.unit}" if self.unit else ""
         text = f"{self.name}: {self.value:.4g}{unit} ({self.level:.0%} interval {self.low:.4g} to {self.high:.4g}"
         if self.disorder is not None:
-            text += f", disorder ± {self.disorder:.2g}"
+            text += f", disorder ± {self.disorder:.2g}" if self.disorder else ", disorder error below the shot noise"
         if self.floor is not None:
             text += f", perfect processor {float(self.floor):.4g}"
         return text + ")"

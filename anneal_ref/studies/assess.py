@@ -47,6 +47,8 @@ class Judged:
         Its decision holds for this case alone; the verdict rests on the pooled findings.
     reused : bool
         Whether the reference was in the archive before.
+    sha256 : str
+        Hash of the bytes of the sample files; see `Case`.
     """
 
     case: Case
@@ -54,6 +56,7 @@ class Judged:
     samples: Samples
     comparison: Comparison
     reused: bool
+    sha256: str
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -208,15 +211,15 @@ def assess(
     ArchiveError
         The archive cannot be written.
     """
-    samples = [case.samples() for case in study.cases]
+    samples = [(case.samples(), case.sha256) for case in study.cases]
     plan(study, archive)
     references = solve(study, archive, executor, run)
     acceptance = study.acceptance
     judged = []
     with run.track(len(samples), "comparisons") as bar:
-        for case, spins, (truth, reused) in zip(study.cases, samples, references, strict=True):
+        for case, (spins, sha256), (truth, reused) in zip(study.cases, samples, references, strict=True):
             result = compare(truth, spins, acceptance, acceptance.level, study.table.truth.seed)
-            judged.append(Judged(case, truth, spins, result, reused))
+            judged.append(Judged(case, truth, spins, result, reused, sha256))
             bar.update(note=case.label)
     durations = sorted({case.anneal.duration for case in study.cases})
     groups = {at: [one for one in judged if one.case.anneal.duration == at] for at in durations}

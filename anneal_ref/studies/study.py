@@ -105,6 +105,14 @@ class Case:
         """Instance and duration, for tables."""
         return f"{self.name}, {self.anneal.duration:g} {time_unit(self.anneal.schedule)}".strip()
 
+    @property
+    def sha256(self) -> str:
+        """Hash of the bytes of all files, one after the other in the order of `files`."""
+        total = hashlib.sha256()
+        for file in self.files:
+            total.update(file.read_bytes())
+        return total.hexdigest()
+
     def samples(self) -> Samples:
         """Read the files and check that they belong to this instance and duration.
 

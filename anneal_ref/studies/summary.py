@@ -8,6 +8,7 @@ import numpy as np
 
 from anneal_ref.base.estimate import Score
 from anneal_ref.judgement.equivalence import Finding
+from anneal_ref.judgement.fidelity import Refusal
 from anneal_ref.studies.study import time_unit
 from anneal_ref.studies.text import aligned
 
@@ -15,11 +16,11 @@ if TYPE_CHECKING:
     from anneal_ref.studies.assess import Judged, Verdict
 
 SCORE_HEADINGS = (
-    "instance", "duration", "this case", "correlation error", "perfect <", "fidelity", "perfect", "log-lik.", "perfect",
-    "sigma", "N", "shots",
+    "instance", "duration", "this case", "correlation error", "perfect <", "fidelity", "plain/perfect", "log-lik.",
+    "perfect", "sigma", "N", "shots",
 )  # fmt: skip
 ENERGY_HEADINGS = ("instance", "duration", "residual energy", "truth", "sigma", "q2", "truth", "sigma")
-POOLED_HEADINGS = ("pooled", "verdict", "correlation error", "perfect <", "disorder ±", "instances", "shots")
+POOLED_HEADINGS = ("pooled", "verdict", "correlation error", "perfect <", "disorder", "instances", "shots")
 PAIR_HEADINGS = ("case", "pair", "truth", "processor", "sigma", "adjusted p")
 WORDS = {"accept": "ACCEPTED", "reject": "REJECTED", "inconclusive": "INCONCLUSIVE"}
 
@@ -42,7 +43,12 @@ def summary(verdict: Verdict) -> str:
         f"intervals at level {level:.0%}; perfect <: what a perfect processor with the same shots stays below in 95 "
         "of 100 runs;"
     )
+    lines.append(
+        "the verdict rests on one-sided bounds at this level, which lie inside the two-sided intervals of the table"
+    )
     lines.append("sigma: (processor - truth) in standard errors; residual energy per spin in units of J")
+    lines.append("plain/perfect: fidelity with the noise of shots left in, of the processor and of a perfect one")
+    lines.append("disorder: what the finite number of instances adds if they stand for their whole ensemble")
     lines += ["log-lik.: log-likelihood per shot under the truth, in nats, beside what a perfect processor scores", ""]
     lines += [f"{WORDS[verdict.outcome]}. {sentences(verdict)[0]}", *sentences(verdict)[1:]]
     return "\n".join(lines)
@@ -51,13 +57,13 @@ def summary(verdict: Verdict) -> str:
 def score_row(one: Judged) -> tuple[str, ...]:
     """Return the scores of one case, cells in the order of `SCORE_HEADINGS`."""
     result = one.comparison
-    error, fidelity, likelihood = (result.scores.get(k) for k in ("correlation_error", "fidelity", "log_likelihood"))
-    cells = [one.case.name, f"{result.duration:g}", result.verdict or "-"]
-    cells += [interval(error), floor_text(error)] if error else ["-", "-"]
-    if fidelity:
-        cells += [f"{fidelity.value:.3f}", floor_text(fidelity)]
+    error, likelihood = result.correlation_error, result.scores.get("log_likelihood")
+    cells = [one.case.name, f"{result.duration:g}", result.verdict or "-", interval(error), floor_text(error)]
+    if isinstance(result.fidelity, Refusal):
+        cells += [result.fidelity.short, "-"]
     else:
-        cells += ["too few shots" if "shots" in refused(one) else "-", "-"]
+        cells.append(interval(result.fidelity.score))
+        cells.append(f"{result.fidelity.plain:.3f}/{float(result.fidelity.plain_floor):.3f}")
     if likelihood:
         cells += [f"{likelihood.value:.3f}", floor_text(likelihood), f"{result.sigma['log_likelihood']:+.1f}"]
     else:
@@ -80,27 +86,18 @@ def pooled_rows(verdict: Verdict) -> list[tuple[str, ...]]:
     """Return a row for each duration, cells in the order of `POOLED_HEADINGS`."""
     rows = []
     for duration, pooled in verdict.pooled:
-        disorder = "-" if pooled.score.disorder is None else f"{pooled.score.disorder:.2g}"
         cells = [f"all at {_at(verdict, duration)}", verdict.outcome_at(duration), interval(pooled.score)]
-        cells += [floor_text(pooled.score), disorder, str(pooled.n_instances), str(pooled.n_shots)]
+        cells += [floor_text(pooled.score), disorder_text(pooled.score), str(pooled.n_instances), str(pooled.n_shots)]
         rows.append(tuple(cells))
     return rows
 
 
-def refused(one: Judged) -> str:
-    """Return why there is no fidelity, or nothing."""
-    if "fidelity" in one.comparison.scores:
-        return ""
-    return next((note for note in one.comparison.notes if "fidelity" in note), "")
-
-
 def notes(verdict: Verdict) -> list[str]:
-    """Return what the reader should know about the cases, each note once with its cases; refusals are apart."""
+    """Return what the reader should know about the cases, each note once with its cases."""
     cases: dict[str, list[str]] = {}
     for one in verdict.judged:
         for note in one.comparison.notes:
-            if note != refused(one):
-                cases.setdefault(note, []).append(one.case.label)
+            cases.setdefault(note, []).append(one.case.label)
     lines = []
     for note, labels in cases.items():
         others = f" and {len(labels) - 6} more" if len(labels) > 6 else ""
@@ -124,19 +121,23 @@ def worst_pairs(verdict: Verdict, count: int = 6, each: int = 2) -> list[tuple[s
 
 
 def suspects(verdict: Verdict, most: int = 8) -> list[str]:
-    """Return a sentence for each case with significant pairs: how many, and which spin they have in common."""
+    """Return a sentence for each case with significant pairs: how many, and the spin that most of them share."""
     found: list[tuple[float, str]] = []
     for one in verdict.judged:
         pairs, labels = one.comparison.pairs, one.reference.anneal.instance.lattice.labels
         count = pairs.significant(verdict.decision.level)
         if count:
             sigma, gain = pairs.site_sigma(), pairs.site_gain()
-            worst = int(np.argmax(sigma))
-            text = (
-                f"{one.case.label}: {count} of {len(pairs)} pairs depart; most involved is spin {labels[worst]} "
-                f"(rms {sigma[worst]:.1f} sigma, its correlations {gain[worst]:.3f} times the true ones)"
-            )
-            found.append((float(sigma[worst]), text))
+            text = f"{one.case.label}: {count} of {len(pairs)} pairs depart"
+            # the table is sorted, so that the significant pairs come first
+            shares = np.bincount(np.r_[pairs.first[:count], pairs.second[:count]], minlength=pairs.n_sites)
+            worst = int(np.lexsort((-sigma, -shares))[0])
+            if shares[worst] > 1:
+                text += (
+                    f"; {shares[worst]} of them share spin {labels[worst]} "
+                    f"(rms {sigma[worst]:.1f} sigma, its correlations {gain[worst]:.3f} times the true ones)"
+                )
+            found.append((float(sigma.max()), text))
     least = sorted((sigma for sigma, _ in found), reverse=True)[: most + 1]
     shown = [text for sigma, text in found if len(least) <= most or sigma > least[-1]]
     return shown + (
@@ -206,7 +207,7 @@ def _said(finding: Finding) -> str:
     low, high, limit = (
         f"{100 * x:.3g} %" if relative else f"{x:.3g}" for x in (finding.low, finding.high, finding.limit)
     )
-    what = "pair correlations are off" if relative else f"the {finding.name.replace('_', ' ')} is off"
+    what = "pair correlations are off" if relative else f"the mean {finding.name.replace('_', ' ')} is off"
     if finding.outcome == "accept":
         return f"{what} by at most {high} (limit {limit})"
     if finding.outcome == "reject":
@@ -217,6 +218,13 @@ def _said(finding: Finding) -> str:
 def interval(score: Score) -> str:
     """Return value and interval."""
     return f"{score.value:.3f} ({score.low:.3f} to {score.high:.3f})"
+
+
+def disorder_text(score: Score) -> str:
+    """Return the disorder error, or that the scatter between instances is no more than shots make."""
+    if score.disorder is None:
+        return "-"
+    return f"± {score.disorder:.2g}" if score.disorder > 0 else "below shot noise"
 
 
 def floor_text(score: Score) -> str:

@@ -19,6 +19,7 @@ from numpy.typing import ArrayLike, NDArray
 from anneal_ref.base.checks import finite
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate, Score
+from anneal_ref.judgement.equivalence import outcome_of
 from anneal_ref.views.lattice_plot import deviations
 from anneal_ref.views.style import INK, LIMIT, PROCESSOR, QUIET, SHADE, dressed, figure_of, new_axes
 
@@ -132,8 +133,9 @@ def against_duration(
 
 
 def correlation_errors(
-    labels: Sequence[str], scores: Sequence[Score], limit: float | None = None, ax: Axes | None = None
-) -> Axes:
+    labels: Sequence[str], scores: Sequence[Score], limit: float | None = None, ax: Axes | None = None,
+    outcomes: Sequence[str] | None = None,
+) -> Axes:  # fmt: skip
     """Draw correlation errors with their intervals, a row each, beside the floor of a perfect processor and the limit.
 
     Parameters
@@ -143,6 +145,9 @@ def correlation_errors(
     limit : float, optional
         The acceptance limit.
     ax : Axes, optional
+    outcomes : sequence of r str, optional
+        "accept", "reject" or "inconclusive" for each row, which sets its colour; by default where the
+        interval lies with regard to the limit.
 
     Returns
     -------
@@ -150,8 +155,11 @@ def correlation_errors(
     """
     ax = dressed(ax or new_axes(6.2, 1.2 + 0.32 * len(scores)))
     rows = np.arange(len(scores))[::-1]
-    for row, score in zip(rows, scores, strict=True):
-        colour = PROCESSOR if limit is None or score.high <= limit else LIMIT if score.low > limit else QUIET
+    paints = {"accept": PROCESSOR, "reject": LIMIT, "inconclusive": QUIET}
+    if outcomes is None:
+        outcomes = ["accept" if limit is None else outcome_of(score.low, score.high, limit) for score in scores]
+    for row, score, outcome in zip(rows, scores, outcomes, strict=True):
+        colour = paints[outcome]
         ax.plot([score.low, score.high], [row, row], color=colour, linewidth=2.4, solid_capstyle="butt", zorder=2)
         ax.plot(score.value, row, "o", color=colour, markersize=6, markeredgecolor="white", zorder=3)
         if score.floor is not None:

@@ -7,6 +7,7 @@ from collections.abc import Iterator
 import numpy as np
 from numpy.typing import NDArray
 
+from anneal_ref.judgement.fidelity import Refusal
 from anneal_ref.studies.assess import Judged, Verdict
 from anneal_ref.studies.study import time_unit
 from anneal_ref.studies.summary import (
@@ -17,7 +18,6 @@ from anneal_ref.studies.summary import (
     energy_row,
     notes,
     pooled_rows,
-    refused,
     score_row,
     sentences,
     suspects,
@@ -63,7 +63,11 @@ def _errors(verdict: Verdict) -> Section:
     unit = time_unit(verdict.study.schedule)
     labels = [one.case.label for one in shown] + [f"all at {at:g} {unit}".strip() for at, _ in verdict.pooled]
     scores = [one.comparison.correlation_error for one in shown] + [pooled.score for _, pooled in verdict.pooled]
-    axes = plots.correlation_errors(labels, scores, verdict.study.acceptance.correlation_error)
+    decisions = [one.comparison.decision for one in shown]
+    findings = [finding for decision in decisions if decision is not None for finding in decision.findings]
+    findings += [finding for _, finding in verdict.findings]
+    outcomes = [finding.outcome for finding in findings if finding.name == "correlation_error"]
+    axes = plots.correlation_errors(labels, scores, verdict.study.acceptance.correlation_error, outcomes=outcomes)
     less = "" if len(shown) == len(verdict.judged) else f" The {len(shown)} cases with the largest errors are drawn."
     return Section(
         "How far the processor departs from quantum dynamics",
@@ -91,13 +95,14 @@ def _errors(verdict: Verdict) -> Section:
 
 def _spelled(heads: tuple[str, ...]) -> tuple[str, ...]:
     """Write out the headings that the text tables abbreviate."""
-    words = {"perfect <": "perfect stays below", "log-lik.": "log-likelihood"}
+    words = {"perfect <": "perfect stays below", "log-lik.": "log-likelihood", "plain/perfect": "plain / perfect"}
     return tuple(words.get(head, head) for head in heads)
 
 
 def _refusals(verdict: Verdict, most: int = 6) -> tuple[str, ...]:
     """Say why cases have no fidelity, the first few of many."""
-    all_of_them = [f"{one.case.label}: {refused(one)}" for one in verdict.judged if refused(one)]
+    found = [(one.case.label, one.comparison.fidelity) for one in verdict.judged]
+    all_of_them = [f"{label}: {refusal.reason}" for label, refusal in found if isinstance(refusal, Refusal)]
     more = [f"and {len(all_of_them) - most} more cases without a fidelity"] if len(all_of_them) > most else []
     return (*all_of_them[:most], *more)
 
@@ -218,12 +223,17 @@ def _method(verdict: Verdict) -> Section:
         "as the independent units.",
         f"Verdict: accept if the upper bound at level {level:.0%} of every pooled figure lies within its limit, "
         "reject if the lower bound of any lies beyond it (the error probability divided by the number of figures), "
-        "else inconclusive.",
-        "Fidelity, (Σ √(p q))², is given only where there are about ten shots for each configuration that matters, "
-        "beside what a perfect processor attains.",
+        "else inconclusive. These bounds are one-sided and lie inside the two-sided intervals of the tables. Residual "
+        "energy and order parameter are held against their limits as means over the instances, where departures of "
+        "opposite sign cancel. The error probability is that of one look: whoever adds shots until the verdict "
+        "changes exceeds it.",
+        "Fidelity, (Σ √(p q))², is given only where there are about ten shots for each configuration that matters. The "
+        "bias of the finite number of shots is taken out; the plain value, which it lowers, stands beside the plain "
+        "value of a perfect processor.",
         "The statement holds for these instances, this schedule and these durations, for the time at which the "
         "samples were taken. "
-        '"Disorder" is the error that remains if the instances are meant to stand for their whole ensemble.',
+        '"Disorder" is the error that the finite number of instances adds if they are meant to stand for their whole '
+        "ensemble; it is not known where the instances scatter no more than shots make them.",
         "Agreement of pair correlations does not exclude departures in higher moments; the log-likelihood and the "
         "fidelity look there.",
         "What the processor was told is taken on trust: schedule, gauge and site map come from the laboratory's own "
@@ -239,10 +249,12 @@ def _method(verdict: Verdict) -> Section:
 
 
 def identities(verdict: Verdict) -> Iterator[tuple[str, str]]:
-    """Give name and SHA-256 of everything that the verdict rests on."""
+    """Give name and SHA-256 of everything that the verdict rests on; a case has one for all of its sample files."""
     yield "study file", verdict.study.sha256
     yield "schedule", verdict.study.schedule.identity
     for name, one in {one.case.name: one for one in verdict.judged}.items():
         yield f"instance {name}", one.reference.anneal.instance.identity
+    for one in verdict.judged:
+        yield f"samples {one.case.label}", one.sha256
     for one in verdict.judged:
         yield f"reference {one.case.label}", one.reference.identity

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from concurrent.futures import ThreadPoolExecutor
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -10,7 +11,9 @@ import pytest
 
 from anneal_ref.backends.exact.state_vector import StateVector
 from anneal_ref.base.errors import InputError
+from anneal_ref.base.estimate import Estimate, Score
 from anneal_ref.base.run import Run
+from anneal_ref.judgement.fidelity import Fidelity, Refusal
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.model.instances import Instance
 from anneal_ref.observe.samples import Samples
@@ -18,7 +21,7 @@ from anneal_ref.studies import assess as assess_module
 from anneal_ref.studies.archive import Archive
 from anneal_ref.studies.assess import Verdict, assess, plan, solve
 from anneal_ref.studies.study import Study
-from anneal_ref.studies.summary import headline, sentences
+from anneal_ref.studies.summary import SCORE_HEADINGS, disorder_text, headline, score_row, sentences, suspects
 
 STUDY = """
 format = 1
@@ -191,6 +194,40 @@ def test_the_tables_hold_a_row_for_each_case_and_each_duration(tmp_path: Path, t
     row = next(line for line in lines if line.startswith("ring ") and " 0.8 " in line)
     score = verdict.judged[1].comparison.correlation_error
     assert f"{score.value:.3f} ({score.low:.3f} to {score.high:.3f})" in row
+
+
+def test_a_fidelity_lies_in_its_interval_and_stands_beside_the_plain_ones(tmp_path: Path, truth: Archive) -> None:
+    verdict = assess(write(tmp_path), truth, run=QUIET)
+    for one in verdict.judged:
+        found = one.comparison.fidelity
+        assert isinstance(found, Fidelity)
+        assert found.score.low <= found.score.value <= found.score.high
+        cells = dict(zip(SCORE_HEADINGS, score_row(one), strict=True))
+        assert cells["fidelity"] == f"{found.score.value:.3f} ({found.score.low:.3f} to {found.score.high:.3f})"
+        assert cells["plain/perfect"] == f"{found.plain:.3f}/{float(found.plain_floor):.3f}"
+    few = assess(write(tmp_path, shots=60), truth, run=QUIET)
+    refused = [one for one in few.judged if isinstance(one.comparison.fidelity, Refusal)]
+    assert refused
+    assert all("too few shots" in score_row(one) for one in refused)
+
+
+def test_a_disorder_error_that_shots_hide_is_said_in_words() -> None:
+    score = Score("correlation_error", Estimate(0.1, 0.01, 0.0), 0.08, 0.12, disorder=0.0)
+    assert disorder_text(score) == "below shot noise"
+    assert "below the shot noise" in str(score)
+    assert disorder_text(replace(score, disorder=0.02)) == "± 0.02"
+    assert disorder_text(replace(score, disorder=None)) == "-"
+
+
+def test_the_spin_that_is_named_belongs_to_pairs_that_depart(tmp_path: Path, truth: Archive) -> None:
+    study = write(tmp_path)
+    for case in study.cases:
+        spins = np.load(case.files[0])
+        spins[np.random.default_rng(1).random(len(spins)) < 0.2, 2] *= -1
+        np.save(case.files[0], spins)
+    named = suspects(assess(study, truth, run=QUIET))
+    assert len(named) == len(study.cases)
+    assert all("of them share spin 2 " in line for line in named)
 
 
 def test_gauges_are_undone_before_anything_is_compared(tmp_path: Path, truth: Archive) -> None:

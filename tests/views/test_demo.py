@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import base64
+import hashlib
 import html.parser
 from dataclasses import replace
 from pathlib import Path
@@ -140,6 +141,8 @@ def test_the_page_loads_nothing_and_shows_everything(verdict: Verdict, text: str
         assert base64.b64decode(source.partition(",")[2]).lstrip().startswith(b"<?xml")
     for one in verdict.judged:
         assert one.reference.identity in text
+        files = b"".join(file.read_bytes() for file in sorted(one.case.files))
+        assert hashlib.sha256(files).hexdigest() in text
         assert one.case.label in text
     assert verdict.study.sha256 in text
     body = text[text.index("<main>") :]

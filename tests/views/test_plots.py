@@ -143,6 +143,9 @@ def test_correlation_errors_show_interval_floor_and_limit() -> None:
     assert [line.get_color() for line in spans] == [PROCESSOR, QUIET, LIMIT, PROCESSOR]
     assert [label.get_text() for label in ax.get_yticklabels()] == ["a", "b", "c", "d"]
     assert ax.get_xlim()[0] < -0.02
+    # a verdict rests on one-sided bounds, and may be firmer than the two-sided interval looks
+    firm = plots.correlation_errors(["b"], scores[1:2], 0.1, outcomes=["accept"])
+    assert [line.get_color() for line in firm.lines if line.get_linewidth() == 2.4] == [PROCESSOR]
 
 
 def test_the_colours_differ_in_lightness_for_those_who_see_no_hue() -> None:
