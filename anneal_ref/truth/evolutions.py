@@ -80,6 +80,7 @@ def decay_of(anneal: Anneal, runs: Sequence[Evolution], reordered: Evolution) ->
         growth=float(ledger.get("layers", 2 ** (len(runs) - 1))) / float(coarsest.get("layers", 1)),
         drift=float(ledger.get("norm_drift", 0.0)),
         order=_order(ledger),
+        least=_least_rounding(ledger),
     )
 
 
@@ -118,6 +119,13 @@ def fixed_by_symmetry(anneal: Anneal) -> tuple[NDArray[np.bool_], NDArray[np.boo
     part = connected_components(graph, directed=False)[1]
     free = ~np.isin(part, part[instance.fields != 0])
     return free, (part[:, None] != part[None, :]) & (free[:, None] | free[None, :])
+
+
+def _least_rounding(ledger: Mapping[str, Any]) -> float:
+    """Random walk of half a unit roundoff of the stored numbers a layer, and never below one step of a double."""
+    stored = np.float32 if ledger.get("precision") == "single" else np.float64
+    walk = float(np.finfo(stored).eps / 4 * np.sqrt(ledger.get("layers", 1)))
+    return max(walk, float(np.finfo(np.float64).eps))
 
 
 def _order(ledger: Mapping[str, Any]) -> int:

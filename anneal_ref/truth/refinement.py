@@ -16,7 +16,8 @@ geometric series, d2 r/(1 - r). That is the estimate, with three reservations:
   no more than in proportion. Differences at that level are taken out of the measured decay, and twice the level is
   added to every bar. The drift of the norm is a check and a poor measure: it does not see errors of the
   phases, and it cancels in moments that are divided by the norm. It stands in only where another order changes no bit,
-  as for a single spin.
+  as for a single spin. Where the order hardly matters (no transverse field, few spins), roundings of the stored
+  numbers are common to both orders; their random walk over the layers, half a unit roundoff each, is the least level.
 
 None of this uses the tolerance that was asked for, and an entry's bar comes from that entry's own differences.
 
@@ -87,7 +88,12 @@ class Decay:
 
 
 def measure_decay(
-    values: Sequence[NDArray[np.float64]], reordered: NDArray[np.float64], growth: float, drift: float, order: float
+    values: Sequence[NDArray[np.float64]],
+    reordered: NDArray[np.float64],
+    growth: float,
+    drift: float,
+    order: float,
+    least: float = _ULP,
 ) -> Decay:
     """Return the decay of the changes over all entries.
 
@@ -103,6 +109,8 @@ def measure_decay(
         Norm of the finest state minus one.
     order : float
         Order of the scheme, which the decay is never taken to exceed.
+    least : float
+        Rounding error of the finest run that the precision of its stored numbers makes certain.
 
     Examples
     --------
@@ -111,9 +119,10 @@ def measure_decay(
     >>> round(1 / decay.ratio), decay.settled
     (64, True)
     """
-    rounding = max(growth * _rms(reordered) or abs(drift), _ULP)
+    rounding = max(growth * _rms(reordered) or abs(drift), least)
     first, second = _rms(values[1] - values[0]), _rms(values[2] - values[1])
-    measured = max(second - rounding, 0.0) / first if first > 0 else (0.0 if second <= rounding else np.inf)
+    beyond = max(second - SAFETY * rounding, 0.0)
+    measured = beyond / first if first > 0 else (np.inf if beyond > 0 else 0.0)
     return Decay(max(measured, 2.0**-order, _SECOND_ORDER * first), rounding, growth)
 
 

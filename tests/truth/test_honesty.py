@@ -233,3 +233,21 @@ def test_bars_are_honest_down_to_rounding():
             inside.extend(np.abs(found.z.value - z) <= found.z.num)
             inside.extend((np.abs(found.zz.value - zz) <= found.zz.num)[np.triu_indices(4, 1)])
     assert np.mean(inside) >= 0.95
+
+
+@pytest.mark.parametrize(("precision", "tolerance"), [("double", 1e-6), ("single", 1e-2)])
+def test_rounding_common_to_every_order_of_the_sites_is_in_the_bars(precision, tolerance):
+    """Without a transverse field |+...+> only collects phases, and hardly a bit depends on the order of the sites."""
+    random, inside, backend = np.random.default_rng(5), [], ar.StateVector(tolerance=tolerance, precision=precision)
+    for n, duration in itertools.product((2, 3, 4), (0.02, 0.3, 1.1, 4.0)):
+        lattice = ar.lattices.complete(n)
+        instance = ar.Instance(lattice, random.normal(size=lattice.n_edges), random.normal(size=n))
+        with pytest.warns(ar.AnnealRefWarning):
+            anneal = ar.Anneal(instance, ar.Schedule.linear((0.0, 0.0), (5.0, 5.0)), duration)
+        truth = reference(anneal, backend=backend, samples=1)
+        assert truth.outcome == "converged"
+        # <X_i> = cos(2 h_i P t) prod_j cos(2 J_ij P t), by hand
+        angles = 2 * 5.0 * duration * (instance.coupling_matrix() + np.diag(instance.fields))
+        x = truth.moments().x
+        inside.extend(np.abs(x.value - np.cos(angles).prod(axis=1)) <= x.num)
+    assert np.mean(inside) >= 0.95

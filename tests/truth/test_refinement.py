@@ -64,6 +64,15 @@ def test_the_norm_stands_in_only_where_reordering_shows_nothing():
     assert measure_decay(values, np.full(400, 1e-9), growth=4, drift=-1e-5, order=6).rounding == pytest.approx(4e-9)
 
 
+def test_no_bar_is_finer_than_the_stored_numbers():
+    _, values, _ = runs(6, size=1e-9, noise=1e-7)
+    blind = measure_decay(values, np.full(400, 1e-17), growth=4, drift=0.0, order=6)
+    warned = measure_decay(values, np.full(400, 1e-17), growth=4, drift=0.0, order=6, least=2e-7)
+    assert not blind.settled
+    assert warned.settled
+    assert warned.rounding == 2e-7
+
+
 def test_changes_that_do_not_shrink_are_not_settled():
     rng = np.random.default_rng(3)
     values = [rng.uniform(-1, 1, 50) * 1e-3 for _ in range(3)]
