@@ -208,7 +208,7 @@ def _common_unit(values: NDArray[np.float64]) -> tuple[float, float, int]:
     if not different.size:
         return 1.0, 0.0, 0
     total = math.fsum(values)
-    if different[-1] / different[0] < LARGEST_MULTIPLE:
+    if different[0] > different[-1] / LARGEST_MULTIPLE:
         for divisor in range(1, LARGEST_DIVISOR + 1):
             unit = float(different[0] / divisor)
             multiples = np.rint(different / unit)

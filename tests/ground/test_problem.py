@@ -158,3 +158,9 @@ def test_rounding_reads_a_configuration_back(order):
     spins = np.array([1, -1, -1, 1, 1, 1, -1, 1, -1], dtype=np.int8)
     x = (spins[problem.edges[:, 0]] != spins[problem.edges[:, 1]]).astype(float)
     assert problem.energy(rounded(problem, x)) == problem.energy(spins)
+
+
+def test_values_of_any_two_sizes_have_a_unit():
+    problem = whole_numbers(3, [(0, 1), (1, 2)], [1e300, -1e-300])
+    assert problem.couplings.tolist() == [int(1e300 / problem.unit)]
+    assert problem.slack > 0
