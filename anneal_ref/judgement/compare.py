@@ -43,6 +43,12 @@ if TYPE_CHECKING:
 SUSPICIOUS = 1e-3
 """Probability of so small an error from a perfect processor below which the samples are called too good."""
 
+CLEAR = 5.0
+"""Standard errors of the log-likelihood beyond which a departure is certain."""
+
+RARE = 10
+"""Expected shots away from one configuration below which the scatter of the shots does not tell their noise."""
+
 
 def compare(
     reference: Reference,
@@ -130,6 +136,11 @@ def compare(
     sigma = {score.name: standard_errors(score.estimate, target) for score, target in energies}
     scores["magnetisation_error"] = magnetisation_score(spins, moments.z, clusters, repetitions, level)
 
+    if connected and table is not None and len(spins) * (1 - float(table.max())) < RARE:
+        notes.append(
+            f"the truth leaves its most likely configuration in fewer than {RARE} of so many shots: connected "
+            "correlations rest on rare events, and their intervals are too narrow; take more shots"
+        )
     overlap = _fidelity(spins, table, not connected, clusters, level, seed)
     if isinstance(overlap, Fidelity):
         scores["fidelity"] = overlap.score
@@ -138,6 +149,11 @@ def compare(
         scores["log_likelihood"], sigma["log_likelihood"] = score, z
         if score.floor is not None:
             truth["log_likelihood"] = score.floor
+        if z < -CLEAR:
+            notes.append(
+                "the log-likelihood shows beyond doubt that the processor departs from the truth, whether or not the "
+                "limits allow it"
+            )
         if strays:
             notes.append(f"{strays} of {len(spins)} shots lie in states that the truth practically excludes")
     elif likelihood is None:
@@ -185,7 +201,7 @@ def _first_notes(reference: Reference, samples: Samples, clusters: Clusters) -> 
     notes = []
     if reference.outcome != "converged":
         notes.append("the truth did not converge to its tolerance; its measured error enters every interval")
-    if samples.groups is not None and samples.n_groups == 1:
+    if samples.n_groups == 1 or (samples.groups is None and samples.manifest.gauge is not None):
         notes.append("all shots belong to one gauge or batch: its own error cannot be told from the processor's")
     elif len(clusters) < FEW and not clusters.independent:
         notes.append(f"only {len(clusters)} gauges or batches: intervals are wide, and rough; use {FEW} or more")

@@ -17,9 +17,11 @@ if TYPE_CHECKING:
 
 SCORE_HEADINGS = (
     "instance", "duration", "this case", "correlation error", "perfect <", "fidelity", "plain/perfect", "log-lik.",
-    "perfect", "sigma", "N", "shots",
+    "perfect", "sigma",
 )  # fmt: skip
-ENERGY_HEADINGS = ("instance", "duration", "residual energy", "truth", "sigma", "q2", "truth", "sigma")
+ENERGY_HEADINGS = (
+    "instance", "duration", "residual energy", "truth", "sigma", "q2", "truth", "sigma", "N", "shots",
+)  # fmt: skip
 POOLED_HEADINGS = ("pooled", "verdict", "correlation error", "perfect <", "disorder", "instances", "shots")
 PAIR_HEADINGS = ("case", "pair", "truth", "processor", "sigma", "adjusted p")
 WORDS = {"accept": "ACCEPTED", "reject": "REJECTED", "inconclusive": "INCONCLUSIVE"}
@@ -68,7 +70,7 @@ def score_row(one: Judged) -> tuple[str, ...]:
         cells += [f"{likelihood.value:.3f}", floor_text(likelihood), f"{result.sigma['log_likelihood']:+.1f}"]
     else:
         cells += ["-", "-", "-"]
-    return (*cells, str(result.n_sites), str(result.n_shots))
+    return tuple(cells)
 
 
 def energy_row(one: Judged) -> tuple[str, ...]:
@@ -79,7 +81,7 @@ def energy_row(one: Judged) -> tuple[str, ...]:
         score = result.scores[name]
         cells.append(f"{score.value:.4f} ± {float(score.estimate.stat):.4f}")
         cells += [f"{float(result.truth[name]):.4f}", f"{result.sigma[name]:+.1f}"]
-    return tuple(cells)
+    return (*cells, str(result.n_sites), str(result.n_shots))
 
 
 def pooled_rows(verdict: Verdict) -> list[tuple[str, ...]]:
@@ -133,8 +135,9 @@ def suspects(verdict: Verdict, most: int = 8) -> list[str]:
             shares = np.bincount(np.r_[pairs.first[:count], pairs.second[:count]], minlength=pairs.n_sites)
             worst = int(np.lexsort((-sigma, -shares))[0])
             if shares[worst] > 1:
+                many = "all" if shares[worst] == count else str(shares[worst])
                 text += (
-                    f"; {shares[worst]} of them share spin {labels[worst]} "
+                    f"; {many} of them share spin {labels[worst]} "
                     f"(rms {sigma[worst]:.1f} sigma, its correlations {gain[worst]:.3f} times the true ones)"
                 )
             found.append((float(sigma.max()), text))

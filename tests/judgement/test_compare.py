@@ -112,7 +112,9 @@ def test_a_scale_error_and_a_wrong_coupler_are_found(plain: Reference) -> None:
     coupler = compare(plain, as_if_meant(rescaled(plain, factors).sample(8000, seed=5)))
     assert coupler.pairs.significant() > 0
     assert {int(coupler.pairs.first[0]), int(coupler.pairs.second[0])} == set(LATTICE.edges[4].tolist())
-    assert coupler.sigma["log_likelihood"] < -3
+    assert coupler.sigma["log_likelihood"] < -5
+    assert any("beyond doubt" in note for note in coupler.notes)
+    assert not any("beyond doubt" in note for note in compare(plain, plain.sample(4000, seed=1)).notes)
 
 
 def test_readout_flips_of_one_spin_are_found(plain: Reference) -> None:
@@ -145,6 +147,16 @@ def test_fields_score_connected_correlations(with_fields: Reference) -> None:
     assert result.correlation.truth_squares < 0.95 * np.sum(moments.zz.value[upper] ** 2)
 
 
+def test_connected_correlations_of_rare_events_carry_a_warning(with_fields: Reference) -> None:
+    assert not any("rare events" in note for note in compare(with_fields, with_fields.sample(300, seed=1)).notes)
+    lattice = ar.lattices.square(2, 2)
+    pinned = solved(ar.Instance(lattice, np.full(len(lattice.edges), -1.0), fields=np.full(4, -0.5)), duration=8.0)
+    p = pinned.probabilities
+    assert p is not None
+    assert 200 * (1 - p.max()) < 10
+    assert any("rare events" in note for note in compare(pinned, pinned.sample(200, seed=1)).notes)
+
+
 def test_gauge_is_undone_and_groups_count(plain: Reference) -> None:
     rng, instance = np.random.default_rng(9), plain.anneal.instance
     runs = []
@@ -160,6 +172,7 @@ def test_gauge_is_undone_and_groups_count(plain: Reference) -> None:
     assert any("only 3 gauges" in note for note in few.notes)
     one = compare(plain, Samples(plain.sample(300, seed=1).spins, groups=np.zeros(300)))
     assert any("one gauge or batch" in note for note in one.notes)
+    assert any("one gauge or batch" in note for note in compare(plain, runs[0]).notes)
 
 
 def test_without_a_table_of_probabilities(plain: Reference) -> None:
