@@ -43,6 +43,8 @@ def finite(
     InputError
         Not numbers, another shape, NaN or infinity (the first place is named).
     """
+    if isinstance(value, np.ndarray | np.generic) and np.iscomplexobj(value) and np.dtype(dtype).kind != "c":
+        raise InputError(f"{name} must be an array of real numbers; got {value.dtype}; give its real part")
     try:
         array = np.array(value, dtype=dtype)
     except (TypeError, ValueError) as error:

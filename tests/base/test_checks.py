@@ -25,6 +25,8 @@ def test_finite_copies_and_freezes():
         ([1.0], (None, 2), r"shape \(any, 2\)"),
         (["a"], None, r"h must be an array of numbers; got \['a'\]"),
         ([[1.0], [1.0, 2.0]], None, "h must be an array of numbers"),
+        ([1 + 2j], None, "h must be an array of numbers"),
+        (np.array([1 + 2j]), None, "h must be an array of real numbers; got complex128"),
     ],
 )
 def test_finite_refuses(value, shape, message):
