@@ -97,7 +97,7 @@ class Anneal:
         |+...+>, the ground state of -sum X; or the ground state of H(0). If the problem is not small against the
         transverse field at s = 0, "plus" draws an `AnnealRefWarning`.
     waveform : Waveform, optional
-        By default s = t/T.
+        By default s = t/T; a waveform that says no more than that is left out.
 
     Raises
     ------
@@ -133,7 +133,10 @@ class Anneal:
         object.__setattr__(self, "duration", positive("duration", self.duration, self.time_unit))
         object.__setattr__(self, "start", choice("start", self.start, ("plus", "ground")))
         transverse, problem = self.schedule.transverse_pieces, self.schedule.problem_pieces
-        if self.waveform is not None and not self.waveform.is_straight:
+        if self.waveform is not None and self.waveform.is_straight:
+            # points on the straight line would be corners for the integrator, under the same identity
+            object.__setattr__(self, "waveform", None)
+        if self.waveform is not None:
             u, s = self.waveform.u, self.waveform.s
             transverse, problem = transverse.along(u, s), problem.along(u, s)
         object.__setattr__(self, "_transverse", transverse)
@@ -175,7 +178,6 @@ class Anneal:
     @property
     def identity(self) -> str:
         """SHA-256 of the content: identities of instance and schedule, duration, start, waveform."""
-        bent = self.waveform is not None and not self.waveform.is_straight
         return digest(
             {
                 "anneal": 1,
@@ -183,7 +185,7 @@ class Anneal:
                 "schedule": self.schedule.identity,
                 "duration": self.duration,
                 "start": self.start,
-                "waveform": _points(self.waveform) if bent else None,
+                "waveform": _points(self.waveform),
             }
         )
 

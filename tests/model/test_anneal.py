@@ -105,6 +105,7 @@ def test_pause_adds_its_length_times_the_strength():
 def test_straight_waveform_is_no_waveform():
     straight = an_anneal(ar.Waveform([0, 0.25, 1], [0, 0.25, 1]))
     assert straight.identity == an_anneal().identity
+    assert straight.waveform is None  # its points would be corners, and so other digits under one identity
     assert straight.knots.tolist() == an_anneal().knots.tolist()
 
 
