@@ -13,7 +13,6 @@ from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
 
 from anneal_ref.backends.contract import Backend, State
-from anneal_ref.backends.exact.splitting import SPLITTINGS
 from anneal_ref.base.errors import AnnealRefWarning
 from anneal_ref.base.estimate import Estimate
 from anneal_ref.base.run import Run
@@ -129,6 +128,5 @@ def _least_rounding(ledger: Mapping[str, Any]) -> float:
 
 
 def _order(ledger: Mapping[str, Any]) -> int:
-    """Order of the scheme: as the back-end says, or the lowest that a symmetric scheme can have."""
-    known = SPLITTINGS.get(str(ledger.get("scheme")))
-    return int(ledger.get("order", _LOWEST_ORDER if known is None else known.order))
+    """Order of the refinement: as the back-end says, or the lowest that a symmetric scheme can have."""
+    return int(ledger.get("order", _LOWEST_ORDER))

@@ -251,3 +251,34 @@ def test_rounding_common_to_every_order_of_the_sites_is_in_the_bars(precision, t
         x = truth.moments().x
         inside.extend(np.abs(x.value - np.cos(angles).prod(axis=1)) <= x.num)
     assert np.mean(inside) >= 0.95
+
+
+def rough_tables(seed, count):
+    """Anneals whose schedule is a table of many uneven rows, as measured ones are: steps cannot meet all of its knots."""
+    rng = np.random.default_rng(seed)
+    for k in range(count):
+        n, rows = int(rng.integers(3, 7)), int(rng.integers(60, 900))
+        s = np.sort(np.concatenate([[0, 1], rng.random(rows)]))
+        s = s[np.concatenate([[True], np.diff(s) > 1e-6])]
+        scatter = 1 + rng.choice([0.0, 0.02, 0.1, 0.4]) * rng.random((2, len(s)))
+        schedule = ar.Schedule.from_table(
+            s,
+            20 * (1 - s) ** 1.5 * scatter[0],
+            10 * s * scatter[1],
+            unit="1",
+            interpolation=("pchip", "linear")[k % 2],
+        )
+        fields = ar.disorder.gaussian(1.0) if k % 3 else None
+        instance = ar.draw_instance(ar.lattices.complete(n), ar.disorder.gaussian(1.0), fields, seed=seed + k)
+        yield ar.Anneal(instance, schedule, duration=float(rng.choice([0.3, 0.5, 1.0])))
+
+
+def test_bars_are_honest_where_steps_straddle_the_knots_of_a_table():
+    solved = list(solve(rough_tables(seed=51, count=80), [ar.StateVector(tolerance=1e-5), ar.StateVector(1e-3)]))
+    straddled = [one for one in solved if one[0].ledger["order"] < 6]
+    assert len(straddled) > 40
+    for part in (solved, straddled):
+        errors, bars, owner = deviations(part)
+        errors = np.maximum(errors - 1e-10, 0.0)  # of the answer, whose own steps meet every knot
+        assert np.mean(errors <= bars) >= 0.95
+        assert np.mean(np.bincount(owner, errors > bars) == 0) >= 0.8

@@ -34,6 +34,7 @@ if TYPE_CHECKING:
 
 Floats = NDArray[np.float64]
 
+_ROUGH_ORDER = 2
 _MOMENTS = 4
 # exact for pieces of degree 8 against the highest Legendre polynomial; tables are cubic at most
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(6)
@@ -131,6 +132,15 @@ def step_angles(anneal: Anneal, grid: Floats, splitting: Splitting) -> tuple[Flo
     if rough.size:
         problem[rough], transverse[rough] = _projected_angles(anneal, grid, rough, clocks)
     return problem, transverse
+
+
+def order_on(anneal: Anneal, grid: Floats, splitting: Splitting) -> int:
+    """Return the order that a refinement of the grid can count on.
+
+    It is that of the splitting where steps meet the knots. Where knots lie inside steps, the error of the moments that
+    are left out falls in an irregular way as steps are halved, and no more than second order is claimed.
+    """
+    return min(splitting.order, _ROUGH_ORDER) if _straddling(anneal.knots, grid).size else splitting.order
 
 
 def merge_steps(problem: Floats, transverse: Floats) -> tuple[Floats, Floats, float]:

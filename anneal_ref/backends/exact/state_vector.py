@@ -12,7 +12,7 @@ import numpy as np
 from anneal_ref.backends.contract import Kick, Plan, check_anneal, check_kicks, check_times
 from anneal_ref.backends.exact.ground_start import ground_start, ground_start_bytes
 from anneal_ref.backends.exact.register import Register
-from anneal_ref.backends.exact.splitting import SPLITTINGS, Floats, Splitting, merge_steps, step_angles
+from anneal_ref.backends.exact.splitting import SPLITTINGS, Floats, Splitting, merge_steps, order_on, step_angles
 from anneal_ref.backends.exact.state import ExactState
 from anneal_ref.backends.exact.steps import choose_splitting, halved, phase_mesh, step_density, time_grid
 from anneal_ref.backends.memory import available_bytes, require_memory
@@ -176,7 +176,8 @@ class StateVector:
         grid = grid[: _nearest(grid, stops[-1] * duration) + 1]
         problem, transverse = step_angles(anneal, grid, splitting)
         register, ledger = self._start(anneal, run)
-        ledger |= {"scheme": splitting.name, "steps": 0, "layers": 0, "kicks": 0}
+        ledger |= {"scheme": splitting.name, "order": order_on(anneal, grid, splitting)}
+        ledger |= {"steps": 0, "layers": 0, "kicks": 0}
         done, pending = 0, 0.0
         with run.track(transverse.size, f"{anneal.n_sites} spins") as bar:
             for time in times:

@@ -30,6 +30,8 @@ _MESH = 256
 SLOPES = {STRANG.name: 0.195, BLANES_MOAN_4.name: 0.113, BLANES_MOAN_6.name: 0.149}
 # phase that a change of the schedule from nothing to its maximum, or back, adds
 _CHANGE = 2.0
+# every knot is met up to so many, or so many for each step
+_FEW_KNOTS, _KNOTS_PER_STEP = 400, 4
 # above this the errors no longer follow the power law, and steps cannot be longer
 _LOOSEST = 3e-4
 
@@ -105,8 +107,9 @@ def choose_splitting(tolerance: float) -> Splitting:
 def time_grid(anneal: Anneal, mesh: Mesh, density: float, marks: Sequence[float] = ()) -> Floats:
     """Return step ends from 0 to the duration, equally long in phase between the times that must be met.
 
-    Met are the marks, the corners of the waveform, and those knots of the schedule that lie next to an interval of at
-    least a step; runs of shorter intervals are straddled (see `splitting`).
+    Met are the marks, the corners of the waveform, and all knots of the schedule unless there are more than 400 and
+    more than four for each step that the phase asks for; then only those that lie next to an interval of at least a step, and runs of
+    shorter intervals are straddled (see `splitting`).
 
     Parameters
     ----------
@@ -123,8 +126,10 @@ def time_grid(anneal: Anneal, mesh: Mesh, density: float, marks: Sequence[float]
     ndarray, shape (steps + 1,)
     """
     times, phase, knots = mesh.times, mesh.phase, np.asarray(anneal.knots)
-    long = np.diff(np.interp(knots, times, phase)) * density >= 1
-    kept = knots[np.append(long, True) | np.append(True, long)]
+    kept = knots
+    if len(knots) > max(_FEW_KNOTS, _KNOTS_PER_STEP * mesh.total * density):
+        long = np.diff(np.interp(knots, times, phase)) * density >= 1
+        kept = knots[np.append(long, True) | np.append(True, long)]
     corners = () if anneal.waveform is None else np.asarray(anneal.waveform.u) * anneal.duration
     ends = _distinct(np.concatenate([kept, corners, marks]), marks, 1e-12 * anneal.duration)
     at_ends = np.interp(ends, times, phase)
