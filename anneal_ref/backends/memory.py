@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 from anneal_ref.base.errors import TooLarge
@@ -23,7 +23,9 @@ def available_bytes() -> int:
     return min(_limits())
 
 
-def require_memory(needed: int, purpose: str, alternatives: tuple[str, ...] = ()) -> None:
+def require_memory(
+    needed: int, purpose: str, alternatives: tuple[str, ...] | Callable[[int], tuple[str, ...]] = ()
+) -> None:
     """Raise `TooLarge` if `needed` bytes are not there; allocate nothing.
 
     Parameters
@@ -32,13 +34,15 @@ def require_memory(needed: int, purpose: str, alternatives: tuple[str, ...] = ()
         Bytes at the peak of the work.
     purpose : str
         What they are for, as the subject of the message.
-    alternatives : tuple of str
+    alternatives : tuple of str, or function of the bytes that are free
         What else would do.
     """
     if needed < _ALWAYS_THERE:
         return
     available = available_bytes()
     if needed > available:
+        if callable(alternatives):
+            alternatives = alternatives(available)
         hint = "; alternatives: " + ", ".join(alternatives) if alternatives else ""
         raise TooLarge(
             f"{purpose} needs {readable_bytes(needed)}, and {readable_bytes(available)} are free{hint}",

@@ -15,7 +15,7 @@ from anneal_ref.backends.exact.register import Register
 from anneal_ref.backends.exact.splitting import SPLITTINGS, Floats, Splitting, merge_steps, order_on, step_angles
 from anneal_ref.backends.exact.state import ExactState
 from anneal_ref.backends.exact.steps import choose_splitting, halved, phase_mesh, step_density, time_grid
-from anneal_ref.backends.memory import available_bytes, require_memory
+from anneal_ref.backends.memory import require_memory
 from anneal_ref.base.checks import choice, integer, number
 from anneal_ref.base.errors import InputError, NotSupported
 from anneal_ref.base.run import Bar, Run
@@ -246,13 +246,14 @@ class StateVector:
         needed = Register.bytes_needed(n, symmetric, self.precision) + _LAYER_BYTES * layers
         if anneal.start == "ground":
             needed += ground_start_bytes(n, symmetric)
-        require_memory(needed, f"the state vector of {n} spins", self._alternatives(n, symmetric))
-        return needed
 
-    def _alternatives(self, n: int, symmetric: bool) -> tuple[str, ...]:
-        fits = self.precision == "double" and Register.bytes_needed(n, symmetric, "single") <= available_bytes()
-        single = ("StateVector(precision='single', tolerance=1e-4)",) if fits else ()
-        return (*single, "a machine with more memory", "fewer spins")
+        def alternatives(free: int) -> tuple[str, ...]:
+            fits = self.precision == "double" and Register.bytes_needed(n, symmetric, "single") <= free
+            single = ("StateVector(precision='single', tolerance=1e-4)",) if fits else ()
+            return (*single, "a machine with more memory", "fewer spins")
+
+        require_memory(needed, f"the state vector of {n} spins", alternatives)
+        return needed
 
 
 def _nearest(grid: Floats, time: float) -> int:
