@@ -109,7 +109,7 @@ def compare(
         raise InputError("the truth must have its numerical error measured; solve it with anneal_ref.reference")
     clusters = Clusters.of(len(spins), samples.groups)
     connected = instance.has_fields
-    table = reference.probabilities
+    table = reference.probabilities()
     perfect = Perfect.of_samples(reference.stored_samples.spins) if table is None else Perfect.of_probabilities(table)
     # repetitions for different samples are independent, so that floors may be pooled
     seeds = [seed, zlib.crc32(reference.identity.encode()), zlib.crc32(spins.tobytes())]

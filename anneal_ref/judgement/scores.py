@@ -115,7 +115,7 @@ def likelihood_score(
 ) -> tuple[Score, float, int]:
     """Return log-likelihood per shot, its departure in standard errors, and the number of nearly impossible shots."""
     n = spins.shape[1]
-    stored = reference.probabilities is not None
+    stored = reference.folded is not None
     # beyond the table each call evolves the state, so both sets of spins go in one
     together = reference.log_probability(spins if stored else np.concatenate((spins, perfect.spins)))
     measured = together[: len(spins)]

@@ -23,6 +23,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from anneal_ref.base.errors import AnnealRefWarning, InputError
 from anneal_ref.base.estimate import Estimate
+from anneal_ref.observe.evaluating import evaluate
 from anneal_ref.observe.moments import Moments
 
 FEW_GROUPS = 8
@@ -206,7 +207,7 @@ def estimate_of_moments(
     def value(z_sum: NDArray[np.float64], zz_sum: NDArray[np.float64], shots: float) -> NDArray[np.float64]:
         mean = zz_sum / shots
         np.fill_diagonal(mean, 1.0)
-        return np.asarray(f(Moments.of(z_sum / shots, mean, how="samples")), dtype=np.float64)
+        return evaluate(f, Moments.of(z_sum / shots, mean, how="samples"))
 
     def without(shots: NDArray[np.intp]) -> NDArray[np.float64]:
         z, zz = sums(spins[shots])
@@ -229,7 +230,7 @@ def estimate_of_spins(
     """Return f of the spins, by jackknife, or by bootstrap where `draws` are given."""
 
     def value(chosen: NDArray[np.int8]) -> NDArray[np.float64]:
-        return np.asarray(f(chosen), dtype=np.float64)
+        return evaluate(f, chosen)
 
     if draws is None:
         replicas = (value(spins[parts.without(k)]) for k in range(len(parts)))

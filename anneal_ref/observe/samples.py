@@ -305,7 +305,7 @@ class Samples:
         Raises
         ------
         InputError
-            Fewer than two shots, a gauge that has not been undone, an f whose value is not finite.
+            Fewer than two shots, a gauge that has not been undone, an f whose value is no finite number.
 
         Warns
         -----
@@ -321,8 +321,8 @@ class Samples:
         most = 1000 if method == "bootstrap" else replicas
         parts = resample.blocks(self.n_shots, self.groups, most if of == "moments" else min(most, 100))
         draws = resample.multiplicities(len(parts), replicas, seed) if method == "bootstrap" else None
-        evaluate = resample.estimate_of_moments if of == "moments" else resample.estimate_of_spins
-        return evaluate(f, self.spins, parts, draws)
+        resampled = resample.estimate_of_moments if of == "moments" else resample.estimate_of_spins
+        return resampled(f, self.spins, parts, draws)
 
     def _require_ungauged(self) -> None:
         if self.manifest.gauge is not None and not self.manifest.undone:
@@ -332,7 +332,12 @@ class Samples:
 
 
 def _spins(spins: ArrayLike) -> NDArray[np.int8]:
-    array = np.asarray(spins)
+    try:
+        array = np.asarray(spins)
+    except (TypeError, ValueError) as error:
+        raise InputError(
+            f"spins must be an array of shape (n_shots, n_sites), every shot with the same number of spins: {error}"
+        ) from error
     if array.ndim != 2 or 0 in array.shape:
         raise InputError(f"spins must have shape (n_shots, n_sites) with at least one of each; got shape {array.shape}")
     if array.dtype.kind not in "if":

@@ -11,7 +11,7 @@ from pathlib import Path
 import numpy as np
 
 from anneal_ref.base.checks import integer, number
-from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning, ArchiveError
+from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning, ArchiveError, InputError
 from anneal_ref.base.run import Run
 from anneal_ref.base.storage import PART, Record, read_record, write_record
 from anneal_ref.model.anneal import Anneal
@@ -91,9 +91,13 @@ class Archive:
 
         Raises
         ------
+        InputError
+            Something else than a reference.
         ArchiveError
             The folder is read-only, the disk is full, ...; nothing half-written is left.
         """
+        if not isinstance(reference, Reference):
+            raise InputError(f"an archive holds references, made by anneal_ref.reference(anneal); got {reference!r}")
         path = self.path(reference.identity)
         return path if self.contains(reference.identity) else write_record(path, to_record(reference))
 

@@ -89,7 +89,7 @@ def deviation(reference: Reference, run: Run) -> float:
     # twice the layers: the new run has up to twice the rounding errors of the stored one, on top of the stored bars
     own = 2 * SAFETY * reference.decay.rounding
     worst = [float((np.abs(b.value - a.value) / (a.num + own)).max()) for a, b in pairs]
-    table = reference.probabilities
+    table = reference.probabilities()
     if table is not None and hasattr(state, "probabilities"):
         worst.append(float(np.abs(np.asarray(state.probabilities()) - table).max()) / (reference.error + own))
     return max(worst)
@@ -101,7 +101,7 @@ def inconsistency(reference: Reference, arrays: Mapping[str, NDArray[Any]]) -> s
     for name, estimate in (("z", moments.z), ("zz", moments.zz), ("x", moments.x)):
         if estimate is not None and not np.allclose(arrays[f"{name}_num"], estimate.num, rtol=1e-6, atol=1e-15):
             return f"the stored error bars of {name} are not those that its runs give"
-    table = reference.probabilities
+    table = reference.probabilities()
     if table is not None:
         n = reference.n_sites
         spins = (1 - 2 * ((np.arange(1 << n)[:, None] >> np.arange(n)) & 1)).astype(np.float64)

@@ -20,6 +20,7 @@ from anneal_ref.base.run import Run
 from anneal_ref.ground.ground import GroundEnergy, ground_energy
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.observe.bits import unpack
+from anneal_ref.observe.evaluating import evaluate
 from anneal_ref.observe.manifest import Manifest
 from anneal_ref.observe.moments import Moments
 from anneal_ref.observe.samples import Samples
@@ -112,9 +113,8 @@ class Reference:
         """Counters and checks of the finest run."""
         return self.runs[-1].ledger
 
-    @property
     def probabilities(self) -> NDArray[np.float64] | None:
-        """Probabilities of all configurations at the end, shape (2^n,), or None beyond 16 sites."""
+        """Return the probabilities of all configurations at the end, shape (2^n,), or None beyond 16 sites."""
         if self.folded is None or len(self.folded) == 1 << self.n_sites:
             return self.folded
         return frozen(np.concatenate((self.folded, self.folded[::-1])))
@@ -144,10 +144,10 @@ class Reference:
         Raises
         ------
         InputError
-            Values that are not finite, or of different shapes.
+            Values that are no finite numbers, or of different shapes.
         """
         runs = (*self.runs[-RUNS:], self.runs[0], self.reordered)
-        values = [np.asarray(f(run.moments), dtype=np.float64) for run in runs]
+        values = [evaluate(f, run.moments) for run in runs]
         if any(value.shape != values[0].shape or not np.isfinite(value).all() for value in values):
             raise InputError("f must give finite numbers of one shape for the moments of every run; got something else")
         *last, coarsest, reordered = values
@@ -196,7 +196,7 @@ class Reference:
         ndarray, shape (shots,)
         """
         rows = signs("spins", spins, (None, self.n_sites))
-        table = self.probabilities
+        table = self.probabilities()
         if table is None:
             return self.state().log_probability(rows)
         with np.errstate(divide="ignore"):

@@ -77,7 +77,7 @@ def test_true_values_are_those_of_the_reference(plain: Reference) -> None:
     energy = (np.sum(instance.couplings * zz[i, j]) - plain.ground.value) / instance.n_sites
     assert float(result.truth["residual_energy"]) == pytest.approx(energy)
     assert float(result.truth["residual_energy"].num) > 0
-    p = plain.probabilities
+    p = plain.probabilities()
     assert p is not None
     entropy = -np.sum(p[p > 0] * np.log(p[p > 0]))
     assert float(result.truth["log_likelihood"]) == pytest.approx(-entropy, abs=1e-3)
@@ -151,7 +151,7 @@ def test_connected_correlations_of_rare_events_carry_a_warning(with_fields: Refe
     assert not any("rare events" in note for note in compare(with_fields, with_fields.sample(300, seed=1)).notes)
     lattice = ar.lattices.square(2, 2)
     pinned = solved(ar.Instance(lattice, np.full(len(lattice.edges), -1.0), fields=np.full(4, -0.5)), duration=8.0)
-    p = pinned.probabilities
+    p = pinned.probabilities()
     assert p is not None
     assert 200 * (1 - p.max()) < 10
     assert any("rare events" in note for note in compare(pinned, pinned.sample(200, seed=1)).notes)
@@ -201,7 +201,7 @@ def test_too_few_shots_for_a_fidelity_say_so(plain: Reference) -> None:
 
 
 def test_samples_that_are_too_good_are_noticed(plain: Reference) -> None:
-    p = plain.probabilities
+    p = plain.probabilities()
     assert p is not None
     counts = np.round(p * 4000).astype(int)
     index = np.repeat(np.arange(len(p)), counts)

@@ -212,6 +212,14 @@ def test_an_interrupted_or_refused_write_keeps_the_finished_ones(three, failure,
     assert archive.audit().sound
 
 
+def test_only_references_are_added(truth, tmp_path):
+    archive = ar.Archive(tmp_path)
+    for other in (None, truth.moments(), "reference"):
+        with pytest.raises(ar.InputError, match="an archive holds references"):
+            archive.add(other)
+    assert len(archive) == 0
+
+
 def test_folders(tmp_path):
     (tmp_path / "file").write_text("x")
     for create in (True, False):

@@ -224,6 +224,10 @@ def test_estimate_refuses_what_is_not_finite():
     truth = reference(anneal(), backend=Plain())
     with pytest.raises(ar.InputError, match="finite numbers of one shape"):
         truth.estimate(lambda moments: np.nan)
+    with pytest.raises(ar.InputError, match=r"f must give a real number.*'x'"):
+        truth.estimate(lambda moments: "x")
+    with pytest.raises(ar.InputError, match=r"Estimate.*\.value"):
+        truth.estimate(lambda moments: moments.zz.max())
 
 
 # ---- samples and probabilities
@@ -232,7 +236,7 @@ def test_estimate_refuses_what_is_not_finite():
 @pytest.mark.parametrize("fields", [None, ar.disorder.gaussian(0.5)])
 def test_probabilities_samples_and_likelihoods_belong_together(fields):
     truth = reference(anneal(5, fields=fields), backend=Plain(), samples=4000)
-    p = truth.probabilities
+    p = truth.probabilities()
     assert p.shape == (32,)
     assert len(truth.folded) == (32 if fields else 16)
     assert p.sum() == pytest.approx(1, abs=1e-12)
@@ -257,7 +261,7 @@ def test_beyond_the_table_samples_come_without_repeats_and_are_refused_beyond():
     assert sorted(drawn.bits.ravel().tolist()) == sorted(truth.bits.ravel().tolist())
     with pytest.raises(ar.InputError, match=r"at most 300.*got 301.*state\(\)"):
         truth.sample(301, seed=2)
-    assert truth.probabilities is None
+    assert truth.probabilities() is None
     spins = configurations(4).astype(int)
     np.testing.assert_allclose(truth.log_probability(spins), small.log_probability(spins), atol=1e-10)
 
