@@ -71,7 +71,7 @@ class Gaussian:
 
 @dataclass(frozen=True, slots=True)
 class Uniform:
-    """Uniform in [low, high), in steps of (high - low) / 2^53."""
+    """Uniform in [low, high), in steps of (high - low) / 2^53 rounded to floats; never `high` itself."""
 
     low: float
     high: float
@@ -82,10 +82,14 @@ class Uniform:
         object.__setattr__(self, "high", number("high", self.high))
         if not self.low < self.high:
             raise InputError(f"low must be below high; got {self.low} and {self.high}; use constant(v) for one value")
+        if not np.isfinite(self.high - self.low):
+            raise InputError(f"high - low must be a finite number; got {self.low} and {self.high}; use a narrower law")
 
     def draw(self, n: int, seed: int, index: int, stream: str) -> NDArray[np.float64]:
         """Return n uniform numbers."""
-        return self.low + (self.high - self.low) * unit_interval(raw_words(n, seed, index, stream))
+        drawn = self.low + (self.high - self.low) * unit_interval(raw_words(n, seed, index, stream))
+        # the sum may round up to the end that does not belong to the law
+        return np.minimum(drawn, np.nextafter(self.high, self.low))
 
 
 @dataclass(frozen=True, slots=True)

@@ -44,6 +44,14 @@ def test_uniform_values_are_frozen():
     assert (drawn * 2**53).tolist() == [1144072225643524, 6166586336925013, 5746424433702240]
 
 
+def test_uniform_never_reaches_its_upper_end():
+    """Half of all draws from [1, 1 + 2 ulp) would round to an end or the middle; the upper end is not in the law."""
+    ulp = np.spacing(1.0)
+    drawn = disorder.uniform(1.0, 1.0 + 2 * ulp).draw(1000, seed=1, index=0, stream="couplings")
+    assert sorted(set(drawn.tolist())) == [1.0, 1.0 + ulp]
+    assert (disorder.uniform(0.0, 1e308).draw(1000, seed=1, index=0, stream="couplings") < 1e308).all()
+
+
 @pytest.mark.parametrize("law", LAWS, ids=str)
 def test_draws_are_reproducible_and_nested(law):
     long = law.draw(50, 3, 9, "fields")
@@ -123,6 +131,7 @@ def test_neighbouring_words_are_uncorrelated():
         (lambda: disorder.gaussian(np.nan), "sigma must be a positive number; got nan"),
         (lambda: disorder.uniform(1, 1), "low must be below high; got 1.0 and 1.0; use constant"),
         (lambda: disorder.uniform(0, np.inf), "high must be a finite number; got inf"),
+        (lambda: disorder.uniform(-1e308, 1e308), "high - low must be a finite number; got -1e\\+308 and 1e\\+308"),
         (lambda: disorder.levels(0), "k must be a whole number from 1 to 1048576; got 0"),
         (lambda: disorder.levels(2.5), "k must be a whole number from 1 to 1048576; got 2.5"),
         (lambda: disorder.levels(2, zero=1), "zero must be True or False; got 1"),

@@ -23,6 +23,11 @@ _DENSE_STATES = 64
 _KRYLOV = 24
 # bound on the angle between the computed and the true ground state
 _ANGLE = 1e-10
+_DEGENERATE = (
+    "the two lowest states of H(0) are nearly degenerate, as two configurations that differ by the global flip are "
+    "where weak fields alone tell them apart; use start='plus', a schedule with a larger G(0), no fields at all (the "
+    "even state is taken then), or fields that are strong enough to choose"
+)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -129,7 +134,9 @@ def _positive_ground(energies: NDArray[np.float64], weights: NDArray[np.float64]
         try:
             values, vectors = eigsh(operator, k=2, which="SA", ncv=_KRYLOV, v0=np.full(size, size**-0.5), maxiter=2000)
         except ArpackNoConvergence as error:
-            raise NotConverged(f"Lanczos for the ground state of H(0) did not converge: {error}", error) from error
+            raise NotConverged(
+                f"Lanczos for the ground state of H(0) did not converge ({error}); most likely {_DEGENERATE}", error
+            ) from error
     order = np.argsort(values)
     vector = vectors[:, order[0]] * np.sign(vectors[:, order[0]].sum())
     vector /= np.linalg.norm(vector)
@@ -141,8 +148,8 @@ def _positive_ground(energies: NDArray[np.float64], weights: NDArray[np.float64]
     found = GroundStart(full, energy, residual, residual / gap if gap > 0 else np.inf)
     if not found.angle <= _ANGLE:
         raise NotConverged(
-            f"the ground state of H(0) is known to an angle of {found.angle:.1e} only "
-            f"(residual {residual:.1e}, gap {gap:.1e}); {_ANGLE:.0e} is asked for, so choose a start with a wider gap",
+            f"the ground state of H(0) is known to an angle of {found.angle:.1e} only, {_ANGLE:.0e} is asked for "
+            f"(residual {residual:.1e}, gap {gap:.1e}): {_DEGENERATE}",
             found,
         )
     return found
