@@ -40,7 +40,7 @@ def join_groups(
 
     Groups that a run has already stay apart from each other and from those of other runs.
     """
-    by = next((key for key in ("gauge", "batch") if any(getattr(one, key) is not None for one in manifests)), None)
+    by = _distinction(manifests)
     numbers: dict[Hashable, int] = {}
     joined = []
     for k, (manifest, own, count) in enumerate(zip(manifests, groups, shots, strict=True)):
@@ -53,3 +53,40 @@ def join_groups(
         key = ("run", k) if mark is None else (by, tuple(mark) if isinstance(mark, list) else mark)
         joined.append(np.full(count, numbers.setdefault(key, len(numbers)), dtype=np.int64))
     return np.concatenate(joined)
+
+
+def unevenness(
+    manifests: Sequence[Manifest], groups: Sequence[NDArray[np.int64] | None], names: Sequence[str]
+) -> str | None:
+    """Say which runs name no gauge where others do, or else no batch where others do; None if they are alike.
+
+    Parameters
+    ----------
+    manifests, groups : sequences of Manifest and of ndarray or None
+        Of the runs; one with groups of its own needs no mark.
+    names : sequence of str
+        What messages call the runs.
+    """
+    by = _distinction(manifests)
+    if by is None:
+        return None
+    lacking = [
+        name
+        for name, one, own in zip(names, manifests, groups, strict=True)
+        if own is None and getattr(one, by) is None
+    ]
+    if not lacking:
+        return None
+    marked = sum(getattr(one, by) is not None for one in manifests)
+    listed = ", ".join(lacking[:6]) + (f" and {len(lacking) - 6} more" if len(lacking) > 6 else "")
+    what = "were taken as they are, each as a gauge of its own" if by == "gauge" else "count as a batch each"
+    remedy = ", all +1 where there was none" if by == "gauge" else ""
+    return (
+        f"{marked} of {len(manifests)} runs give a {by} and {len(lacking)} do not ({listed}); those without {what}; "
+        f"give every run its {by}{remedy}"
+    )
+
+
+def _distinction(manifests: Sequence[Manifest]) -> str | None:
+    """Return what tells the runs apart: the gauge where any has one, else the batch where any has one."""
+    return next((key for key in ("gauge", "batch") if any(getattr(one, key) is not None for one in manifests)), None)

@@ -131,7 +131,7 @@ class Manifest:
             raise InputError(f"{where}: {error}") from error
 
     def merged(self, other: Manifest, names: tuple[str, str]) -> Manifest:
-        """Return what either of two manifests of one run says; refuse them where they differ."""
+        """Return what either of two manifests of one run says; refuse them where they differ or do not go together."""
         mine, yours = self.to_dict(), other.to_dict()
         for key in mine.keys() & yours.keys():
             if mine[key] != yours[key]:
@@ -139,7 +139,7 @@ class Manifest:
                     f"{names[0]} and {names[1]} differ in {key}: {_short(mine[key])} against {_short(yours[key])}; "
                     "correct one of them"
                 )
-        return Manifest(**(mine | yours))
+        return Manifest.from_dict(mine | yours, f"{names[0]} and {names[1]}")
 
     def to_json(self) -> str:
         """Return the text of a sidecar file."""

@@ -31,8 +31,16 @@ _KIND = "samples"
 Contents = tuple[NDArray[np.int8], Manifest, NDArray[np.int64] | None]
 
 
-def read(path: Path, values: Literal["spins", "bits"] | None = None, manifest: Manifest | None = None) -> Contents:
-    """Return spins, manifest and groups (or None) of a file; see `Samples.read`."""
+def read(
+    path: Path,
+    values: Literal["spins", "bits"] | None = None,
+    manifest: Manifest | None = None,
+    values_by: str = "the argument `values`",
+) -> Contents:
+    """Return spins, manifest and groups (or None) of a file; see `Samples.read`.
+
+    `values_by` is what messages call the place where `values` was said: an argument, an option or a key of a file.
+    """
     if values is not None:
         choice("values", values, ("spins", "bits"))
     reader = _format(path)[0]
@@ -41,12 +49,12 @@ def read(path: Path, values: Literal["spins", "bits"] | None = None, manifest: M
     if path.stat().st_size == 0:
         raise InputError(f"{path}: the file is empty; a sample file holds at least one shot")
     table = reader(path)
-    if values is not None and table.values not in (None, values):
+    if reader is text.read and values is not None and table.values not in (None, values):
         raise InputError(
-            f"{path}: the file says that it holds {table.values}, the caller says {values}; "
-            "drop the argument if the file is right"
+            f"{path}: the file says that it holds {table.values}, and {values_by} says {values}; it is meant for files "
+            "that do not say, so remove it if the file is right"
         )
-    spins, groups = expand(to_spins(table, values or table.values), table)
+    spins, groups = expand(to_spins(table, table.values or values), table)
     found = table.manifest
     sidecar = _sidecar(path)
     if sidecar.is_file():

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -11,12 +12,12 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from anneal_ref.base.checks import choice, finite, frozen, integer
-from anneal_ref.base.errors import InputError
+from anneal_ref.base.errors import AnnealRefWarning, InputError
 from anneal_ref.base.estimate import Estimate
 from anneal_ref.observe import resample
 from anneal_ref.observe.bits import pack
 from anneal_ref.observe.counting import count_moments
-from anneal_ref.observe.joining import join_groups, join_manifests
+from anneal_ref.observe.joining import join_groups, join_manifests, unevenness
 from anneal_ref.observe.manifest import Manifest
 from anneal_ref.observe.moments import Moments
 from anneal_ref.observe.reading import read, write
@@ -106,8 +107,8 @@ class Samples:
         path : path
             The file. A sidecar `<file>.manifest.json`, where there is one, is read too.
         values : {"spins", "bits"}, optional
-            Whether the file holds +1 and -1, or 0 (for +1) and 1 (for -1). By default the file says so itself,
-            or a -1 in it does.
+            Whether the file holds +1 and -1, or 0 (for +1) and 1 (for -1), where it does not say so itself and no -1
+            in it does. HDF5 and NPZ files that say are read as they say.
         manifest : Manifest, optional
             What the caller knows about the run; must not contradict the file.
 
@@ -115,7 +116,7 @@ class Samples:
         ------
         InputError
             A missing, empty or malformed file (the line is named), a value that is not allowed, a file that does not
-            say what its ones mean, manifests that contradict each other.
+            say what its ones mean, text that says otherwise than `values`, manifests that contradict each other.
         """
         spins, found, groups = read(Path(path), values, manifest)
         return cls(spins, found, groups)
@@ -141,19 +142,16 @@ class Samples:
         ------
         InputError
             No runs, or runs that differ in instance, duration, sites or number of spins.
+
+        Warns
+        -----
+        AnnealRefWarning
+            Some runs give a gauge and others none; without gauges, some give a batch and others none.
         """
-        if not runs:
-            raise InputError("concatenate takes at least one run; got none")
-        plain = [run.ungauged() for run in runs]
-        if len(plain) == 1:
-            return plain[0]
-        for k, run in enumerate(plain):
-            if run.n_sites != plain[0].n_sites:
-                sizes = f"run 0 has {plain[0].n_sites}, run {k} has {run.n_sites}"
-                raise InputError(f"runs must have the same number of spins; {sizes}")
-        manifests = [run.manifest for run in plain]
-        groups = join_groups(manifests, [run.groups for run in plain], [run.n_shots for run in plain])
-        return cls(np.concatenate([run.spins for run in plain]), join_manifests(manifests), groups)
+        note = uneven(runs, [f"run {k}" for k in range(len(runs))])
+        if note:
+            warnings.warn(note, AnnealRefWarning, stacklevel=2)
+        return join(runs)
 
     def ungauged(self) -> Samples:
         """Return the samples with the gauge of the manifest undone, s_i -> g_i s_i, if there is one to undo."""
@@ -329,6 +327,31 @@ class Samples:
             raise InputError(
                 "the gauge of these samples has not been undone; call .ungauged() or .for_instance(instance) first"
             )
+
+
+def join(runs: Sequence[Samples]) -> Samples:
+    """Return the shots of several runs as `Samples.concatenate` does, without a warning about missing gauges."""
+    if not runs:
+        raise InputError("concatenate takes at least one run; got none")
+    plain = [run.ungauged() for run in runs]
+    if len(plain) == 1:
+        return plain[0]
+    for k, run in enumerate(plain):
+        if run.n_sites != plain[0].n_sites:
+            sizes = f"run 0 has {plain[0].n_sites}, run {k} has {run.n_sites}"
+            raise InputError(f"runs must have the same number of spins; {sizes}")
+    manifests, own = _marks(plain)
+    groups = join_groups(manifests, own, [run.n_shots for run in plain])
+    return Samples(np.concatenate([run.spins for run in plain]), join_manifests(manifests), groups)
+
+
+def uneven(runs: Sequence[Samples], names: Sequence[str]) -> str | None:
+    """Say which runs give no gauge, or else no batch, where others do; None if they are alike."""
+    return unevenness(*_marks(runs), names)
+
+
+def _marks(runs: Sequence[Samples]) -> tuple[list[Manifest], list[NDArray[np.int64] | None]]:
+    return [run.manifest for run in runs], [run.groups for run in runs]
 
 
 def _spins(spins: ArrayLike) -> NDArray[np.int8]:

@@ -154,6 +154,8 @@ def test_entries_at_the_head(tmp_path: Path) -> None:
             "reads the format 'anneal_ref samples 1'; got 'anneal_ref samples 9'",
         ),
         ("# sites: 1 2 3\n1,-1\n", "the manifest speaks of 3 sites; the file has 2 columns"),
+        ("# gauge: 1 -1 1\n1,-1\n", "run.csv: the manifest speaks of 3 sites; the file has 2 columns"),
+        ("# gauge: 1 -1 1\ns1,s2\n1,-1\n", "run.csv: .*gauge and sites must have .*got 3 signs and 2 sites"),
         ("# sites: 1 2\ns2,s1\n1,-1\n", r"differ in sites: \[1, 2\] against \[2, 1\]"),
         (
             "1,-1\n# batch: 2\n-1,1\n",
@@ -182,10 +184,31 @@ def test_bad_paths_and_arguments(tmp_path: Path) -> None:
         Samples.read(tmp_path / "run.mat")
     with pytest.raises(InputError, match=r"got 'no suffix'"):
         Samples([[1]]).write(tmp_path / "run")
-    with pytest.raises(InputError, match="the file says that it holds bits, the caller says spins"):
+    with pytest.raises(InputError, match="holds bits, and the argument `values` says spins; .*remove it"):
         read(tmp_path, "# values: bits\n0,1\n", values="spins")
     with pytest.raises(InputError, match="values must be one of 'spins', 'bits'; got 'bit'; did you mean"):
         read(tmp_path, "0,1\n", values="bit")
+
+
+@pytest.mark.parametrize("suffix", [".npz", ".h5"])
+@pytest.mark.parametrize("values", ["spins", "bits"])
+def test_files_that_say_what_they_hold_are_read_as_they_say(tmp_path: Path, suffix: str, values: str) -> None:
+    path = tmp_path / f"run{suffix}"
+    Samples([[1, -1], [1, 1]]).write(path)
+    assert Samples.read(path, values).spins.tolist() == [[1, -1], [1, 1]]  # type: ignore[arg-type]
+
+
+def test_values_are_for_archives_that_do_not_say(tmp_path: Path) -> None:
+    np.savez(tmp_path / "run.npz", spins=np.array([[0, 1], [1, 1]]))
+    assert Samples.read(tmp_path / "run.npz", "bits").spins.tolist() == [[1, -1], [-1, -1]]
+
+
+def test_a_sidecar_with_a_gauge_of_another_length(tmp_path: Path) -> None:
+    (tmp_path / "run.csv.manifest.json").write_text('{"gauge": [1, -1, 1]}')
+    with pytest.raises(InputError, match=r"run.csv: the manifest speaks of 3 sites; the file has 2"):
+        read(tmp_path, "1,-1\n")
+    with pytest.raises(InputError, match=r"run.csv and .*run.csv.manifest.json: .*got 3 signs and 2 sites"):
+        read(tmp_path, "# sites: 4 5\n1,-1\n")
 
 
 def test_manifest_beside_the_file(tmp_path: Path) -> None:

@@ -162,6 +162,18 @@ def test_concatenation_groups_by_batch_else_by_run(spins: np.ndarray) -> None:
     assert kept.n_groups == 5
 
 
+def test_runs_without_a_gauge_among_runs_with_one_are_named(spins: np.ndarray) -> None:
+    gauged = [Samples(spins, Manifest(gauge=[1, -1, 1, 1, g], batch=1)) for g in (1, -1)]
+    with pytest.warns(AnnealRefWarning, match=r"2 of 4 runs give a gauge and 2 do not \(run 2, run 3\).*all \+1"):
+        joined = Samples.concatenate([*gauged, Samples(spins), Samples(spins, Manifest(batch=2))])
+    assert joined.n_groups == 4
+    with pytest.warns(AnnealRefWarning, match=r"1 of 2 runs give a batch and 1 do not \(run 0\)"):
+        Samples.concatenate([Samples(spins), Samples(spins, Manifest(batch=2))])
+    # alike, or with groups of their own: pytest turns a warning into an error
+    Samples.concatenate([*gauged, Samples(spins, groups=np.arange(40))])
+    Samples.concatenate([Samples(spins), Samples(spins)])
+
+
 def test_runs_that_do_not_belong_together(spins: np.ndarray) -> None:
     with pytest.raises(InputError, match="takes at least one run"):
         Samples.concatenate([])
