@@ -22,7 +22,7 @@ from scipy import stats
 
 from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.correlation_error import CorrelationError
-from anneal_ref.judgement.equivalence import judge_correlation_error
+from anneal_ref.judgement.equivalence import judge_error
 from anneal_ref.judgement.squared_distance import SquaredDistance, pair_distance
 
 LEVEL = 0.95
@@ -185,7 +185,8 @@ def verdicts(repeats: int) -> None:
             found = []
             for _ in range(repeats):
                 distance = pair_distance(world.draw(shots, rng), world.truth, Clusters.of(shots))
-                found.append(judge_correlation_error(CorrelationError(distance, world.norm2, 0.0), 0.05, shots).outcome)
+                error = CorrelationError(distance, world.norm2, 0.0)
+                found.append(judge_error("correlation_error", error, 0.05, shots).outcome)
             shares = [100 * found.count(outcome) / repeats for outcome in ("accept", "reject", "inconclusive")]
             cells.append(f"{shares[0]:>8.1f} /{shares[1]:>5.1f} /{shares[2]:>5.1f} %")
         print(f"{eps:>6.2f} | " + " ".join(f"{cell:>24}" for cell in cells), flush=True)

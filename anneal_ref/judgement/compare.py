@@ -14,17 +14,19 @@ from anneal_ref.base.errors import InputError, NotSupported
 from anneal_ref.base.estimate import Estimate, Score
 from anneal_ref.judgement.clusters import FEW, Clusters
 from anneal_ref.judgement.comparison import Comparison
-from anneal_ref.judgement.correlation_error import CorrelationError, correlation_error
+from anneal_ref.judgement.correlation_error import correlation_error
 from anneal_ref.judgement.deviations import pair_deviations
 from anneal_ref.judgement.equivalence import (
     Acceptance,
     Decision,
     Finding,
+    SquareRoot,
     decide,
-    judge_correlation_error,
     judge_distance,
+    judge_error,
 )
 from anneal_ref.judgement.fidelity import Fidelity, Refusal, fidelity
+from anneal_ref.judgement.magnetisation_error import magnetisation_error
 from anneal_ref.judgement.perfect import Perfect, repeat
 from anneal_ref.judgement.scores import (
     correlation_score,
@@ -67,7 +69,7 @@ def compare(
     samples : Samples
         Of the same instance and duration. Their gauge is undone; gauges and batches count as the independent units.
     acceptance : Acceptance, optional
-        Limits; without them there is no verdict.
+        Limits; without them there is no verdict. With fields, <Z> has a limit too: see `Acceptance`.
     level : float
         Of the intervals, between 0 and 1.
     seed : int
@@ -121,7 +123,10 @@ def compare(
     floor = repetitions.floor
     scores["correlation_error"] = correlation_score(correlation, floor, level)
     if connected:
-        notes.append("with fields, the correlation error is that of <ZZ> - <Z><Z>, and <Z> is scored apart")
+        notes.append(
+            "with fields, the correlation error is that of <ZZ> - <Z><Z>, and <Z> is judged apart; pairs of spins are "
+            "listed with their plain <ZZ>"
+        )
     if correlation.squared < 0:
         notes.append("the correlation error is negative: the samples show nothing beyond the noise of the shots")
     if correlation.distance.below(0.0) < SUSPICIOUS:
@@ -134,7 +139,8 @@ def compare(
     truth = {score.name: target for score, target in energies}
     scores |= {score.name: score for score, _ in energies}
     sigma = {score.name: standard_errors(score.estimate, target) for score, target in energies}
-    scores["magnetisation_error"] = magnetisation_score(spins, moments.z, clusters, repetitions, level)
+    magnetisation = magnetisation_error(spins, moments.z, clusters)
+    scores["magnetisation_error"] = magnetisation_score(magnetisation, repetitions, level)
 
     if connected and table is not None and len(spins) * (1 - float(table.max())) < RARE:
         notes.append(
@@ -161,12 +167,15 @@ def compare(
 
     decision = None
     if acceptance is not None:
-        decision = _decision(acceptance, correlation, scores, truth, clusters)
+        errors: dict[str, SquareRoot] = {"correlation_error": correlation, "magnetisation_error": magnetisation}
+        limits = acceptance.limits(instance.has_fields)
+        decision = _decision(limits, acceptance.level, errors, scores, truth, clusters)
     return Comparison(
         scores,
         truth,
         sigma,
         correlation,
+        magnetisation,
         floor,
         overlap,
         pair_deviations(spins, moments.zz, clusters),
@@ -174,6 +183,7 @@ def compare(
         tuple(notes),
         instance.identity,
         anneal.duration,
+        instance.has_fields,
         instance.n_sites,
         len(spins),
         len(clusters),
@@ -218,18 +228,19 @@ def _first_notes(reference: Reference, samples: Samples, clusters: Clusters) -> 
 
 
 def _decision(
-    acceptance: Acceptance,
-    correlation: CorrelationError,
+    limits: Mapping[str, float],
+    level: float,
+    errors: Mapping[str, SquareRoot],
     scores: Mapping[str, Score],
     truth: Mapping[str, Estimate],
     clusters: Clusters,
 ) -> Decision:
-    limits, level, shots = acceptance.limits, acceptance.level, clusters.shots
+    shots = clusters.shots
     unit = "shots" if clusters.independent else "shots in new gauges or batches"
     findings: list[Finding] = []
     for name, limit in limits.items():
-        if name == "correlation_error":
-            findings.append(judge_correlation_error(correlation, limit, shots, level, len(limits), unit))
+        if name in errors:
+            findings.append(judge_error(name, errors[name], limit, shots, level, len(limits), unit))
             continue
         estimate, target = scores[name].estimate, truth[name]
         findings.append(

@@ -12,7 +12,11 @@ from anneal_ref.judgement.correlation_error import CorrelationError
 from anneal_ref.judgement.deviations import PairTable
 from anneal_ref.judgement.equivalence import Decision
 from anneal_ref.judgement.fidelity import Fidelity, Refusal
+from anneal_ref.judgement.magnetisation_error import MagnetisationError
 from anneal_ref.judgement.perfect import NoiseFloor
+
+EXCLUDED = -6.0
+"""Standard errors of the log-likelihood below which a verdict of acceptance says that the truth is excluded."""
 
 _PLAIN = "  plain, shot noise included"
 
@@ -34,6 +38,8 @@ class Comparison:
         (measured - true) beyond the numerical error, in standard errors, for the same scores.
     correlation : CorrelationError
         The correlation error with all that pooling needs.
+    magnetisation : MagnetisationError
+        The magnetisation error, likewise.
     floor : NoiseFloor
         Correlation errors of a perfect processor.
     fidelity : Fidelity or Refusal
@@ -47,6 +53,8 @@ class Comparison:
     instance : str
         Identity of the instance.
     duration : float
+    has_fields : bool
+        Whether correlations are the connected ones, and <Z> is judged too.
     n_sites, n_shots, n_clusters : int
         `n_clusters` equals `n_shots` where each shot is independent.
     level : float
@@ -57,6 +65,7 @@ class Comparison:
     truth: Mapping[str, Estimate]
     sigma: Mapping[str, float]
     correlation: CorrelationError
+    magnetisation: MagnetisationError
     floor: NoiseFloor
     fidelity: Fidelity | Refusal
     pairs: PairTable
@@ -64,6 +73,7 @@ class Comparison:
     notes: tuple[str, ...]
     instance: str
     duration: float
+    has_fields: bool
     n_sites: int
     n_shots: int
     n_clusters: int
@@ -78,6 +88,14 @@ class Comparison:
     def verdict(self) -> str | None:
         """Accept, reject or inconclusive; None without limits."""
         return None if self.decision is None else self.decision.outcome
+
+    @property
+    def reservation(self) -> str:
+        """What an acceptance must not be read without: a likelihood that excludes the truth; else empty."""
+        sigma = self.sigma.get("log_likelihood", 0.0)
+        if self.verdict != "accept" or sigma >= EXCLUDED:
+            return ""
+        return f"the log-likelihood lies {-sigma:.0f} standard errors below a perfect processor's"
 
     def __repr__(self) -> str:
         """Return the main figure in angle brackets."""
@@ -117,6 +135,10 @@ class Comparison:
         lines += [f"note: {note}" for note in (*refused, *self.notes)]
         if self.decision is not None:
             lines.append(str(self.decision))
+        if self.reservation:
+            lines.append(
+                f"  but {self.reservation}: within these limits, the samples do not come from the true distribution"
+            )
         return "\n".join(lines)
 
 

@@ -71,6 +71,12 @@ class CorrelationError:
         side = 0.5 + level / 2
         return self.lower(side), self.upper(side)
 
+    def edges(self, limit: float) -> tuple[float, float]:
+        """Return the squared distance up to which the limit is kept, and the one beyond which it is exceeded."""
+        norm = np.sqrt(self.truth_squares)
+        accepting = max(limit * (norm - self.num) - self.num, 0.0) ** 2
+        return float(accepting), float((limit * (norm + self.num) + self.num) ** 2)
+
     def estimate(self) -> Estimate:
         """Return the value with its errors; `stat` is half the 68 % interval, since the law of eps is not gaussian."""
         side = 0.5 + ONE_SIGMA / 2

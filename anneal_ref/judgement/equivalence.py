@@ -6,12 +6,13 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from statistics import NormalDist
+from typing import Protocol
 
 from scipy import optimize
 
 from anneal_ref.base.checks import integer, number, positive
 from anneal_ref.base.errors import InputError
-from anneal_ref.judgement.correlation_error import CorrelationError
+from anneal_ref.judgement.squared_distance import SquaredDistance
 
 POWER = 0.8
 """Chance with which the predicted number of shots settles an inconclusive verdict."""
@@ -37,6 +38,11 @@ class Acceptance:
     residual_energy, order_parameter : float, optional
         Largest allowed distance of the residual energy per spin (units of J) and of the order parameter q2 from
         the truth.
+    magnetisation_error : float, optional
+        Largest allowed root mean square over sites of (measured <Z> - true <Z>). With fields the correlation error is
+        that of connected correlations, which do not see <Z>; an instance with fields is therefore always held
+        against a limit on <Z> too, by default the one on the correlation error. Without fields there is such a
+        test only where the limit is given.
     level : float
         Confidence of each verdict, between 0.5 and 1: a processor exactly at a limit is accepted, and is rejected,
         with a chance of at most 1 - level.
@@ -46,10 +52,11 @@ class Acceptance:
     residual_energy: float | None = None
     order_parameter: float | None = None
     level: float = 0.95
+    magnetisation_error: float | None = None
 
     def __post_init__(self) -> None:
         """Check the limits."""
-        for name in ("correlation_error", "residual_energy", "order_parameter"):
+        for name in ("correlation_error", "magnetisation_error", "residual_energy", "order_parameter"):
             value = getattr(self, name)
             if value is not None or name == "correlation_error":
                 object.__setattr__(self, name, positive(name, value))
@@ -57,11 +64,12 @@ class Acceptance:
         if level in (0.5, 1.0):
             raise InputError(f"level must lie strictly between 0.5 and 1; got {level}")
 
-    @property
-    def limits(self) -> dict[str, float]:
-        """The limits that are set, by name."""
+    def limits(self, fields: bool) -> dict[str, float]:
+        """Return the limits that hold for instances with or without fields, by name."""
+        magnetisation = self.magnetisation_error
         named = {
             "correlation_error": self.correlation_error,
+            "magnetisation_error": self.correlation_error if fields and magnetisation is None else magnetisation,
             "residual_energy": self.residual_energy,
             "order_parameter": self.order_parameter,
         }
@@ -137,19 +145,42 @@ def outcome_of(low: float, high: float, limit: float) -> str:
     return "reject" if low > limit else "inconclusive"
 
 
-def judge_correlation_error(
-    error: CorrelationError,
+class SquareRoot(Protocol):
+    """An error that is the root of a squared distance: of correlations, or of magnetisations."""
+
+    @property
+    def distance(self) -> SquaredDistance:
+        """The squared distance behind it."""
+
+    @property
+    def num(self) -> float:
+        """The truth's numerical error."""
+
+    def lower(self, level: float) -> float:
+        """Return a one-sided lower bound."""
+
+    def upper(self, level: float) -> float:
+        """Return a one-sided upper bound."""
+
+    def edges(self, limit: float) -> tuple[float, float]:
+        """Return the squared distances that accept up to, and reject from."""
+
+
+def judge_error(
+    name: str,
+    error: SquareRoot,
     limit: float,
     shots: int,
     acceptance_level: float = 0.95,
     tests: int = 1,
     unit: str = "shots",
 ) -> Finding:
-    """Hold a correlation error against its limit.
+    """Hold a correlation or magnetisation error against its limit.
 
     Parameters
     ----------
-    error : CorrelationError
+    name : str
+    error : CorrelationError or MagnetisationError
     limit : float
     shots : int
         Number of shots behind it, for the prediction.
@@ -163,11 +194,9 @@ def judge_correlation_error(
     low, high = error.lower(1 - (1 - acceptance_level) / tests), error.upper(acceptance_level)
     outcome = outcome_of(low, high, limit)
     if outcome != "inconclusive":
-        return Finding("correlation_error", limit, low, high, outcome)
-    norm, num = math.sqrt(error.truth_squares), error.num
+        return Finding(name, limit, low, high, outcome)
     present = max(error.distance.value, 0.0)
-    accepting = max(limit * (norm - num) - num, 0.0) ** 2
-    rejecting = (limit * (norm + num) + num) ** 2
+    accepting, rejecting = error.edges(limit)
 
     def margin(edge: float, alpha: float) -> Callable[[float], float]:
         quantile, reserve = _normal(1 - alpha), _normal(POWER)
@@ -178,11 +207,11 @@ def judge_correlation_error(
         )
 
     alpha = 1 - acceptance_level
-    if num > 0 and accepting <= present <= rejecting:
-        return Finding("correlation_error", limit, low, high, outcome, None, _TRUTH_LIMITS)
+    if error.num > 0 and accepting <= present <= rejecting:
+        return Finding(name, limit, low, high, outcome, None, _TRUTH_LIMITS)
     side = margin(accepting, alpha) if present < accepting else margin(rejecting, alpha / tests)
     more_shots, advice = _needed(side, shots, unit)
-    return Finding("correlation_error", limit, low, high, outcome, more_shots, advice)
+    return Finding(name, limit, low, high, outcome, more_shots, advice)
 
 
 def judge_distance(
@@ -207,7 +236,7 @@ def judge_distance(
     limit : float
         Largest allowed distance.
     shots, acceptance_level, tests, unit
-        As in `judge_correlation_error`.
+        As in `judge_error`.
     quantile : callable
         Quantile function of difference/stat; the normal one, or Student's where few clusters stand behind `stat`.
 

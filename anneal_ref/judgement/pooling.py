@@ -12,7 +12,8 @@ from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Score
 from anneal_ref.judgement.comparison import Comparison
 from anneal_ref.judgement.correlation_error import CorrelationError
-from anneal_ref.judgement.equivalence import Acceptance, Decision, decide, judge_correlation_error
+from anneal_ref.judgement.equivalence import Acceptance, Decision, SquareRoot, decide, judge_error
+from anneal_ref.judgement.magnetisation_error import MagnetisationError
 from anneal_ref.judgement.perfect import NoiseFloor
 from anneal_ref.judgement.scores import correlation_score
 
@@ -28,6 +29,10 @@ class Pooled:
         instances; `disorder` is the standard error that the finite number of instances leaves if they stand for their
         ensemble, without the part that shots make; None for a single instance.
     correlation : CorrelationError
+    magnetisation : MagnetisationError
+        Over the instances with fields; over all where none has fields.
+    has_fields : bool
+        Whether any instance has.
     floor : NoiseFloor
     decision : Decision or None
         For these instances; if limits were given.
@@ -36,6 +41,8 @@ class Pooled:
 
     score: Score
     correlation: CorrelationError
+    magnetisation: MagnetisationError
+    has_fields: bool
     floor: NoiseFloor
     decision: Decision | None
     n_instances: int
@@ -55,6 +62,9 @@ class Pooled:
             f"  plain, with the noise of the shots: {self.correlation.raw:.3g}; a perfect processor "
             f"{self.floor.raw_mean:.3g}, in 95 of 100 runs below {self.floor.raw_quantile:.3g}",
         ]
+        if self.has_fields:
+            low, high = self.magnetisation.interval(self.score.level)
+            lines.append(f"  magnetisation error: {self.magnetisation.value:.3g} ({low:.3g} to {high:.3g})")
         return "\n".join(lines if self.decision is None else [*lines, str(self.decision)])
 
 
@@ -69,7 +79,8 @@ def pool(comparisons: Sequence[Comparison], acceptance: Acceptance | None = None
     comparisons : sequence of Comparison
         From independent samples.
     acceptance : Acceptance, optional
-        The limit on the correlation error is held against the pooled one.
+        The limits on the correlation error and, with fields, on the magnetisation error are held against the pooled
+        ones.
     level : float
         Of the interval.
 
@@ -84,6 +95,8 @@ def pool(comparisons: Sequence[Comparison], acceptance: Acceptance | None = None
         raise InputError("each comparison may enter a pool once; one came twice")
     level = number("level", level, 0.0, 1.0)
     error = CorrelationError.total([one.correlation for one in comparisons])
+    has_fields = any(one.has_fields for one in comparisons)
+    magnetisation = MagnetisationError.total([one.magnetisation for one in comparisons if one.has_fields == has_fields])
     floor = NoiseFloor.total([one.floor for one in comparisons])
     by_instance: dict[str, list[CorrelationError]] = {}
     for one in comparisons:
@@ -94,10 +107,17 @@ def pool(comparisons: Sequence[Comparison], acceptance: Acceptance | None = None
     if acceptance is not None:
         grouped = any(one.n_clusters < one.n_shots for one in comparisons)
         unit = "shots in new gauges or batches, spread as these" if grouped else "shots, spread as these"
-        finding = judge_correlation_error(error, acceptance.correlation_error, shots, acceptance.level, 1, unit)
-        decision = decide([finding], acceptance.level)
+        held: dict[str, SquareRoot] = {"correlation_error": error, "magnetisation_error": magnetisation}
+        limits = {name: limit for name, limit in acceptance.limits(has_fields).items() if name in held}
+        decision = decide(
+            [
+                judge_error(name, held[name], limits[name], shots, acceptance.level, len(limits), unit)
+                for name in limits
+            ],
+            acceptance.level,
+        )
     score = correlation_score(error, floor, level, disorder_error(instances))
-    return Pooled(score, error, floor, decision, len(instances), len(comparisons), shots)
+    return Pooled(score, error, magnetisation, has_fields, floor, decision, len(instances), len(comparisons), shots)
 
 
 def disorder_error(instances: Sequence[CorrelationError]) -> float | None:

@@ -10,10 +10,11 @@ from scipy import special
 
 from anneal_ref.base.estimate import Estimate, Score
 from anneal_ref.judgement.clusters import Clusters
-from anneal_ref.judgement.correlation_error import ONE_SIGMA, CorrelationError
-from anneal_ref.judgement.likelihood import log_likelihood, outside, tempered
+from anneal_ref.judgement.correlation_error import CorrelationError
+from anneal_ref.judgement.likelihood import cautious, log_likelihood, outside, tempered
+from anneal_ref.judgement.magnetisation_error import MagnetisationError
 from anneal_ref.judgement.perfect import NoiseFloor, Perfect, Repetitions
-from anneal_ref.judgement.squared_distance import PSEUDO_SHOTS, pair_distance, site_distance
+from anneal_ref.judgement.squared_distance import PSEUDO_SHOTS, pair_distance
 from anneal_ref.observe.observables import problem_energy, q2
 
 if TYPE_CHECKING:
@@ -89,25 +90,12 @@ def order_parameter_score(
     return score, target
 
 
-def magnetisation_score(
-    spins: NDArray[np.int8], truth: Estimate, clusters: Clusters, repetitions: Repetitions, level: float
-) -> Score:
-    """Return the root mean square over sites of the difference in <Z>.
-
-    Shot noise is taken out of the mean square, and the sign is as for the correlation error. The floor is the 95 %
-    quantile of a perfect processor.
-    """
-    n = len(truth.value)
-    distance = site_distance(spins, truth.value, clusters)
-    num = float(np.sqrt(np.mean(truth.num**2)))
-    side, one = 0.5 + level / 2, 0.5 + ONE_SIGMA / 2
-    low, high = np.sqrt(distance.lower(side) / n), np.sqrt(distance.upper(side) / n)
-    stat = (np.sqrt(distance.upper(one) / n) - np.sqrt(distance.lower(one) / n)) / 2
-    estimate = Estimate(_signed_root(distance.value / n), stat, num, "samples")
+def magnetisation_score(error: MagnetisationError, repetitions: Repetitions, level: float) -> Score:
+    """Return the magnetisation error as a score; the floor is the 95 % quantile of a perfect processor."""
     floor = Estimate(
         _signed_root(float(np.quantile(repetitions.magnetisation, 0.95))), how="perfect processor, 95 % quantile"
     )
-    return Score("magnetisation_error", estimate, float(max(low - num, 0.0)), float(high + num), level, floor)
+    return Score("magnetisation_error", error.estimate(), *error.interval(level), level, floor)
 
 
 def likelihood_score(
@@ -125,6 +113,7 @@ def likelihood_score(
     stat = 0.0 if stored else np.sqrt(variance / len(ideal))
     expected = Estimate(perfect.mean(ideal), stat, how="reference")
     score, z = log_likelihood(tempered(measured, n), expected, float(np.sqrt(variance)), clusters, level)
+    z = cautious(z, float(score.value), len(spins), ideal, perfect.weights)
     return score, z, outside(measured, n)
 
 

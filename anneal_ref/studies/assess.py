@@ -2,7 +2,9 @@
 
 The rule. At each duration the correlation error is pooled over the instances and held against the limit of the study,
 as an equivalence test; optional limits hold for the residual energy and the order parameter, averaged over the
-instances. The processor is accepted if every one of these findings accepts: each may use the full error probability
+instances. Where instances have fields, the correlation error is that of connected correlations, which do not see <Z>;
+the magnetisation error, pooled over these instances, then has a limit of its own, by default that of the correlation
+error. The processor is accepted if every one of these findings accepts: each may use the full error probability
 1 - level, because all of them have to be wrong together in the same direction. It is rejected if any finding rejects:
 there the error probability is divided by their number, because one wrong finding is enough. Everything else is
 inconclusive, and the findings say how many more shots would settle it.
@@ -24,7 +26,7 @@ from anneal_ref.base.provenance import provenance
 from anneal_ref.base.run import Run
 from anneal_ref.judgement.compare import compare
 from anneal_ref.judgement.comparison import Comparison
-from anneal_ref.judgement.equivalence import Decision, Finding, decide, judge_correlation_error, judge_distance
+from anneal_ref.judgement.equivalence import Decision, Finding, SquareRoot, decide, judge_distance, judge_error
 from anneal_ref.judgement.pooling import Pooled, pool
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.observe.samples import Samples
@@ -226,7 +228,7 @@ def assess(
     pooled = tuple(
         (at, pool([one.comparison for one in group], acceptance, acceptance.level)) for at, group in groups.items()
     )
-    tests = len(durations) * len(acceptance.limits)
+    tests = sum(len(acceptance.limits(one.has_fields)) for _, one in pooled)
     findings = tuple((at, finding) for at, group in pooled for finding in _findings(study, groups[at], group, tests))
     decision = decide([finding for _, finding in findings], acceptance.level)
     return Verdict(study, tuple(judged), pooled, decision, findings, provenance())
@@ -238,11 +240,13 @@ def _findings(study: Study, group: Sequence[Judged], pooled: Pooled, tests: int)
     grouped = any(one.comparison.n_clusters < one.comparison.n_shots for one in group)
     unit = "shots in new gauges or batches, spread as these" if grouped else "shots, spread as these"
     findings = []
-    for name, limit in acceptance.limits.items():
-        if name == "correlation_error":
-            findings.append(
-                judge_correlation_error(pooled.correlation, limit, pooled.n_shots, acceptance.level, tests, unit)
-            )
+    errors: dict[str, SquareRoot] = {
+        "correlation_error": pooled.correlation,
+        "magnetisation_error": pooled.magnetisation,
+    }
+    for name, limit in acceptance.limits(pooled.has_fields).items():
+        if name in errors:
+            findings.append(judge_error(name, errors[name], limit, pooled.n_shots, acceptance.level, tests, unit))
             continue
         scores = [one.comparison.scores[name].estimate for one in group]
         truths = [one.comparison.truth[name] for one in group]

@@ -74,6 +74,7 @@ class AcceptanceTable(Table):
     """`[acceptance]`: the limits that the processor must meet."""
 
     correlation_error: float = Field(gt=0)
+    magnetisation_error: float | None = Field(default=None, gt=0)
     residual_energy: float | None = Field(default=None, gt=0)
     order_parameter: float | None = Field(default=None, gt=0)
     level: float = Field(default=0.95, gt=0.5, lt=1)

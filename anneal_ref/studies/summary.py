@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from anneal_ref.base.estimate import Score
+from anneal_ref.judgement.comparison import EXCLUDED, Comparison
 from anneal_ref.judgement.equivalence import Finding
 from anneal_ref.judgement.fidelity import Refusal
 from anneal_ref.studies.study import time_unit
@@ -19,6 +20,7 @@ SCORE_HEADINGS = (
     "instance", "duration", "this case", "correlation error", "perfect <", "fidelity", "plain/perfect", "log-lik.",
     "perfect", "sigma",
 )  # fmt: skip
+FIELD_HEADINGS = ("<Z> error", "perfect <")
 ENERGY_HEADINGS = (
     "instance", "duration", "residual energy", "truth", "sigma", "q2", "truth", "sigma", "N", "shots",
 )  # fmt: skip
@@ -35,9 +37,9 @@ def summary(verdict: Verdict) -> str:
         f"{study.acceptance.correlation_error:g}",
         "",
     ]
-    lines += [aligned([SCORE_HEADINGS, *map(score_row, verdict.judged)], left=(0, 2)), ""]
+    lines += [aligned(score_table(verdict), left=(0, 2)), ""]
     lines += [aligned([ENERGY_HEADINGS, *map(energy_row, verdict.judged)]), ""]
-    lines += [aligned([POOLED_HEADINGS, *pooled_rows(verdict)], left=(0, 1)), ""]
+    lines += [aligned(pooled_table(verdict), left=(0, 1)), ""]
     lines.append("pairs of spins that depart most (adjusted p: all pairs of a case looked at together, Holm)")
     lines += [aligned([PAIR_HEADINGS, *worst_pairs(verdict)], left=(0, 1)), *suspects(verdict), ""]
     lines += [f"note: {note}" for note in notes(verdict)]
@@ -50,10 +52,49 @@ def summary(verdict: Verdict) -> str:
     )
     lines.append("sigma: (processor - truth) in standard errors; residual energy per spin in units of J")
     lines.append("plain/perfect: fidelity with the noise of shots left in, of the processor and of a perfect one")
+    if has_fields(verdict):
+        lines.append("with fields: correlation errors are those of <ZZ> - <Z><Z>, pairs are listed with plain <ZZ>;")
+        lines.append("<Z> error: root mean square over sites of (processor - truth), shot noise taken out")
     lines.append("disorder: what the finite number of instances adds if they stand for their whole ensemble")
     lines += ["log-lik.: log-likelihood per shot under the truth, in nats, beside what a perfect processor scores", ""]
     lines += [f"{WORDS[verdict.outcome]}. {sentences(verdict)[0]}", *sentences(verdict)[1:]]
     return "\n".join(lines)
+
+
+def has_fields(verdict: Verdict) -> bool:
+    """Return whether any instance has fields, so that <Z> is judged."""
+    return any(one.comparison.has_fields for one in verdict.judged)
+
+
+def score_table(verdict: Verdict) -> list[tuple[str, ...]]:
+    """Return headings and a row of scores for each case; with fields, two columns tell of <Z>."""
+    rows = [score_row(one) for one in verdict.judged]
+    if not has_fields(verdict):
+        return [SCORE_HEADINGS, *rows]
+    place = SCORE_HEADINGS.index("fidelity")
+    fields = [_field_cells(one.comparison) for one in verdict.judged]
+    return [
+        (*row[:place], *more, *row[place:])
+        for row, more in zip([SCORE_HEADINGS, *rows], [FIELD_HEADINGS, *fields], strict=True)
+    ]
+
+
+def _field_cells(result: Comparison) -> tuple[str, ...]:
+    score = result.scores["magnetisation_error"]
+    return (interval(score), floor_text(score)) if result.has_fields else ("-", "-")
+
+
+def pooled_table(verdict: Verdict) -> list[tuple[str, ...]]:
+    """Return headings and a row for each duration; with fields, a column tells of <Z>."""
+    rows = pooled_rows(verdict)
+    if not has_fields(verdict):
+        return [POOLED_HEADINGS, *rows]
+    place = POOLED_HEADINGS.index("disorder")
+    cells = [FIELD_HEADINGS[0]]
+    for _, pooled in verdict.pooled:
+        low, high = pooled.magnetisation.interval(pooled.score.level)
+        cells.append(f"{pooled.magnetisation.value:.3f} ({low:.3f} to {high:.3f})" if pooled.has_fields else "-")
+    return [(*row[:place], cell, *row[place:]) for row, cell in zip([POOLED_HEADINGS, *rows], cells, strict=True)]
 
 
 def score_row(one: Judged) -> tuple[str, ...]:
@@ -163,7 +204,7 @@ def sentences(verdict: Verdict) -> list[str]:
 def headline(verdict: Verdict) -> str:
     """Return in a sentence or two whether the processor meets its limits, where not, and by how much."""
     kinds = {kind: [one for one in verdict.findings if one[1].outcome == kind] for kind in WORDS}
-    limits = "the limit" if len(verdict.study.acceptance.limits) == 1 else "the limits"
+    limits = "the limit" if len({finding.name for _, finding in verdict.findings}) == 1 else "the limits"
     decisive = kinds[verdict.outcome]
     places = _places(verdict, decisive)
     if verdict.outcome == "accept":
@@ -178,7 +219,21 @@ def headline(verdict: Verdict) -> str:
     if kinds["accept"] and verdict.outcome != "accept":
         meets = f" At {_places(verdict, kinds['accept'])} it meets {limits}"
         text += f"{meets}: {_details(verdict, kinds['accept'])}."
-    return text
+    return f"{text}{_reservation(verdict)}"
+
+
+def _reservation(verdict: Verdict) -> str:
+    """Say that an accepted processor's samples are excluded by the truth, where their likelihood tells so."""
+    sigmas = {one.case.label: one.comparison.sigma.get("log_likelihood", 0.0) for one in verdict.judged}
+    excluded = [label for label, sigma in sigmas.items() if sigma < EXCLUDED]
+    if verdict.outcome != "accept" or not excluded:
+        return ""
+    worst = min(excluded, key=lambda label: sigmas[label])
+    return (
+        f" But within these limits it departs from the truth beyond doubt in {len(excluded)} of {len(sigmas)} cases: "
+        f"its samples are less likely than a perfect processor's, at worst by {-sigmas[worst]:.0f} standard errors "
+        f"({worst})."
+    )
 
 
 def _details(verdict: Verdict, findings: list[tuple[float, Finding]], most: int = 4) -> str:
@@ -210,7 +265,9 @@ def _said(finding: Finding) -> str:
     low, high, limit = (
         f"{100 * x:.3g} %" if relative else f"{x:.3g}" for x in (finding.low, finding.high, finding.limit)
     )
-    what = "pair correlations are off" if relative else f"the mean {finding.name.replace('_', ' ')} is off"
+    mean = "<Z> is off (root mean square over sites)" if finding.name == "magnetisation_error" else ""
+    mean = mean or f"the mean {finding.name.replace('_', ' ')} is off"
+    what = "pair correlations are off" if relative else mean
     if finding.outcome == "accept":
         return f"{what} by at most {high} (limit {limit})"
     if finding.outcome == "reject":

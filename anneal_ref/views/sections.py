@@ -13,12 +13,11 @@ from anneal_ref.studies.study import time_unit
 from anneal_ref.studies.summary import (
     ENERGY_HEADINGS,
     PAIR_HEADINGS,
-    POOLED_HEADINGS,
-    SCORE_HEADINGS,
     energy_row,
+    has_fields,
     notes,
-    pooled_rows,
-    score_row,
+    pooled_table,
+    score_table,
     sentences,
     suspects,
     worst_pairs,
@@ -28,6 +27,10 @@ from anneal_ref.views.content import Grid, Row, Section, picture
 
 MOST_LATTICES = 8
 MOST_ROWS = 40
+_CONNECTED = (
+    "For instances with fields the correlations are the connected ones, ⟨ZZ⟩ − ⟨Z⟩⟨Z⟩, which do not see ⟨Z⟩; the root "
+    "mean square error of ⟨Z⟩ over the sites, pooled over these instances, has a limit of its own."
+)
 
 
 def sections(verdict: Verdict) -> list[Section]:
@@ -50,7 +53,7 @@ def facts(verdict: Verdict) -> list[tuple[str, str]]:
         ("Shots", f"{shots} in {len(verdict.judged)} cases"),
         ("Limit on the correlation error", f"{limits.correlation_error:.1%}"),
     ]
-    for name, limit in limits.limits.items():
+    for name, limit in limits.limits(has_fields(verdict)).items():
         if name != "correlation_error":
             found.append((f"Limit on the {name.replace('_', ' ')}", f"{limit:g}"))
     found += [("Confidence", f"{limits.level:.0%}"), ("Largest error of the truth", f"{worst:.1g}")]
@@ -68,18 +71,20 @@ def _errors(verdict: Verdict) -> Section:
     findings += [finding for _, finding in verdict.findings]
     outcomes = [finding.outcome for finding in findings if finding.name == "correlation_error"]
     axes = plots.correlation_errors(labels, scores, verdict.study.acceptance.correlation_error, outcomes=outcomes)
+    pooled_heads, *pooled = pooled_table(verdict)
+    heads, *rows = score_table(verdict)
     less = "" if len(shown) == len(verdict.judged) else f" The {len(shown)} cases with the largest errors are drawn."
     return Section(
         "How far the processor departs from quantum dynamics",
         (
             "The correlation error is the distance between measured and true pair correlations, relative to the "
             "true ones, with the noise of the finite number of shots taken out. The verdict rests on the rows "
-            "pooled over all instances.",
+            "pooled over all instances." + (f" {_CONNECTED}" if has_fields(verdict) else ""),
             *sentences(verdict)[1:],
         ),
         (
-            Grid(_spelled(POOLED_HEADINGS), tuple(Row(cells, pooled=True) for cells in pooled_rows(verdict))),
-            Grid(_spelled(SCORE_HEADINGS), tuple(Row(score_row(one)) for one in verdict.judged), title="Every case"),
+            Grid(_spelled(pooled_heads), tuple(Row(cells, pooled=True) for cells in pooled)),
+            Grid(_spelled(heads), tuple(Row(cells) for cells in rows), title="Every case"),
         ),
         (
             picture(
@@ -125,7 +130,8 @@ def _agreement(verdict: Verdict) -> Section:
                 "are too weak.",
             )
         )
-    return Section("Correlations, processor against truth", pictures=tuple(pictures))
+    texts = ("Plain ⟨ZZ⟩, of instances with fields too.",) if has_fields(verdict) else ()
+    return Section("Correlations, processor against truth", texts, pictures=tuple(pictures))
 
 
 def _energies(verdict: Verdict) -> Section:
@@ -212,7 +218,7 @@ def _method(verdict: Verdict) -> Section:
     study, level = verdict.study, verdict.decision.level
     tolerance = study.table.truth.tolerance
     missed = [one.case.label for one in verdict.judged if one.reference.outcome != "converged"]
-    fields = any(one.reference.anneal.instance.has_fields for one in verdict.judged)
+    fields = has_fields(verdict)
     points = [
         "Truth: the Schrödinger equation with the given schedule, solved on the full state vector. Every case was "
         "solved at least three times with the step halved, and once with the sites in another order; the error bar "
@@ -240,7 +246,7 @@ def _method(verdict: Verdict) -> Section:
         "files.",
     ]
     if fields:
-        points.append("Instances with fields are scored by connected correlations, ⟨ZZ⟩ − ⟨Z⟩⟨Z⟩.")
+        points.append(f"{_CONNECTED} Pictures and tables of single pairs show the plain ⟨ZZ⟩.")
     if missed:
         points.append(
             f"Not converged to the tolerance, and judged with the error that was measured: {', '.join(missed)}."

@@ -141,7 +141,7 @@ def test_fields_score_connected_correlations(with_fields: Reference) -> None:
     upper = np.triu_indices(with_fields.n_sites, 1)
     assert result.correlation.truth_squares == pytest.approx(np.sum(connected[upper] ** 2))
     assert result.floor.truth_squares == pytest.approx(result.correlation.truth_squares, rel=1e-4)
-    assert any("<Z> is scored apart" in note for note in result.notes)
+    assert any("<Z> is judged apart" in note for note in result.notes)
     assert result.correlation_error.low == 0.0
     # the wrong twin, plain correlations, has another denominator
     assert result.correlation.truth_squares < 0.95 * np.sum(moments.zz.value[upper] ** 2)

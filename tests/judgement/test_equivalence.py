@@ -11,8 +11,8 @@ from anneal_ref.judgement.equivalence import (
     Acceptance,
     Finding,
     decide,
-    judge_correlation_error,
     judge_distance,
+    judge_error,
     outcome_of,
 )
 from anneal_ref.judgement.perfect import Perfect
@@ -57,7 +57,9 @@ def measure(processor: Perfect, shots: int, seed: int, num: float = 0.0) -> Corr
 
 def verdicts(eps: float, limit: float, shots: int, repeats: int = REPEATS) -> list[str]:
     processor = off_by(eps)
-    return [judge_correlation_error(measure(processor, shots, k), limit, shots).outcome for k in range(repeats)]
+    return [
+        judge_error("correlation_error", measure(processor, shots, k), limit, shots).outcome for k in range(repeats)
+    ]
 
 
 def test_three_outcomes() -> None:
@@ -89,11 +91,13 @@ def test_power() -> None:
 def test_the_predicted_shots_settle_it() -> None:
     """An inconclusive verdict names the shots; with these, most repetitions are settled, and rightly."""
     processor, limit = off_by(0.06), 0.1
-    findings = [judge_correlation_error(measure(processor, 400, k), limit, 400) for k in range(60)]
+    findings = [judge_error("correlation_error", measure(processor, 400, k), limit, 400) for k in range(60)]
     needed = [one.more_shots for one in findings if one.more_shots is not None]
     assert len(needed) > 50
     shots = 400 + int(np.median(needed))
-    again = [judge_correlation_error(measure(processor, shots, 100 + k), limit, shots).outcome for k in range(200)]
+    again = [
+        judge_error("correlation_error", measure(processor, shots, 100 + k), limit, shots).outcome for k in range(200)
+    ]
     assert 0.65 < again.count("accept") / 200 < 0.95
     assert again.count("reject") <= 2
     assert "more shots" in next(one.advice for one in findings if one.more_shots is not None)
@@ -101,24 +105,26 @@ def test_the_predicted_shots_settle_it() -> None:
 
 def test_a_blunt_truth_cannot_be_settled_by_shots() -> None:
     # correlations are known to 0.02 each: about as much as the distance from the limit
-    finding = judge_correlation_error(measure(off_by(0.05), 20_000, 1, num=0.02), 0.07, 20_000)
+    finding = judge_error("correlation_error", measure(off_by(0.05), 20_000, 1, num=0.02), 0.07, 20_000)
     assert finding.outcome == "inconclusive"
     assert finding.more_shots is None
     assert "refine the reference" in finding.advice
-    sharp = judge_correlation_error(measure(off_by(0.05), 20_000, 1), 0.07, 20_000)
+    sharp = judge_error("correlation_error", measure(off_by(0.05), 20_000, 1), 0.07, 20_000)
     assert sharp.outcome == "accept"
 
 
 def test_at_the_limit_no_number_is_named() -> None:
     error = measure(off_by(0.1), 2000, 3)
-    finding = judge_correlation_error(error, error.value, 2000)
+    finding = judge_error("correlation_error", error, error.value, 2000)
     assert finding.outcome == "inconclusive"
     assert finding.more_shots is None
     assert "so near the limit" in finding.advice
 
 
 def test_groups_are_named_in_the_advice() -> None:
-    finding = judge_correlation_error(measure(off_by(0.06), 400, 1), 0.1, 400, unit="shots in new gauges or batches")
+    finding = judge_error(
+        "correlation_error", measure(off_by(0.06), 400, 1), 0.1, 400, unit="shots in new gauges or batches"
+    )
     assert "new gauges" in finding.advice
 
 
@@ -172,7 +178,7 @@ def test_the_open_limits_decide_how_many_more_shots() -> None:
 
 
 def test_acceptance_checks_its_limits() -> None:
-    assert Acceptance(0.05, order_parameter=0.1).limits == {"correlation_error": 0.05, "order_parameter": 0.1}
+    assert Acceptance(0.05, order_parameter=0.1).limits(False) == {"correlation_error": 0.05, "order_parameter": 0.1}
     with pytest.raises(InputError, match="correlation_error must be a positive"):
         Acceptance(0.0)
     with pytest.raises(InputError, match="residual_energy must be a positive"):

@@ -6,7 +6,7 @@ from scipy import stats
 
 from anneal_ref.base.estimate import Estimate
 from anneal_ref.judgement.clusters import Clusters
-from anneal_ref.judgement.likelihood import MIXTURE, log_likelihood, outside, tempered
+from anneal_ref.judgement.likelihood import MIXTURE, cautious, log_likelihood, outside, tempered
 from anneal_ref.judgement.perfect import Perfect
 
 
@@ -64,3 +64,21 @@ def test_a_flat_truth_tells_nothing() -> None:
     score, z = log_likelihood(logs, Estimate(-np.log(64.0)), 0.0, Clusters.of(50))
     assert z == 0.0
     assert score.value == pytest.approx(-np.log(64.0))
+
+
+def test_one_rare_shot_is_no_certainty_and_a_gaussian_departure_stays() -> None:
+    weights = np.array([1 - 1e-5, 1e-5])
+    logs = np.log(weights)
+    deviation = float(np.sqrt(weights @ (logs - weights @ logs) ** 2))
+    one = (199 * logs[0] + logs[1]) / 200
+    plain = (one - weights @ logs) / (deviation / np.sqrt(200))
+    found = cautious(plain, one, 200, logs, weights)
+    assert plain < -20
+    # such a shot comes in 200 * 1e-5 of all experiments, 2.9 standard errors; the bound may say a little less or more
+    assert -np.sqrt(-2 * np.log(0.002)) - 1e-9 < found < -2.0
+    level = np.linspace(-6.0, -5.0, 64)
+    flat = np.full(64, 1 / 64)
+    for z in (-3.0, -8.0):
+        mean = float(level.mean() + z * level.std() / np.sqrt(4000))
+        assert cautious(z, mean, 4000, level, flat) == pytest.approx(z, rel=0.03)
+    assert cautious(2.0, -5.0, 4000, level, flat) == 2.0

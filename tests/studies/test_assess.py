@@ -16,6 +16,7 @@ from anneal_ref.base.run import Run
 from anneal_ref.judgement.fidelity import Fidelity, Refusal
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.model.instances import Instance
+from anneal_ref.model.lattice import Lattice
 from anneal_ref.observe.samples import Samples
 from anneal_ref.studies import assess as assess_module
 from anneal_ref.studies.archive import Archive
@@ -243,3 +244,69 @@ def test_gauges_are_undone_before_anything_is_compared(tmp_path: Path, truth: Ar
     assert [one.comparison.correlation_error.value for one in gauged.judged] == [
         one.comparison.correlation_error.value for one in expected.judged
     ]
+
+
+ISLANDS = """
+format = 1
+name = "two islands"
+durations = [1.0]
+[schedule]
+s = [0.0, 1.0]
+transverse = [12.0, 0.0]
+problem = [0.0, 6.0]
+[acceptance]
+correlation_error = 0.1
+{more}
+[[instance]]
+name = "islands"
+file = "islands.json"
+[[instance]]
+name = "ring"
+lattice = {{ kind = "chain", n = 5, periodic = true }}
+couplings = {{ law = "plus_minus" }}
+seed = 5
+[samples]
+files = "{{instance}}.npy"
+"""
+
+
+def islands(folder: Path, more: str = "", sign: int = 1) -> Study:
+    """Write a study with an instance of two islands, one with fields, whose spins may be turned over."""
+    edges = [[0, 1], [1, 2], [2, 3], [3, 4], [0, 4], [5, 6], [6, 7]]
+    lattice = Lattice(8, np.array(edges))
+    couplings = np.array([1.0, -0.7, 0.5, -1.0, 0.8, -0.4, -0.4])
+    Instance(lattice, couplings, fields=np.array([0.0] * 5 + [0.8, 0.6, 0.9])).write(folder / "islands.json")
+    path = folder / "study.toml"
+    path.write_text(ISLANDS.format(more=more))
+    for name in ("islands", "ring"):
+        (folder / f"{name}.npy").touch()
+    study = Study.read(path)
+    for k, case in enumerate(study.cases):
+        spins = StateVector().evolve(case.anneal).sample(4000, seed=k).spins.copy()
+        spins[:, 5:] *= sign
+        np.save(case.files[0], spins)
+    return study
+
+
+def test_fields_bring_a_limit_on_the_magnetisations(tmp_path: Path, truth: Archive) -> None:
+    good = assess(islands(tmp_path), truth, run=QUIET)
+    assert good.outcome == "accept"
+    assert [finding.name for _, finding in good.findings] == ["correlation_error", "magnetisation_error"]
+    assert "<Z> is off (root mean square over sites) by at most" in headline(good)
+    assert "But within" not in headline(good)
+    # pooled over the instance with fields alone, not watered down by the other one
+    assert good.pooled[0][1].magnetisation.n_sites == 8
+    bad = assess(islands(tmp_path, sign=-1), truth, run=QUIET)
+    assert bad.outcome == "reject"
+    assert [finding.name for _, finding in bad.findings if finding.outcome == "reject"] == ["magnetisation_error"]
+    lines = str(bad).splitlines()
+    assert sum("<Z> error" in line for line in lines if line.startswith(("instance", "pooled"))) == 2
+    row = next(line for line in lines if line.startswith("ring "))
+    assert row.split("accept")[1].count(" - ") >= 1
+
+
+def test_an_acceptance_that_the_likelihood_contradicts_says_so_at_once(tmp_path: Path, truth: Archive) -> None:
+    verdict = assess(islands(tmp_path, more="magnetisation_error = 1.9", sign=-1), truth, run=QUIET)
+    assert verdict.outcome == "accept"
+    assert "But within these limits it departs from the truth beyond doubt in 1 of 2 cases" in headline(verdict)
+    assert "<Z> error" not in str(assess(write(tmp_path), truth, run=QUIET))

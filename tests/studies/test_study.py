@@ -54,7 +54,7 @@ def test_a_product_of_instances_and_durations(folder: Path) -> None:
     assert [len(case.files) for case in study.cases] == [2, 1]
     assert study.cases[0].samples().n_groups == 2
     assert study.cases[1].samples().spins[0].tolist() == [1, 1, -1, 1]
-    assert study.acceptance.limits == {"correlation_error": 0.1}
+    assert study.acceptance.limits(False) == {"correlation_error": 0.1}
     assert study.table.truth.tolerance == 1e-3
 
 
