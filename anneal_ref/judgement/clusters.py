@@ -11,7 +11,7 @@ from numpy.typing import ArrayLike, NDArray
 from anneal_ref.base.checks import finite, integer
 from anneal_ref.base.errors import InputError
 
-FEW = 8
+FEW = 16
 """Below this number of clusters an interval made of their scatter is wide and itself uncertain."""
 
 

@@ -118,7 +118,8 @@ def compare(
     notes = _first_notes(reference, samples, clusters)
 
     scores: dict[str, Score] = {}
-    correlation = correlation_error(spins, moments, samples.groups, connected)
+    site_scatter, pair_scatter = perfect.scatter(connected)
+    correlation = correlation_error(spins, moments, samples.groups, connected, pair_scatter)
     repetitions = repeat(perfect, len(spins), seeds, connected)
     floor = repetitions.floor
     scores["correlation_error"] = correlation_score(correlation, floor, level)
@@ -139,7 +140,7 @@ def compare(
     truth = {score.name: target for score, target in energies}
     scores |= {score.name: score for score, _ in energies}
     sigma = {score.name: standard_errors(score.estimate, target) for score, target in energies}
-    magnetisation = magnetisation_error(spins, moments.z, clusters)
+    magnetisation = magnetisation_error(spins, moments.z, clusters, site_scatter)
     scores["magnetisation_error"] = magnetisation_score(magnetisation, repetitions, level)
 
     if connected and table is not None and len(spins) * (1 - float(table.max())) < RARE:

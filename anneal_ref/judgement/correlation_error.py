@@ -97,7 +97,11 @@ class CorrelationError:
 
 
 def correlation_error(
-    spins: ArrayLike, truth: Moments, groups: ArrayLike | None = None, connected: bool = False
+    spins: ArrayLike,
+    truth: Moments,
+    groups: ArrayLike | None = None,
+    connected: bool = False,
+    scatter: NDArray[np.float64] | None = None,
 ) -> CorrelationError:
     """Return the correlation error of samples.
 
@@ -115,6 +119,9 @@ def correlation_error(
         Shots of one group are not independent of each other.
     connected : bool
         Score <Z_i Z_j> - <Z_i><Z_j>; for instances with fields.
+    scatter : ndarray, shape (n_pairs, n_pairs), optional
+        Covariance for one shot of the truth, of the products Z_i Z_j or of the centred ones: a lower bound never rests
+        on less noise than this makes.
 
     Raises
     ------
@@ -137,7 +144,7 @@ def correlation_error(
     if squares == 0:
         raise InputError("the truth has no correlations, so that an error relative to them means nothing")
     measure = connected_distance if connected else pair_distance
-    distance = measure(array, target, clusters)
+    distance = measure(array, target, clusters, scatter)
     return CorrelationError(distance, squares, float(np.sqrt(np.sum(num[first, second] ** 2))))
 
 

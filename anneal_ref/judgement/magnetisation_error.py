@@ -77,7 +77,9 @@ class MagnetisationError:
         )
 
 
-def magnetisation_error(spins: NDArray[np.int8], truth: Estimate, clusters: Clusters) -> MagnetisationError:
+def magnetisation_error(
+    spins: NDArray[np.int8], truth: Estimate, clusters: Clusters, scatter: NDArray[np.float64] | None = None
+) -> MagnetisationError:
     """Return the magnetisation error of samples.
 
     Parameters
@@ -87,6 +89,8 @@ def magnetisation_error(spins: NDArray[np.int8], truth: Estimate, clusters: Clus
         True <Z_i> with their numerical errors measured.
     clusters : Clusters
         Which shots belong together.
+    scatter : ndarray, shape (n_sites, n_sites), optional
+        Covariance of the Z_i for one shot of the truth: a lower bound never rests on less noise than this makes.
 
     Examples
     --------
@@ -96,5 +100,5 @@ def magnetisation_error(spins: NDArray[np.int8], truth: Estimate, clusters: Clus
     0.913
     """
     return MagnetisationError(
-        site_distance(spins, truth.value, clusters), len(truth.value), float(np.sqrt(np.sum(truth.num**2)))
+        site_distance(spins, truth.value, clusters, scatter), len(truth.value), float(np.sqrt(np.sum(truth.num**2)))
     )

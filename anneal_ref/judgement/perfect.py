@@ -52,6 +52,17 @@ class Perfect:
         states = self.spins.astype(np.float64)
         return self.weights @ states, (states.T * self.weights) @ states
 
+    def scatter(self, connected: bool) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Return the covariance for one shot of the Z_i, and that of the Z_i Z_j, i < j, centred if `connected`."""
+        first, second = np.triu_indices(self.spins.shape[1], 1)
+        states, mean = self.spins.astype(np.float64), self.moments()[0]
+        pairs = states - mean if connected else states
+        return self._covariance(states), self._covariance(pairs[:, first] * pairs[:, second])
+
+    def _covariance(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
+        away = values - self.weights @ values
+        return np.asarray((away.T * self.weights) @ away)
+
     def experiments(
         self, shots: int, replicas: int, seed: list[int]
     ) -> Iterator[tuple[NDArray[np.float64], NDArray[np.float64]]]:

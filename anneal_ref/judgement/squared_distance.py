@@ -19,7 +19,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -55,6 +55,9 @@ class SquaredDistance:
         Traces of V, V^2 and V^3, freed of the bias that powers of an estimated V have.
     freedom : float
         Degrees of freedom behind V: clusters minus one (the effective number where their sizes differ).
+    least : tuple of three floats
+        The same traces for independent shots of the truth, below which those behind a lower bound do not go: shots
+        that by luck saw none of the rare events would otherwise take the first one for a departure. 0 if not known.
     """
 
     noise: float
@@ -62,6 +65,7 @@ class SquaredDistance:
     squares: NDArray[np.float64]
     traces: tuple[float, float, float]
     freedom: float
+    least: tuple[float, float, float] = (0.0, 0.0, 0.0)
 
     @property
     def raw(self) -> float:
@@ -77,6 +81,7 @@ class SquaredDistance:
     def total(cls, distances: Sequence[SquaredDistance]) -> SquaredDistance:
         """Return the distance between the joined vectors of one or more independent sets of data."""
         traces = np.sum([one.traces for one in distances], axis=0)
+        least = np.sum([one.least for one in distances], axis=0)
         # Welch (1947) and Satterthwaite (1946): each part counts by its share of the variance
         parts = sum(one.traces[1] ** 2 / one.freedom for one in distances)
         return cls(
@@ -85,6 +90,7 @@ class SquaredDistance:
             frozen(np.concatenate([one.squares for one in distances])),
             (float(traces[0]), float(traces[1]), float(traces[2])),
             float(traces[1] ** 2 / parts),
+            (float(least[0]), float(least[1]), float(least[2])),
         )
 
     def variance(self, theta: float, more: float = 1.0) -> float:
@@ -115,6 +121,10 @@ class SquaredDistance:
 
     def lower(self, level: float) -> float:
         """Return a one-sided lower bound on the true squared distance; 0 if 0 is not excluded."""
+        traces = self.traces
+        if any(own < least for own, least in zip(traces, self.least, strict=True)):
+            one, two, three = (max(pair) for pair in zip(traces, self.least, strict=True))
+            return replace(self, traces=(one, two, three), least=(0.0, 0.0, 0.0)).lower(level)
         return self._crossing(lambda tilt: self._tail(tilt, self.value, upper_tail=True) - (1 - level))
 
     def _forms(self, tilt: float) -> tuple[float, float, float]:
@@ -142,8 +152,9 @@ class SquaredDistance:
         shape = float(min(shape, 1e8))
         place = float(max(shape + (value - theta) * math.sqrt(shape / variance), 0.0))
         p = float(special.gammaincc(shape, place) if upper_tail else special.gammainc(shape, place))
-        # the variance itself is estimated: Student's tail in place of the normal one
-        return float(special.stdtr(f, float(special.ndtri(p)))) if 0 < p < 1 else p
+        # the variance itself is estimated: Student's tail in place of the normal one, with half the freedom, because
+        # the direction of delta is found by the same few clusters
+        return float(special.stdtr(f / 2, float(special.ndtri(p)))) if 0 < p < 1 else p
 
     def _tilt(self, theta: float) -> float:
         """Tilt that belongs to theta."""
@@ -172,7 +183,9 @@ class SquaredDistance:
         return self._forms(float(optimize.brentq(rising, low, low + step, xtol=1e-9)))[0]
 
 
-def pair_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters) -> SquaredDistance:
+def pair_distance(
+    spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters, scatter: NDArray[np.float64] | None = None
+) -> SquaredDistance:
     """Squared distance of measured <Z_i Z_j>, i < j, from their true values.
 
     Parameters
@@ -181,13 +194,20 @@ def pair_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clusters:
     truth : (n_sites, n_sites) array
     clusters : Clusters
         Which shots belong together.
+    scatter : (n_pairs, n_pairs) array, optional
+        Covariance of the Z_i Z_j for one shot of the truth; see `least` of `SquaredDistance`.
     """
     first, second = np.triu_indices(spins.shape[1], 1)
-    return _distance(spins, truth[first, second], clusters, lambda s: s[:, first] * s[:, second], _Random(0.0))
+    return _distance(spins, truth[first, second], clusters, lambda s: s[:, first] * s[:, second], _Random(0.0), scatter)
 
 
-def connected_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters) -> SquaredDistance:
-    """Squared distance of measured <Z_i Z_j> - <Z_i><Z_j>, i < j, from their true values; parameters as above."""
+def connected_distance(
+    spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters, scatter: NDArray[np.float64] | None = None
+) -> SquaredDistance:
+    """Squared distance of measured <Z_i Z_j> - <Z_i><Z_j>, i < j, from their true values; parameters as above.
+
+    `scatter` is the covariance of (Z_i - <Z_i>)(Z_j - <Z_j>) for one shot of the truth, if known.
+    """
     first, second = np.triu_indices(spins.shape[1], 1)
     mean = spins.mean(axis=0)
     # the product of two measured means is too large by their covariance on average
@@ -203,12 +223,14 @@ def connected_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clus
     rows = np.arange(len(first))
     lean[rows, first], lean[rows, second] = mean[second], mean[first]
     random = _Random(mean[first] * mean[second] + excess, lean)
-    return _distance(spins, truth[first, second], clusters, features, random)
+    return _distance(spins, truth[first, second], clusters, features, random, scatter)
 
 
-def site_distance(spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters) -> SquaredDistance:
-    """Squared distance of measured <Z_i> from their true values, shape (n_sites,)."""
-    return _distance(spins, truth, clusters, lambda s: s, _Random(0.0))
+def site_distance(
+    spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters, scatter: NDArray[np.float64] | None = None
+) -> SquaredDistance:
+    """Squared distance of measured <Z_i> from their true values, by site; `scatter` is the true one-shot covariance."""
+    return _distance(spins, truth, clusters, lambda s: s, _Random(0.0), scatter)
 
 
 @dataclass(frozen=True, slots=True)
@@ -226,7 +248,12 @@ class _Random:
 
 
 def _distance(
-    spins: NDArray[np.int8], truth: NDArray[np.float64], clusters: Clusters, features: Features, random: _Random
+    spins: NDArray[np.int8],
+    truth: NDArray[np.float64],
+    clusters: Clusters,
+    features: Features,
+    random: _Random,
+    scatter: NDArray[np.float64] | None = None,
 ) -> SquaredDistance:
     size = truth.size
     total, square, weighted = np.zeros(size), np.zeros((size, size)), np.zeros(size)
@@ -250,7 +277,13 @@ def _distance(
         frozen((vectors.T @ d) ** 2),
         _traces(padded, f),
         f,
+        (0.0, 0.0, 0.0) if scatter is None else _plain_traces(scatter / shots),
     )
+
+
+def _plain_traces(covariance: NDArray[np.float64]) -> tuple[float, float, float]:
+    square = covariance @ covariance
+    return float(np.trace(covariance)), float(np.trace(square)), float(np.sum(square * covariance))
 
 
 def _traces(covariance: NDArray[np.float64], freedom: float) -> tuple[float, float, float]:

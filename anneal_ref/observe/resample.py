@@ -26,8 +26,8 @@ from anneal_ref.base.estimate import Estimate
 from anneal_ref.observe.evaluating import evaluate
 from anneal_ref.observe.moments import Moments
 
-FEW_GROUPS = 8
-"""Below this number of groups their spread, and so every error made of it, is itself known to 27 % at best."""
+FEW_GROUPS = 16
+"""Below this number of groups their spread, and so every error made of it, is itself known to 18 % at best."""
 
 PSEUDO_SHOTS = 4
 """Uniformly random shots imagined beside the measured ones where these show no scatter (Agresti and Coull 1998)."""

@@ -330,3 +330,28 @@ def test_coverage_with_gauges_that_differ(n_groups: int) -> None:
     assert grouped_misses(True, n_groups, 1000) <= ALLOWED
     # treating the shots as independent takes the scatter of the gauges for an error of the processor
     assert grouped_misses(False, n_groups, 1000) > ALLOWED
+
+
+def test_rare_events_that_were_not_seen_do_not_make_a_departure() -> None:
+    """Samples of a frozen truth with fields: few shots leave the ground state, and their own scatter says nothing."""
+    n, shots = 4, 200
+    s, upper = states(n).astype(float), np.triu_indices(n, 1)
+    rng = np.random.default_rng(4)
+    energy = (s[:, upper[0]] * s[:, upper[1]]) @ rng.normal(size=6) + s @ (0.5 * rng.normal(size=n))
+    p = np.exp(-2 * energy)
+    p /= p.sum()
+    z = p @ s
+    features = (s - z)[:, upper[0]] * (s - z)[:, upper[1]]
+    truth = np.zeros((n, n))
+    truth[upper] = p @ features
+    away = features - p @ features
+    scatter = (away.T * p) @ away
+    plain, safe = 0, 0
+    for k in range(REPEATS):
+        spins = draw(p, shots, np.random.default_rng(k))
+        plain += connected_distance(spins, truth, Clusters.of(shots)).lower(0.95) > 0
+        safe += connected_distance(spins, truth, Clusters.of(shots), scatter).lower(0.95) > 0
+    allowed = stats.binom.isf(1e-4, REPEATS, 0.05)
+    assert safe <= allowed
+    # the wrong twin trusts what it saw
+    assert plain > allowed
