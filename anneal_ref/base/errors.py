@@ -6,6 +6,7 @@ so that it can come back from a worker process with what it carries.
 
 from __future__ import annotations
 
+import errno
 from typing import Any
 
 
@@ -110,3 +111,32 @@ class ArchiveError(AnnealRefError, OSError):
 
 class AnnealRefWarning(UserWarning):
     """The one warning class: the result stands, but the user should know."""
+
+
+_WORDS = {
+    errno.EISDIR: "it is a folder, not a file",
+    errno.ENOTDIR: "a part of the path is not a folder",
+    errno.EEXIST: "something of that name is there already",
+    errno.ENOENT: "there is no such file or folder",
+    errno.EACCES: "permission is denied",
+    errno.EPERM: "permission is denied",
+    errno.EROFS: "it lies on a read-only disk",
+    errno.ENOSPC: "the disk is full",
+    errno.EDQUOT: "the quota of the disk is used up",
+    errno.ENAMETOOLONG: "the name is too long",
+    errno.ELOOP: "its links go round in a circle",
+    errno.EIO: "the disk reports an error",
+}
+
+
+def in_words(error: OSError | UnicodeDecodeError) -> str:
+    """Return what went wrong with a file, in words that fit into a sentence.
+
+    Examples
+    --------
+    >>> in_words(IsADirectoryError(errno.EISDIR, "Is a directory", "truth"))
+    'it is a folder, not a file'
+    """
+    if isinstance(error, UnicodeDecodeError):
+        return f"it is not text in UTF-8 (byte {error.start})"
+    return _WORDS.get(error.errno or 0) or error.strerror or str(error) or type(error).__name__

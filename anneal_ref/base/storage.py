@@ -23,7 +23,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from anneal_ref.base.checks import frozen
-from anneal_ref.base.errors import ArchiveError, InputError
+from anneal_ref.base.errors import ArchiveError, InputError, in_words
 from anneal_ref.base.identity import canonical
 from anneal_ref.base.provenance import library_version, now
 
@@ -188,7 +188,7 @@ def read_record(path: str | os.PathLike[str]) -> Record:
     try:
         content = path.read_bytes()
     except OSError as error:
-        raise _broken(path, f"it cannot be read ({error.strerror})", "check the path and its permissions") from error
+        raise _broken(path, f"it cannot be read ({in_words(error)})", "check the path and its permissions") from error
     image, seal = content[:-_SEAL_LENGTH], content[-_SEAL_LENGTH:]
     if not content.startswith(_SIGNATURE):
         raise _broken(path, "it is not an HDF5 file, or its beginning is damaged", _RESTORE)
@@ -326,7 +326,7 @@ def _broken(path: Path, problem: str, advice: str) -> ArchiveError:
 
 
 def _refused(path: Path, error: OSError) -> ArchiveError:
-    problem = error.strerror or str(error)
+    problem = in_words(error)
     return ArchiveError(
         f"cannot write {path}: {problem}; nothing of it was left behind; check that the folder exists, may be written "
         "and has room, or choose another one",

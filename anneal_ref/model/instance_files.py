@@ -10,7 +10,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from anneal_ref.base.errors import InputError
+from anneal_ref.base.errors import InputError, in_words
 
 FORMAT = "anneal_ref instance"
 VERSION = 1
@@ -42,7 +42,7 @@ def write_instance(path: str | os.PathLike[str], content: Mapping[str, Any], ide
         os.replace(part, target)
     except OSError as error:
         raise InputError(
-            f"cannot write {target}: {error.strerror or error}; choose a folder that exists and may be written"
+            f"cannot write {target}: {in_words(error)}; choose a folder that exists and may be written"
         ) from error
     finally:
         part.unlink(missing_ok=True)
@@ -84,7 +84,7 @@ def _document(path: Path) -> dict[str, Any]:
     except FileNotFoundError as error:
         raise InputError(f"there is no instance file {path}") from error
     except (OSError, UnicodeDecodeError) as error:
-        raise InputError(f"the instance file {path} cannot be read: {error}") from error
+        raise InputError(f"the instance file {path} cannot be read: {in_words(error)}") from error
     try:
         document = json.loads(text, object_pairs_hook=_without_repeats)
     except json.JSONDecodeError as error:

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from anneal_ref.base.checks import choice, number
-from anneal_ref.base.errors import InputError
+from anneal_ref.base.errors import InputError, in_words
 
 COLUMNS = ("s", "transverse", "problem")
 
@@ -36,7 +36,7 @@ def read_table(path: str | os.PathLike[str], unit: str | None, prefactor: float 
     except FileNotFoundError as error:
         raise InputError(f"there is no schedule file {name}") from error
     except (OSError, UnicodeDecodeError) as error:
-        raise InputError(f"the schedule file {name} cannot be read: {error}") from error
+        raise InputError(f"the schedule file {name} cannot be read: {in_words(error)}") from error
     said: dict[str, str] = {}
     header: list[str] | None = None
     rows: list[list[float]] = []

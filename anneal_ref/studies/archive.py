@@ -11,7 +11,7 @@ from pathlib import Path
 import numpy as np
 
 from anneal_ref.base.checks import integer, number
-from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning, ArchiveError, InputError
+from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning, ArchiveError, InputError, in_words
 from anneal_ref.base.run import Run
 from anneal_ref.base.storage import PART, Record, read_record, write_record
 from anneal_ref.model.anneal import Anneal
@@ -61,7 +61,7 @@ class Archive:
             try:
                 self.folder.mkdir(parents=True, exist_ok=True)
             except OSError as error:
-                problem = error.strerror or str(error)
+                problem = in_words(error)
                 raise _unusable(self.folder, problem, "give a folder that exists or can be made") from error
         elif self.folder.exists() and not self.folder.is_dir():
             raise _unusable(self.folder, "it is not a folder", "give the folder that holds the references")

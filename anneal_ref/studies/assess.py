@@ -14,6 +14,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from concurrent.futures import Executor, Future, as_completed
+from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import partial
 
@@ -21,6 +22,7 @@ import numpy as np
 from scipy import special
 
 from anneal_ref.backends.contract import Plan
+from anneal_ref.base.errors import AnnealRefError
 from anneal_ref.base.estimate import Estimate
 from anneal_ref.base.provenance import provenance
 from anneal_ref.base.run import Run
@@ -31,6 +33,7 @@ from anneal_ref.judgement.pooling import Pooled, pool
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.observe.samples import Samples
 from anneal_ref.studies.archive import Archive
+from anneal_ref.studies.sample_files import refuse_copies
 from anneal_ref.studies.study import Case, Study
 from anneal_ref.truth.reference import Reference, default_backend, reference
 
@@ -51,6 +54,8 @@ class Judged:
         Whether the reference was in the archive before.
     sha256 : str
         Hash of the bytes of the sample files; see `Case`.
+    notes : tuple of str
+        What the reader should know about the files, beside the notes of the comparison.
     """
 
     case: Case
@@ -59,6 +64,7 @@ class Judged:
     comparison: Comparison
     reused: bool
     sha256: str
+    notes: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -125,12 +131,12 @@ class Planned:
 
 
 def plan(study: Study, archive: Archive) -> tuple[Planned, ...]:
-    """Return what every case of a study will cost, before any work.
+    """Return what every case of a study will cost, before any work; samples are not read, see `Study.problems`.
 
     Raises
     ------
     NotSupported, TooLarge
-        A case that no back-end can treat on this machine.
+        A case that no back-end can treat on this machine; it is named.
     """
     tolerance = study.table.truth.tolerance
     coarse = default_backend(tolerance)
@@ -138,11 +144,12 @@ def plan(study: Study, archive: Archive) -> tuple[Planned, ...]:
     for case in study.cases:
         archived = archive.find(case.anneal, tolerance) is not None
         # the coarsest run twice (once reordered), and with half and a quarter of the step
-        costs = [
-            coarse.plan(case.anneal),
-            coarse.finer("step").plan(case.anneal),
-            coarse.finer("step").finer("step").plan(case.anneal),
-        ]
+        with _naming(case):
+            costs = [
+                coarse.plan(case.anneal),
+                coarse.finer("step").plan(case.anneal),
+                coarse.finer("step").finer("step").plan(case.anneal),
+            ]
         planned.append(Planned(case, costs[-1], costs[0].seconds + sum(cost.seconds for cost in costs), archived))
     return tuple(planned)
 
@@ -206,22 +213,27 @@ def assess(
 
     Raises
     ------
+    StudyError
+        A case without samples.
     InputError
-        Samples that are malformed or belong to another anneal; all files are read before any reference is solved.
+        Samples that are malformed or belong to another anneal; the same file twice, or a copy of it, within the study.
+        All files are read before any reference is solved.
     TooLarge, NotSupported
         A case that cannot be solved here; also before any is solved.
     ArchiveError
         The archive cannot be written.
     """
-    samples = [(case.samples(), case.sha256) for case in study.cases]
+    samples = [(*case.samples_with_note(), case.sha256) for case in study.cases]
+    refuse_copies(file for case in study.cases for file in case.files)
     plan(study, archive)
     references = solve(study, archive, executor, run)
     acceptance = study.acceptance
     judged = []
     with run.track(len(samples), "comparisons") as bar:
-        for case, (spins, sha256), (truth, reused) in zip(study.cases, samples, references, strict=True):
-            result = compare(truth, spins, acceptance, acceptance.level, study.table.truth.seed)
-            judged.append(Judged(case, truth, spins, result, reused, sha256))
+        for case, (spins, note, sha256), (truth, reused) in zip(study.cases, samples, references, strict=True):
+            with _naming(case):
+                result = compare(truth, spins, acceptance, acceptance.level, study.table.truth.seed)
+            judged.append(Judged(case, truth, spins, result, reused, sha256, (note,) if note else ()))
             bar.update(note=case.label)
     durations = sorted({case.anneal.duration for case in study.cases})
     groups = {at: [one for one in judged if one.case.anneal.duration == at] for at in durations}
@@ -268,7 +280,9 @@ def _solved(
     truth = study.table.truth
     if executor is None:
         for k in missing:
-            yield k, _solve_one(study.cases[k].anneal, truth.tolerance, truth.samples, truth.seed, run.threads)
+            with _naming(study.cases[k]):
+                solved = _solve_one(study.cases[k].anneal, truth.tolerance, truth.samples, truth.seed, run.threads)
+            yield k, solved
         return
     jobs: dict[Future[Reference], int] = {
         executor.submit(_solve_one, study.cases[k].anneal, truth.tolerance, truth.samples, truth.seed, 1): k
@@ -276,10 +290,22 @@ def _solved(
     }
     try:
         for job in as_completed(jobs):
-            yield jobs[job], job.result()
+            with _naming(study.cases[jobs[job]]):
+                solved = job.result()
+            yield jobs[job], solved
     finally:
         for job in jobs:
             job.cancel()
+
+
+@contextmanager
+def _naming(case: Case) -> Iterator[None]:
+    """Let every error say which case it came from."""
+    try:
+        yield
+    except AnnealRefError as error:
+        error.args = (f"case '{case.label}': {error}", *error.args[1:])
+        raise
 
 
 def _solve_one(anneal: Anneal, tolerance: float, samples: int, seed: int, threads: int) -> Reference:

@@ -14,7 +14,7 @@ from typing import Any, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 
-from anneal_ref.base.errors import StudyError
+from anneal_ref.base.errors import StudyError, in_words
 
 FORMAT = 1
 
@@ -145,7 +145,7 @@ class CaseTable(Table):
 
     instance: str
     duration: float = Field(gt=0)
-    samples: str | list[str]
+    samples: str | list[str] | None = None
 
 
 class StudyTable(Table):
@@ -174,8 +174,8 @@ class StudyTable(Table):
             raise ValueError(
                 "give either `durations` with `samples.files` (every instance at every duration), or `[[case]]` tables"
             )
-        if product and (not self.durations or self.samples.files is None):
-            raise ValueError("`durations` and `samples.files` belong together; give both")
+        if product and not self.durations:
+            raise ValueError("`durations` must list at least one duration; `samples.files` are those of its cases")
         if self.durations is not None and (len(set(self.durations)) < len(self.durations) or min(self.durations) <= 0):
             raise ValueError(f"`durations` must be positive and different from each other; got {self.durations}")
         return self
@@ -194,7 +194,7 @@ def read_table(path: Path) -> StudyTable:
     except FileNotFoundError as error:
         raise StudyError(f"there is no study file {path}; `anneal-ref demo saltmarsh` makes an example") from error
     except (OSError, UnicodeDecodeError) as error:
-        raise StudyError(f"the study file {path} cannot be read: {error}") from error
+        raise StudyError(f"the study file {path} cannot be read: {in_words(error)}") from error
     try:
         data = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:

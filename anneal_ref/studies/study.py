@@ -50,17 +50,22 @@ A study is a TOML file that is pleasant to write by hand. Paths are relative to 
 
     [samples]
     files = "samples/{instance}_{duration}ns_*.csv"   # all files that match, or a list of such patterns
-    values = "bits"                              # "spins": +1, -1; "bits": 0 (up), 1 (down). Default: as the file says
+    values = "bits"                              # of files that do not say: "spins": +1, -1; "bits": 0 (up), 1 (down)
 
-In place of `durations` and `samples.files`, the files can be named case by case:
+In place of `durations` and `samples.files`, the cases can be listed one by one, each an instance at a duration:
 
-    [[case]]
-    instance = "ladder"
+    [[case]]                                     # as many as you like, each pair of instance and duration once
+    instance = "ladder"                          # the name of an [[instance]]
     duration = 2.0
-    samples = ["a.csv", "b.csv"]
+    samples = ["a.csv", "b.csv"]                 # a file or pattern, or a list of them; may be left out at first
+
+The order of work: write the study and `plan` it, compute its truth (`reference`), measure on the processor, `plan`
+again to check the files, `assess`. So neither the samples nor `[samples]` need be there before `assess` asks for them.
+The files of one case are its gauges or batches; the same file twice, or a copy of it, is refused.
 
 Laws: `plus_minus`; `gaussian` with sigma; `uniform` with low, high; `levels` with k, zero; `constant` with value.
-Everything is checked before any work starts: unknown keys, values, missing files, NaN and infinity.
+Everything is checked before any work starts: unknown keys, values, missing files of schedules and instances, NaN and
+infinity.
 """
 
 from __future__ import annotations
@@ -69,7 +74,6 @@ import hashlib
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Literal
 
 import numpy as np
 
@@ -79,7 +83,10 @@ from anneal_ref.model.anneal import Anneal, Waveform
 from anneal_ref.model.schedules import Schedule
 from anneal_ref.observe.samples import Samples
 from anneal_ref.studies.building import make_instance, make_schedule, nearest
+from anneal_ref.studies.sample_files import Values, find_files, read_samples, read_with_note, refuse_copies
 from anneal_ref.studies.schema import StudyTable, read_table
+
+_VALUES_BY = "the key `values` in [samples] of the study"
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,13 +101,16 @@ class Case:
     files : tuple of Path
         Samples files; each is a gauge or batch of its own.
     values : str, optional
-        "spins" or "bits"; by default what each file says.
+        "spins" or "bits", of files that do not say.
+    missing : tuple of str
+        A sentence for each samples file or pattern of the study that no file fits yet.
     """
 
     name: str
     anneal: Anneal
     files: tuple[Path, ...]
-    values: Literal["spins", "bits"] | None = None
+    values: Values = None
+    missing: tuple[str, ...] = ()
 
     @property
     def label(self) -> str:
@@ -120,10 +130,30 @@ class Case:
 
         Raises
         ------
+        StudyError
+            Files that are not there (yet).
         InputError
-            A file that is malformed, or that says it belongs to another instance or duration.
+            A file that is malformed, or that says it belongs to another instance or duration; the same file twice.
+
+        Warns
+        -----
+        AnnealRefWarning
+            Some files give a gauge (or a batch) and others none.
         """
-        return read_samples(self.files, self.anneal, self.values)
+        self._require_files()
+        return read_samples(self.files, self.anneal, self.values, _VALUES_BY)
+
+    def samples_with_note(self) -> tuple[Samples, str | None]:
+        """Return what `samples` does, and instead of its warning what it says."""
+        self._require_files()
+        return read_with_note(self.files, self.anneal, self.values, _VALUES_BY)
+
+    def _require_files(self) -> None:
+        if self.missing or not self.files:
+            what = "; ".join(self.missing) or "the study names no samples files for it"
+            raise StudyError(
+                f"case '{self.label}' lacks samples: {what}; without them it can only be planned and solved"
+            )
 
 
 @dataclass(frozen=True, slots=True)
@@ -167,15 +197,30 @@ class Study:
         """The limits that the processor must meet."""
         return Acceptance(**self.table.acceptance.model_dump())
 
+    def problems(self) -> tuple[str, ...]:
+        """Return what is wrong with the samples that are there, a sentence each; cases without any are passed over."""
+        found = []
+        for case in self.cases:
+            if case.files:
+                try:
+                    case.samples()
+                except AnnealRefError as error:
+                    found.append(str(error))
+        try:
+            refuse_copies(file for case in self.cases for file in case.files)
+        except InputError as error:
+            found.append(str(error))
+        return tuple(dict.fromkeys(found))
+
     @classmethod
     def read(cls, path: str | Path) -> Study:
-        """Read and check a study file.
+        """Read and check a study file; samples are looked for and not read.
 
         Raises
         ------
         StudyError
             Anything that is not allowed, with file, key, value, what is allowed and the nearest known key; a missing
-            file.
+            file of the schedule or of an instance.
         """
         path = Path(path)
         table = read_table(path)
@@ -196,33 +241,10 @@ class Study:
                 anneal = Anneal(instances[name], schedule, duration, table.truth.start, waveform)
             except AnnealRefError as error:
                 raise StudyError(f"{path}: instance '{name}' at duration {duration:g}: {error}") from error
-            files = _files(patterns, name, duration, path, where)
-            cases.append(Case(name, anneal, files, table.samples.values))
+            files, missing = find_files(patterns, name, duration, path, where)
+            cases.append(Case(name, anneal, files, table.samples.values, missing))
         sha256 = hashlib.sha256(path.read_bytes()).hexdigest()
         return cls(table.name, table.description, path, sha256, schedule, tuple(cases), table)
-
-
-def read_samples(
-    paths: Sequence[str | Path], anneal: Anneal, values: Literal["spins", "bits"] | None = None
-) -> Samples:
-    """Read samples files of one anneal, hold each against it, and put them together; each is a gauge or batch.
-
-    Raises
-    ------
-    InputError
-        Names the file.
-    """
-    runs = []
-    for path in paths:
-        run = Samples.read(path, values)
-        try:
-            runs.append(run.for_anneal(anneal))
-        except InputError as error:
-            raise InputError(f"{path}: {error}") from error
-    try:
-        return Samples.concatenate(runs) if len(runs) > 1 else runs[0]
-    except InputError as error:
-        raise InputError(f"{paths[0]} and the files given with it do not go together: {error}") from error
 
 
 def time_unit(schedule: Schedule) -> str:
@@ -234,7 +256,8 @@ def _pairs(table: StudyTable, path: Path) -> list[tuple[str, float, list[str], s
     """List (instance, duration, file patterns, key) of every case, in the order of the file."""
     if table.case is not None:
         cases = [
-            (one.instance, float(one.duration), _listed(one.samples), f"case[{k}]") for k, one in enumerate(table.case)
+            (one.instance, float(one.duration), _listed(one.samples or []), f"case[{k}]")
+            for k, one in enumerate(table.case)
         ]
         for k, one in enumerate(cases):
             if any(one[:2] == other[:2] for other in cases[:k]):
@@ -251,34 +274,3 @@ def _pairs(table: StudyTable, path: Path) -> list[tuple[str, float, list[str], s
 
 def _listed(value: str | Sequence[str]) -> list[str]:
     return [value] if isinstance(value, str) else list(value)
-
-
-def _files(patterns: list[str], name: str, duration: float, path: Path, where: str) -> tuple[Path, ...]:
-    found: list[Path] = []
-    for pattern in patterns:
-        spelled = pattern.replace("{instance}", name).replace("{duration}", f"{duration:g}")
-        if "{" in spelled or "}" in spelled:
-            raise StudyError(
-                f"{path}: `{where}` = '{pattern}': the fields of a pattern are {{instance}} and {{duration}}"
-            )
-        wild = any(letter in spelled for letter in "*?[")
-        if not wild and not (path.parent / spelled).is_file():
-            raise StudyError(
-                f"{path}: `{where}`: there is no samples file {path.parent / spelled}, needed for '{name}' at "
-                f"duration {duration:g}"
-            )
-        matches = _glob(path.parent, spelled) if wild else [path.parent / spelled]
-        if not matches:
-            raise StudyError(
-                f"{path}: `{where}`: no samples file matches {path.parent / spelled}, needed for '{name}' at "
-                f"duration {duration:g}"
-            )
-        found += [match for match in matches if match not in found]
-    return tuple(found)
-
-
-def _glob(folder: Path, pattern: str) -> list[Path]:
-    anchor = Path(Path(pattern).anchor)
-    root, rest = (anchor, str(Path(pattern).relative_to(anchor))) if Path(pattern).is_absolute() else (folder, pattern)
-    # a manifest lies beside its samples and is no samples file itself
-    return sorted(match for match in root.glob(rest) if match.is_file() and not match.name.endswith(".manifest.json"))

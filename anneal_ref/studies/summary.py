@@ -7,7 +7,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from anneal_ref.base.estimate import Score
+from anneal_ref.judgement.compare import missed
 from anneal_ref.judgement.comparison import EXCLUDED, Comparison
+from anneal_ref.judgement.deviations import p_text
 from anneal_ref.judgement.equivalence import Finding
 from anneal_ref.judgement.fidelity import Refusal
 from anneal_ref.studies.study import time_unit
@@ -139,7 +141,9 @@ def notes(verdict: Verdict) -> list[str]:
     """Return what the reader should know about the cases, each note once with its cases."""
     cases: dict[str, list[str]] = {}
     for one in verdict.judged:
-        for note in one.comparison.notes:
+        for note in (*one.notes, *one.comparison.notes):
+            if note == missed(one.reference) and good_enough(verdict, one):
+                continue
             cases.setdefault(note, []).append(one.case.label)
     lines = []
     for note, labels in cases.items():
@@ -147,6 +151,11 @@ def notes(verdict: Verdict) -> list[str]:
         where = "every case" if len(labels) == len(verdict.judged) else "; ".join(labels[:6]) + others
         lines.append(f"{note} ({where})")
     return lines
+
+
+def good_enough(verdict: Verdict, one: Judged) -> bool:
+    """Return whether a truth has the error that the study asks for, whatever it was made for."""
+    return one.reference.decay.settled and one.reference.error <= verdict.study.table.truth.tolerance
 
 
 def worst_pairs(verdict: Verdict, count: int = 6, each: int = 2) -> list[tuple[str, ...]]:
@@ -157,7 +166,7 @@ def worst_pairs(verdict: Verdict, count: int = 6, each: int = 2) -> list[tuple[s
         for k in range(min(each, len(pairs))):
             cells = (
                 one.case.label, f"{labels[pairs.first[k]]}-{labels[pairs.second[k]]}", f"{pairs.truth[k]:+.4f}",
-                f"{pairs.measured[k]:+.4f} ± {pairs.stat[k]:.4f}", f"{pairs.sigma[k]:+.1f}", f"{pairs.adjusted[k]:.2g}",
+                f"{pairs.measured[k]:+.4f} ± {pairs.stat[k]:.4f}", f"{pairs.sigma[k]:+.1f}", p_text(float(pairs.adjusted[k])),
             )  # fmt: skip
             found.append((float(pairs.adjusted[k]), float(pairs.p[k]), cells))
     return [cells for _, _, cells in sorted(found)[:count]]
@@ -172,8 +181,7 @@ def suspects(verdict: Verdict, most: int = 8) -> list[str]:
         if count:
             sigma, gain = pairs.site_sigma(), pairs.site_gain()
             text = f"{one.case.label}: {count} of {len(pairs)} pairs depart"
-            # the table is sorted, so that the significant pairs come first
-            shares = np.bincount(np.r_[pairs.first[:count], pairs.second[:count]], minlength=pairs.n_sites)
+            shares = pairs.shares(verdict.decision.level)
             worst = int(np.lexsort((-sigma, -shares))[0])
             if shares[worst] > 1:
                 many = "all" if shares[worst] == count else str(shares[worst])

@@ -33,3 +33,14 @@ def aligned(rows: Sequence[Sequence[str]], left: Sequence[int] = (0,), indent: s
         ]
         lines.append((indent + "  ".join(cells)).rstrip())
     return "\n".join(lines)
+
+
+def counted(count: int, noun: str) -> str:
+    """Return a number with its noun, in the plural where there is not exactly one.
+
+    Examples
+    --------
+    >>> counted(1, "case"), counted(2, "case")
+    ('1 case', '2 cases')
+    """
+    return f"{count} {noun}{'' if count == 1 else 's'}"

@@ -4,7 +4,7 @@ Exit codes
 ----------
 0    the command did its work; `assess` also when the verdict is "reject" or "inconclusive"
 1    `assess --strict`: the verdict is "reject"; `audit`: a file of the archive cannot be trusted
-2    the input is not allowed; one paragraph on standard error says why
+2    the input is not allowed, or the output cannot be written; one paragraph on standard error says why
 3    `assess --strict`: the verdict is "inconclusive"
 130  interrupted; finished references stay in the archive
 
@@ -22,7 +22,7 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import NoReturn, TextIO
 
-from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning
+from anneal_ref.base.errors import AnnealRefError, AnnealRefWarning, InputError, in_words
 from anneal_ref.base.provenance import library_version
 
 OK, REJECTED, BAD_INPUT, INCONCLUSIVE, INTERRUPTED = 0, 1, 2, 3, 130
@@ -38,10 +38,12 @@ def main(argv: Sequence[str] | None = None) -> int:
     """
     options = _parser().parse_args(argv)
     with warnings.catch_warnings():
-        warnings.showwarning = _note
-        warnings.simplefilter("default", AnnealRefWarning)
+        warnings.showwarning = _Notes()
+        warnings.simplefilter("always", AnnealRefWarning)
         try:
-            return int(options.command(options))
+            code = int(options.command(options))
+            sys.stdout.flush()
+            return code
         except AnnealRefError as error:
             print(f"anneal-ref {options.name}: {error}", file=sys.stderr)
             return BAD_INPUT
@@ -50,8 +52,13 @@ def main(argv: Sequence[str] | None = None) -> int:
             return INTERRUPTED
         except BrokenPipeError:
             # the reader of our output went away; keep the interpreter from complaining at exit
-            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+            _silence()
             return OK
+        except OSError as error:
+            where = f"{error.filename}: " if error.filename else "the output cannot be written: "
+            print(f"anneal-ref {options.name}: {where}{in_words(error)}", file=sys.stderr)
+            _silence()
+            return BAD_INPUT
 
 
 def entry() -> NoReturn:
@@ -81,6 +88,10 @@ def _plan(options: argparse.Namespace) -> int:
     study = Study.read(options.study)
     archive = Archive(_archive(options), create=False)
     print(plan_table(study, plan(study, archive), archive.folder))
+    problems = study.problems()
+    if problems:
+        sys.stdout.flush()
+        raise InputError("\n  ".join(["the samples cannot be used as they are:", *problems]))
     return OK
 
 
@@ -106,12 +117,20 @@ def _assess(options: argparse.Namespace) -> int:
     study = Study.read(options.study)
     archive = Archive(_archive(options))
     verdict = assess(study, archive, run=Run(threads=options.threads))
-    print(verdict)
+    failure: InputError | None = None
+    # the page comes first, so that it is there even if the table cannot be printed
     if not options.no_page:
         from anneal_ref.views.report import write_page
 
         page = options.page or Path(options.study).with_suffix(".html")
-        write_page(verdict, page)
+        try:
+            write_page(verdict, page)
+        except InputError as error:
+            failure = error
+    print(verdict)
+    if failure is not None:
+        raise failure
+    if not options.no_page:
         print(f"\nPage with plots: {page}\nReferences:      {archive.folder}{os.sep}")
     return {"accept": OK, "reject": REJECTED, "inconclusive": INCONCLUSIVE}[verdict.outcome] if options.strict else OK
 
@@ -119,10 +138,10 @@ def _assess(options: argparse.Namespace) -> int:
 def _compare(options: argparse.Namespace) -> int:
     from anneal_ref.judgement.compare import compare
     from anneal_ref.studies.archive import read_reference
-    from anneal_ref.studies.study import read_samples
+    from anneal_ref.studies.sample_files import read_samples
 
     reference = read_reference(options.reference)
-    print(compare(reference, read_samples(options.samples, reference.anneal, options.values)))
+    print(compare(reference, read_samples(options.samples, reference.anneal, options.values, "the option --values")))
     labels = reference.anneal.instance.lattice.labels.tolist()
     if labels != list(range(len(labels))):
         print(f"sites 0 to {len(labels) - 1} are, by their labels: {', '.join(map(str, labels))}")
@@ -137,6 +156,8 @@ def _audit(options: argparse.Namespace) -> int:
         recompute=options.recompute, seed=options.seed, run=Run(threads=options.threads)
     )
     print(report)
+    if not report.rows:
+        raise InputError(f"there are no references in {options.archive}; check the name of the folder")
     return OK if report.sound else REJECTED
 
 
@@ -145,18 +166,34 @@ def _archive(options: argparse.Namespace) -> Path:
     return Path(options.archive) if options.archive else Path(options.study).parent / "truth"
 
 
-def _note(
-    message: Warning | str,
-    category: type[Warning],
-    filename: str,
-    lineno: int,
-    file: TextIO | None = None,
-    line: str | None = None,
-) -> None:
-    if issubclass(category, AnnealRefWarning):
-        print(f"note: {message}", file=sys.stderr)
-    else:
-        print(warnings.formatwarning(message, category, filename, lineno), end="", file=sys.stderr)
+def _silence() -> None:
+    """Let what is still waiting for standard output go nowhere, so that the interpreter can end in peace."""
+    try:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+    except (OSError, ValueError):
+        return
+
+
+class _Notes:
+    """Shows the warnings of the package as notes on standard error, each sentence once."""
+
+    def __init__(self) -> None:
+        self.told: set[str] = set()
+
+    def __call__(
+        self,
+        message: Warning | str,
+        category: type[Warning],
+        filename: str,
+        lineno: int,
+        file: TextIO | None = None,
+        line: str | None = None,
+    ) -> None:
+        if not issubclass(category, AnnealRefWarning):
+            print(warnings.formatwarning(message, category, filename, lineno), end="", file=sys.stderr)
+        elif str(message) not in self.told:
+            self.told.add(str(message))
+            print(f"note: {message}", file=sys.stderr)
 
 
 def _farewell(options: argparse.Namespace) -> str:

@@ -14,7 +14,7 @@ from importlib.resources.abc import Traversable
 from pathlib import Path
 
 from anneal_ref.base.checks import choice
-from anneal_ref.base.errors import InputError
+from anneal_ref.base.errors import InputError, in_words
 
 DEMOS = {"saltmarsh": "three lattices of 12 to 16 spins, two durations, 1000 shots each; a minute of work"}
 
@@ -59,7 +59,7 @@ def copy_demo(name: str, into: str | Path | None = None) -> Path:
             with source.open("rb") as reader, target.open("xb") as writer:
                 shutil.copyfileobj(reader, writer)
     except OSError as error:
-        raise InputError(f"the demo cannot be written to {folder}: {error.strerror or error}") from error
+        raise InputError(f"the demo cannot be written to {folder}: {in_words(error)}") from error
     return folder
 
 

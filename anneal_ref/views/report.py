@@ -9,7 +9,7 @@ from pathlib import Path
 
 import jinja2
 
-from anneal_ref.base.errors import InputError
+from anneal_ref.base.errors import InputError, in_words
 from anneal_ref.studies.assess import Verdict
 from anneal_ref.studies.summary import WORDS, headline
 from anneal_ref.views.sections import facts, identities, sections
@@ -41,7 +41,7 @@ def write_page(verdict: Verdict, path: str | Path) -> Path:
     except OSError as error:
         aside.unlink(missing_ok=True)
         raise InputError(
-            f"the page {path} cannot be written: {error.strerror or error}; give another file with --page"
+            f"the page {path} cannot be written: {in_words(error)}; give another file with --page"
         ) from error
     return path
 

@@ -8,12 +8,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from anneal_ref.judgement.fidelity import Refusal
+from anneal_ref.observe.counting import count_moments
+from anneal_ref.observe.moments import Moments
 from anneal_ref.studies.assess import Judged, Verdict
 from anneal_ref.studies.study import time_unit
 from anneal_ref.studies.summary import (
     ENERGY_HEADINGS,
     PAIR_HEADINGS,
     energy_row,
+    good_enough,
     has_fields,
     notes,
     pooled_table,
@@ -117,9 +120,7 @@ def _agreement(verdict: Verdict) -> Section:
     pictures = []
     for at, _ in verdict.pooled:
         group = [one for one in verdict.judged if one.case.anneal.duration == at]
-        axes = plots.correlations(
-            [one.reference.moments().zz for one in group], [one.samples.moments().zz for one in group]
-        )
+        axes = plots.correlations([one.reference.moments().zz for one in group], [_measured(one).zz for one in group])
         axes.set_title(f"{at:g} {unit}".strip(), fontsize="medium", loc="left")
         what = f"Measured against true pair correlations at {at:g} {unit}".strip()
         pictures.append(
@@ -197,6 +198,11 @@ def _where(verdict: Verdict) -> Section:
     return Section("Where it departs", texts, (grid,), tuple(pictures), tuple(suspects(verdict)))
 
 
+def _measured(one: Judged) -> Moments:
+    """Count the moments of the samples; that their groups are few stands among the notes already."""
+    return count_moments(one.samples.spins, one.samples.groups)
+
+
 def bond_sigma(one: Judged) -> NDArray[np.float64]:
     """Return by how many standard errors each bond's correlation is too strong, in the order of the edges."""
     pairs, n = one.comparison.pairs, one.comparison.n_sites
@@ -208,7 +214,7 @@ def bond_sigma(one: Judged) -> NDArray[np.float64]:
 
 def site_sigma(one: Judged) -> NDArray[np.float64]:
     """Return the deviation of every magnetisation beyond the truth's own error, in standard errors."""
-    truth, measured = one.reference.moments().z, one.samples.moments().z
+    truth, measured = one.reference.moments().z, _measured(one).z
     difference = measured.value - truth.value
     beyond = np.maximum(np.abs(difference) - truth.num, 0.0)
     return np.asarray(np.sign(difference) * beyond / measured.stat)
@@ -217,7 +223,7 @@ def site_sigma(one: Judged) -> NDArray[np.float64]:
 def _method(verdict: Verdict) -> Section:
     study, level = verdict.study, verdict.decision.level
     tolerance = study.table.truth.tolerance
-    missed = [one.case.label for one in verdict.judged if one.reference.outcome != "converged"]
+    missed = [one.case.label for one in verdict.judged if not good_enough(verdict, one)]
     fields = has_fields(verdict)
     points = [
         "Truth: the Schrödinger equation with the given schedule, solved on the full state vector. Every case was "

@@ -280,9 +280,9 @@ def test_damaged_files(text, message, tmp_path):
 def test_missing_and_unwritable_files(tmp_path):
     with pytest.raises(InputError, match="there is no instance file .*nowhere.json"):
         ar.Instance.read(tmp_path / "nowhere.json")
-    with pytest.raises(InputError, match="cannot be read"):
+    with pytest.raises(InputError, match="cannot be read: it is a folder"):
         ar.Instance.read(tmp_path)
-    with pytest.raises(InputError, match=r"cannot write .*No such file.*choose a folder"):
+    with pytest.raises(InputError, match=r"cannot write .*no such file.*choose a folder"):
         an_instance().write(tmp_path / "nowhere" / "a.json")
     (tmp_path / "a.json").write_bytes(b"\xff\xfe\x00")
     with pytest.raises(InputError, match="cannot be read"):

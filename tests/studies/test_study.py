@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import textwrap
 import tomllib
 from pathlib import Path
@@ -9,10 +10,12 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from anneal_ref.base.errors import InputError, StudyError
+from anneal_ref.base.errors import AnnealRefWarning, InputError, StudyError
 from anneal_ref.model.instances import Instance
 from anneal_ref.model.lattice import Lattice
+from anneal_ref.observe.samples import Samples
 from anneal_ref.studies import study as study_module
+from anneal_ref.studies.sample_files import read_samples
 from anneal_ref.studies.study import Study
 
 GOOD = """
@@ -34,12 +37,13 @@ seed = 3
 files = "{instance}_{duration}ns*.csv"
 """
 SPINS = "1,1,-1,1\n-1,-1,1,-1\n1,1,1,1\n-1,1,1,-1\n"
+FILES = ("ring_0.5ns_a.csv", "ring_0.5ns_b.csv", "ring_2ns.csv")
 
 
 @pytest.fixture
 def folder(tmp_path: Path) -> Path:
-    for name in ("ring_0.5ns_a.csv", "ring_0.5ns_b.csv", "ring_2ns.csv"):
-        (tmp_path / name).write_text(SPINS)
+    for name in FILES:
+        (tmp_path / name).write_text(f"{SPINS}# {name}\n")
     return tmp_path
 
 
@@ -132,8 +136,13 @@ def test_the_format_in_the_docstring_is_a_study(folder: Path) -> None:
         ("[0.5, 2.0]", "[0.5, -2.0]", "`durations` must be positive"),
         ("[0.5, 2.0]", "[0.0, 2.0]", "`durations` must be positive"),
         ("[0.5, 2.0]", "[2.0, 2.0]", "different from each other"),
-        ("[0.5, 2.0]", "[]", "belong together"),
-        ("durations = [0.5, 2.0]", "", "`durations` and `samples.files` belong together"),
+        ("[0.5, 2.0]", "[]", "`durations` must list at least one"),
+        ("durations = [0.5, 2.0]", "", "`durations` must list at least one"),
+        (
+            '[samples]\nfiles = "{instance}_{duration}ns*.csv"',
+            '[[case]]\ninstance = "ring"\nduration = 1.0',
+            "either `durations`",
+        ),
         ('"plus_minus"', '"plusminus"', "did you mean 'plus_minus'?"),
         ('law = "plus_minus"', 'law = "plus_minus", sigma = 1.0', "`instance[0].couplings.sigma`"),
         ('law = "plus_minus"', 'law = "uniform", low = 0.0', "`instance[0].couplings.high` is missing"),
@@ -159,8 +168,6 @@ def test_the_format_in_the_docstring_is_a_study(folder: Path) -> None:
         ("[acceptance]\n", "", "it belongs to `[acceptance]`"),
         ("[samples]\n", "[samples]\ntruth = 1\n", "`truth` belongs at the top of the file"),
         ("{instance}_{duration}ns*.csv", "{instance}_{time}ns.csv", "{instance} and {duration}"),
-        ("{instance}_{duration}ns*.csv", "none_*.csv", "none_*.csv, needed for 'ring' at duration 0.5"),
-        ("{instance}_{duration}ns*.csv", "none.csv", "there is no samples file"),
         ("[samples]", '[samples]\nvalues = "byts"', "did you mean 'bits'?"),
     ],
 )
@@ -199,8 +206,9 @@ def test_cases_are_checked_too(folder: Path) -> None:
         read(folder, cases + one.replace('"ring"', '"rign"'))
     with pytest.raises(StudyError, match="either `durations`"):
         read(folder, GOOD + one)
-    with pytest.raises(StudyError, match=r"`case\[0\]`: there is no samples file .*lost.csv"):
-        read(folder, cases + one.replace("ring_2ns.csv", "lost.csv"))
+    (lost,) = read(folder, cases + one.replace("ring_2ns.csv", "lost.csv")).cases
+    with pytest.raises(StudyError, match=r"'ring, 2 ns' lacks samples: .*`case\[0\]`: there is no samples file .*lost"):
+        lost.samples()
 
 
 def test_names_are_unique(folder: Path) -> None:
@@ -233,3 +241,87 @@ def test_manifests_beside_samples_are_no_samples(folder: Path) -> None:
 def test_a_name_that_cannot_be_part_of_a_file_name_is_refused_in_words(folder: Path) -> None:
     with pytest.raises(StudyError, match=r"`instance\[0\].name` must be made of letters, digits.*got 'my ring'"):
         read(folder, GOOD.replace('name = "ring"', 'name = "my ring"'))
+
+
+@pytest.mark.parametrize(
+    "text",
+    [
+        GOOD.split("[samples]")[0],
+        GOOD.replace("{instance}_{duration}ns*.csv", "none_*.csv"),
+        GOOD.replace("{instance}_{duration}ns*.csv", "none.csv"),
+        GOOD.replace("durations = [0.5, 2.0]", "").split("[samples]")[0]
+        + '[[case]]\ninstance = "ring"\nduration = 0.5\n[[case]]\ninstance = "ring"\nduration = 2.0\n',
+    ],
+    ids=["no table", "no match", "no file", "no key"],
+)
+def test_a_study_may_come_before_its_samples(folder: Path, text: str) -> None:
+    study = read(folder, text)
+    assert [case.files for case in study.cases] == [(), ()]
+    assert study.problems() == ()
+    with pytest.raises(StudyError, match="case 'ring, 0.5 ns' lacks samples"):
+        study.cases[0].samples()
+
+
+def test_a_case_with_some_of_its_files_is_not_read(folder: Path) -> None:
+    study = read(folder, GOOD.replace('"{instance}_{duration}ns*.csv"', '["ring_{duration}ns*.csv", "x*.npy"]'))
+    with pytest.raises(StudyError, match=r"no samples file matches .*x\*.npy"):
+        study.cases[0].samples()
+    assert len(study.problems()) == 2
+
+
+def test_the_same_shots_do_not_count_twice(folder: Path) -> None:
+    a, b, c = (folder / name for name in FILES)
+    twice = GOOD.replace('"{instance}_{duration}ns*.csv"', '["ring_{duration}ns*.csv", "ring_{duration}*"]')
+    with pytest.raises(StudyError, match=r"ring_0.5ns_a.csv is named twice, by 'ring_.*' and by 'ring_\{duration\}\*'"):
+        read(folder, twice)
+    b.write_bytes(a.read_bytes())
+    study = read(folder, GOOD)
+    with pytest.raises(InputError, match=rf"{a} and {b} are the same byte for byte"):
+        study.cases[0].samples()
+    b.unlink()
+    b.symlink_to(a)
+    with pytest.raises(InputError, match=rf"{a} and {b} are one file"):
+        study.cases[0].samples()
+    with pytest.raises(InputError, match=rf"{c} and {c} are one file"):
+        read_samples([c, c], study.cases[1].anneal)
+    # a copy in another case of the study is found too
+    b.unlink()
+    c.write_bytes(a.read_bytes())
+    assert [case.samples().n_shots for case in study.cases[1:]] == [4]
+    assert any(f"{a} and {c} are the same byte for byte" in problem for problem in read(folder, GOOD).problems())
+
+
+def test_a_missing_gauge_is_named(folder: Path) -> None:
+    (folder / FILES[0]).write_text(f"# gauge: 1 -1 1 1\n{SPINS}")
+    case = read(folder, GOOD).cases[0]
+    said = r"1 of 2 runs give a gauge and 1 do not \(ring_0.5ns_b.csv\)"
+    with pytest.warns(AnnealRefWarning, match=said):
+        plain = case.samples()
+    samples, note = case.samples_with_note()
+    assert note is not None
+    assert re.match(said, note)
+    np.testing.assert_array_equal(samples.spins, plain.spins)
+
+
+def test_values_are_for_files_that_do_not_say(folder: Path) -> None:
+    text = GOOD.replace("ns*.csv", "ns*") + 'values = "bits"\n'
+    for name in FILES:
+        (folder / name).unlink()
+    spins = [[1, -1, 1, 1], [1, 1, 1, 1]]
+    Samples(spins).write(folder / "ring_0.5ns.h5")
+    np.savetxt(folder / "ring_0.5ns.csv", (1 - np.array(spins)) // 2, fmt="%d", delimiter=",")
+    Samples(spins).write(folder / "ring_2ns.csv")
+    study = read(folder, text)
+    assert study.cases[0].samples().spins.tolist() == spins + spins
+    with pytest.raises(
+        InputError, match=r"ring_2ns.csv: .*the key `values` in \[samples\] of the study says bits.*remove"
+    ):
+        study.cases[1].samples()
+
+
+def test_a_gauge_of_another_length_names_its_file(folder: Path) -> None:
+    (folder / FILES[1]).write_text(f"# gauge: 1 -1 1\n{SPINS}")
+    (folder / FILES[2]).write_text(f"# gauge: 1 -1 1\ns0,s1,s2,s3\n{SPINS}")
+    for case, name in zip(read(folder, GOOD).cases, FILES[1:], strict=True):
+        with pytest.raises(InputError, match=name):
+            case.samples()

@@ -223,6 +223,110 @@ def test_unexpected_errors_are_not_hidden(study: Path, monkeypatch: pytest.Monke
         main(["assess", str(study)])
 
 
+def test_a_study_is_planned_and_solved_before_it_is_measured(study: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    samples = study.parent / "ring_0.5ns.csv"
+    text = samples.read_bytes()
+    samples.unlink()
+    assert main(["plan", str(study)]) == 0
+    out = capsys.readouterr().out
+    assert "one ring: 1 case\n" in out
+    assert "none yet" in out
+    assert "No samples yet for any case" in out
+    assert main(["reference", str(study)]) == 0
+    capsys.readouterr()
+    assert "case 'ring, 0.5 ns' lacks samples" in refused(["assess", str(study)], capsys)
+    samples.write_bytes(text)
+    assert main(["plan", str(study)]) == 0
+    out = capsys.readouterr().out
+    assert "No samples yet" not in out
+    assert "archived" in out
+    assert main(["assess", str(study), "--no-page"]) == 0
+
+
+@pytest.mark.parametrize(
+    ("text", "said"),
+    [
+        ("# duration: 5\n1,1,1,-1\n", "samples of another anneal"),
+        (f"# instance: {'a' * 64}\n1,1,1,-1\n", "samples of another instance"),
+        ("1,1,1,-1\n1,1,1\n", "line 2"),
+    ],
+)
+def test_a_plan_reads_the_samples_that_are_there(
+    study: Path, text: str, said: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    (study.parent / "ring_0.5ns.csv").write_text(text)
+    assert main(["plan", str(study)]) == 2
+    captured = capsys.readouterr()
+    assert "To do: 1 reference, " in captured.out
+    assert said in captured.err
+    assert "ring_0.5ns.csv" in captured.err
+
+
+def test_the_same_file_twice_is_refused(study: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["reference", str(study)]) == 0
+    (path,) = (study.parent / "truth").glob("*.h5")
+    samples, copy = study.parent / "ring_0.5ns.csv", study.parent / "copy.csv"
+    copy.write_bytes(samples.read_bytes())
+    capsys.readouterr()
+    assert "are one file" in refused(["compare", str(path), str(samples), str(samples)], capsys)
+    assert "the same byte for byte" in refused(["compare", str(path), str(samples), str(copy)], capsys)
+    copy.write_text("# values: bits\n0,1,1,1\n")
+    assert "the option --values says spins" in refused(["compare", str(path), str(copy), "--values", "spins"], capsys)
+
+
+def test_a_case_that_does_not_fit_is_named(study: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    from anneal_ref.model.instances import Instance
+    from anneal_ref.model.lattices import chain
+
+    Instance(chain(50), np.ones(49)).write(study.parent / "ring.json")
+    spins = np.random.default_rng(1).choice([-1, 1], (20, 50))
+    np.savetxt(study.parent / "ring_0.5ns.csv", spins, fmt="%d", delimiter=",")
+    for command in ("plan", "assess"):
+        assert "case 'ring, 0.5 ns': the state vector of 50 spins" in refused([command, str(study)], capsys)
+
+
+def test_an_audit_of_nothing_does_not_pass(study: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["audit", str(study.parent)]) == 2
+    assert "there are no references in" in capsys.readouterr().err
+
+
+def test_a_full_output_loses_no_page(study: Path) -> None:
+    for command in ("plan", "assess"):
+        with open("/dev/full", "w") as full:
+            done = subprocess.run(
+                [sys.executable, "-m", "anneal_ref.views.cli", command, str(study)],
+                stdout=full, stderr=subprocess.PIPE, text=True, check=False,
+            )  # fmt: skip
+        assert done.returncode == 2
+        last = done.stderr.strip().splitlines()[-1]
+        assert last == f"anneal-ref {command}: the output cannot be written: the disk is full"
+        assert "Traceback" not in done.stderr
+        assert "Exception ignored" not in done.stderr
+    assert "</html>" in study.with_suffix(".html").read_text()
+
+
+def test_a_folder_for_a_file_is_told_in_words(study: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    for argv in (["plan", str(study.parent)], ["compare", str(study.parent), "x.csv"]):
+        said = refused(argv, capsys)
+        assert "it is a folder, not a file" in said
+        assert "Errno" not in said
+
+
+def test_a_note_is_told_once(study: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    rows = np.random.default_rng(2).choice([-1, 1], (2, 200, 4))
+    (study.parent / "ring_0.5ns.csv").unlink()
+    for k, spins in enumerate(rows):
+        np.savetxt(study.parent / f"ring_0.5ns_{k}.csv", spins, fmt="%d", delimiter=",", header=f"batch: {k}" * k)
+    study.write_text(STUDY.replace("ns.csv", "ns*.csv"))
+    assert main(["assess", str(study)]) == 0
+    captured = capsys.readouterr()
+    told = [line for line in (captured.out + captured.err).splitlines() if line.startswith("note: ")]
+    assert len(told) == len(set(told))
+    assert sum("1 of 2 runs give a batch and 1 do not (ring_0.5ns_0.csv)" in line for line in told) == 1
+    assert sum("only 2 g" in line for line in told) == 1
+    assert "1 of 2 runs give a batch and 1 do not (ring_0.5ns_0.csv)" in study.with_suffix(".html").read_text()
+
+
 def test_exit_codes_are_those_of_the_documentation() -> None:
     told = {int(line.split()[0]) for line in (cli.__doc__ or "").splitlines() if line[:1].isdigit()}
     assert told == {cli.OK, cli.REJECTED, cli.BAD_INPUT, cli.INCONCLUSIVE, cli.INTERRUPTED}

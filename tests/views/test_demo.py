@@ -167,7 +167,7 @@ def test_a_page_that_cannot_be_written_leaves_the_old_one(
 
     monkeypatch.setattr("anneal_ref.views.report.page", lambda verdict: text)
     monkeypatch.setattr("anneal_ref.views.report.os.fsync", full)
-    with pytest.raises(InputError, match="page.html cannot be written: No space left on device"):
+    with pytest.raises(InputError, match="page.html cannot be written: the disk is full"):
         write_page(verdict, target)
     assert target.read_text() == "old"
     assert [path.name for path in tmp_path.iterdir()] == ["page.html"]
