@@ -85,7 +85,8 @@ def compare(
     Raises
     ------
     InputError
-        Samples of another instance or duration, fewer than two shots, a truth without correlations.
+        Something that is not Samples, samples of another instance or duration, fewer than two shots, a truth without
+        correlations.
 
     Examples
     --------
@@ -105,6 +106,11 @@ def compare(
     seed = integer("seed", seed, low=0)
     anneal = reference.anneal
     instance = anneal.instance
+    if not isinstance(samples, Samples):
+        raise InputError(
+            f"samples must be Samples, which know their gauge and groups; got {type(samples).__name__}; wrap an array "
+            "of +1 and -1, shape (shots, n_sites), with anneal_ref.Samples(spins)"
+        )
     samples = samples.for_anneal(anneal)
     spins, moments = samples.spins, reference.moments()
     if np.isnan(moments.zz.num).any() or np.isnan(moments.z.num).any():
@@ -189,6 +195,7 @@ def compare(
         len(spins),
         len(clusters),
         level,
+        instance.lattice.labels,
     )
 
 
@@ -208,10 +215,20 @@ def _fidelity(
         return Refusal("too few shots", str(refusal))
 
 
+def missed(reference: Reference) -> str:
+    """Say in what a truth that is not converged fell short."""
+    asked = f"asked to be within {reference.tolerance:.2g}"
+    if reference.decay.settled:
+        text = f"the truth was {asked} and reached {reference.error:.2g}"
+    else:
+        text = f"the truth was {asked}, and its runs have not settled (measured error {reference.error:.2g})"
+    return f"{text}; the measured error enters every interval"
+
+
 def _first_notes(reference: Reference, samples: Samples, clusters: Clusters) -> list[str]:
     notes = []
     if reference.outcome != "converged":
-        notes.append("the truth did not converge to its tolerance; its measured error enters every interval")
+        notes.append(missed(reference))
     if samples.n_groups == 1 or (samples.groups is None and samples.manifest.gauge is not None):
         notes.append("all shots belong to one gauge or batch: its own error cannot be told from the processor's")
     elif len(clusters) < FEW and not clusters.independent:

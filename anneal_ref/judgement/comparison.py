@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from anneal_ref.base.estimate import Estimate, Score
 from anneal_ref.judgement.correlation_error import CorrelationError
@@ -59,6 +60,8 @@ class Comparison:
         `n_clusters` equals `n_shots` where each shot is independent.
     level : float
         Of the intervals.
+    labels : ndarray of int, shape (n_sites,)
+        Names of the sites on the device, as the lattice has them.
     """
 
     scores: Mapping[str, Score]
@@ -78,6 +81,7 @@ class Comparison:
     n_shots: int
     n_clusters: int
     level: float
+    labels: NDArray[np.intp]
 
     @property
     def correlation_error(self) -> Score:
@@ -125,11 +129,15 @@ class Comparison:
                 lines.append(f"  {_PLAIN:<30}{self.fidelity.plain:>10.4g}   {'':<22}{plain}")
         found, level = self.pairs.significant(self.level), f"{self.level:.0%}"
         lines.append(f"pairs of spins that differ at level {level} (Holm): {found} of {len(self.pairs)}; the largest:")
-        lines.append(self.pairs.text())
-        if found:
-            site_sigma, gain = self.pairs.site_sigma(), self.pairs.site_gain()
-            worst = np.argsort(-site_sigma, kind="stable")[:3]
-            named = ", ".join(f"{k} (rms sigma {site_sigma[k]:.1f}, gain {gain[k]:.2f})" for k in worst)
+        lines.append(self.pairs.text(labels=self.labels))
+        # a single pair may be its coupler's fault: a site is named if it is in two or more
+        shares, site_sigma, gain = self.pairs.shares(self.level), self.pairs.site_sigma(), self.pairs.site_gain()
+        worst = [k for k in np.lexsort((-site_sigma, -shares)) if shares[k] > 1][:3]
+        if worst:
+            named = ", ".join(
+                f"{self.labels[k]} ({shares[k]} pairs, rms sigma {site_sigma[k]:.1f}, gain {gain[k]:.2f})"
+                for k in worst
+            )
             lines.append(f"sites most involved: {named}")
         refused = [self.fidelity.reason] if isinstance(self.fidelity, Refusal) else []
         lines += [f"note: {note}" for note in (*refused, *self.notes)]

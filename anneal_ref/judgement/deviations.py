@@ -104,16 +104,34 @@ class PairTable:
             np.add.at(below, site, self.truth**2)
         return np.asarray(np.divide(above, below, out=np.full(self.n_sites, np.nan), where=below > 0))
 
-    def text(self, rows: int = 5) -> str:
-        """Return the first rows as a table."""
+    def shares(self, level: float = 0.95) -> NDArray[np.intp]:
+        """Count the significant pairs that each site belongs to, shape (n_sites,)."""
+        # the table is sorted, so that the significant pairs come first
+        found = self.significant(level)
+        return np.bincount(np.concatenate((self.first[:found], self.second[:found])), minlength=self.n_sites)
+
+    def text(self, rows: int = 5, labels: ArrayLike | None = None) -> str:
+        """Return the first rows as a table, sites named by `labels`, shape (n_sites,), if given."""
+        names = np.arange(self.n_sites) if labels is None else np.asarray(labels)
         lines = ["  pair        truth   measured   std. err.    sigma   adjusted p"]
         for k in range(min(rows, len(self))):
-            pair = f"{self.first[k]}-{self.second[k]}"
+            pair = f"{names[self.first[k]]}-{names[self.second[k]]}"
             lines.append(
                 f"  {pair:<8} {self.truth[k]:>8.4f}   {self.measured[k]:>8.4f}   {self.stat[k]:>9.4f} "
-                f"{self.sigma[k]:>8.1f}   {self.adjusted[k]:>10.2g}"
+                f"{self.sigma[k]:>8.1f}   {p_text(self.adjusted[k]):>10}"
             )
         return "\n".join(lines)
+
+
+def p_text(p: float) -> str:
+    """Return a probability in two digits; one too small for a double is said to be below 1e-300.
+
+    Examples
+    --------
+    >>> p_text(0.0314), p_text(0.0)
+    ('0.031', '< 1e-300')
+    """
+    return f"{p:.2g}" if p >= 1e-300 else "< 1e-300"
 
 
 def pair_deviations(spins: NDArray[np.int8], truth: Estimate, clusters: Clusters) -> PairTable:

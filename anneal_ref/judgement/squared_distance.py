@@ -31,6 +31,8 @@ from anneal_ref.judgement.clusters import Clusters
 
 # Uniformly random shots added to the noise (not to the value), in the manner of Agresti and Coull, Am. Stat. 52, 119
 # (1998): without them correlations that were measured as exactly +-1 would claim to have no error at all.
+# Two of them, where `observe.resample` takes four for the error of a single correlation: there the four belong to a
+# two-sided interval at 95 % (z^2 = 3.8), while bounds here are one-sided (z^2 = 2.7), on a sum of known skewness.
 PSEUDO_SHOTS = 2.0
 _CHUNK = 8192
 

@@ -321,3 +321,35 @@ def test_two_durations_of_one_instance_are_one_draw_of_disorder(ensemble: list[R
     other = solved(ensemble[0].anneal.instance, duration=1.5)
     parts = [*compared(ensemble, 300, 5), compare(other, other.sample(300, seed=6))]
     assert (pool(parts).n_instances, pool(parts).n_comparisons) == (6, 7)
+
+
+def test_pairs_and_sites_are_named_as_on_the_device() -> None:
+    lattice = ar.lattices.square(3, 3).diluted(dead=[0])
+    truth = solved(ar.draw_instance(lattice, ar.disorder.plus_minus(), seed=3))
+    spins = truth.sample(5000, seed=7).spins.copy()
+    spins[np.random.default_rng(2).random(5000) < 0.3, 7] *= -1
+    text = str(compare(truth, Samples(spins)))
+    assert lattice.labels[7] == 8
+    assert "sites most involved: 8 (" in text
+    assert "-8 " in text
+
+
+def test_one_pair_names_no_site() -> None:
+    lattice = ar.lattices.from_edges(4, [[0, 1], [2, 3]])
+    truth = solved(ar.Instance(lattice, np.array([1.0, -1.0])))
+    spins = truth.sample(5000, seed=7).spins.copy()
+    spins[np.random.default_rng(2).random(5000) < 0.2, 0] *= -1
+    result = compare(truth, Samples(spins))
+    assert result.pairs.significant() == 1
+    assert "sites most involved" not in str(result)
+
+
+def test_spins_without_their_wrapper_are_refused(plain: Reference) -> None:
+    with pytest.raises(InputError, match=r"got ndarray; wrap .* anneal_ref.Samples\(spins\)"):
+        compare(plain, plain.sample(100, seed=1).spins)  # type: ignore[arg-type]
+
+
+def test_a_truth_short_of_its_tolerance_says_by_how_much(plain: Reference) -> None:
+    strict = replace(plain, tolerance=plain.error / 10)
+    note = next(note for note in compare(strict, plain.sample(300, seed=1)).notes if "the truth was asked" in note)
+    assert f"within {plain.error / 10:.2g} and reached {plain.error:.2g}" in note
