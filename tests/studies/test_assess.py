@@ -13,6 +13,7 @@ from anneal_ref.backends.exact.state_vector import StateVector
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate, Score
 from anneal_ref.base.run import Run
+from anneal_ref.judgement.compare import compare
 from anneal_ref.judgement.fidelity import Fidelity, Refusal
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.model.instances import Instance
@@ -310,3 +311,18 @@ def test_an_acceptance_that_the_likelihood_contradicts_says_so_at_once(tmp_path:
     assert verdict.outcome == "accept"
     assert "But within these limits it departs from the truth beyond doubt in 1 of 2 cases" in headline(verdict)
     assert "<Z> error" not in str(assess(write(tmp_path), truth, run=QUIET))
+
+
+def test_a_truth_asked_for_more_than_the_study_needs_draws_no_note(tmp_path: Path, truth: Archive) -> None:
+    verdict = assess(write(tmp_path), truth, run=QUIET)
+    case, plain = verdict.judged[0].case, verdict.judged[0].reference
+    strict = replace(plain, tolerance=plain.error / 10)
+    one = replace(verdict.judged[0], reference=strict, comparison=compare(strict, case.samples()))
+    assert any("was asked to be within" in note for note in one.comparison.notes)
+    assert "was asked to be within" not in str(replace(verdict, judged=(one, *verdict.judged[1:])))
+    table = verdict.study.table
+    harsh = replace(
+        verdict.study,
+        table=table.model_copy(update={"truth": table.truth.model_copy(update={"tolerance": plain.error / 5})}),
+    )
+    assert "was asked to be within" in str(replace(verdict, study=harsh, judged=(one, *verdict.judged[1:])))
