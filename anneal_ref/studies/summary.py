@@ -13,7 +13,7 @@ from anneal_ref.judgement.deviations import p_text
 from anneal_ref.judgement.equivalence import Finding
 from anneal_ref.judgement.fidelity import Refusal
 from anneal_ref.studies.study import time_unit
-from anneal_ref.studies.text import aligned
+from anneal_ref.studies.text import aligned, counted
 
 if TYPE_CHECKING:
     from anneal_ref.studies.assess import Judged, Verdict
@@ -35,13 +35,14 @@ def summary(verdict: Verdict) -> str:
     """Return all tables of a verdict."""
     study, level = verdict.study, verdict.decision.level
     lines = [
-        f"{study.name}: {len(verdict.judged)} cases, limit on the correlation error "
+        f"{study.name}: {counted(len(verdict.judged), 'case')}, limit on the correlation error "
         f"{study.acceptance.correlation_error:g}",
         "",
     ]
     lines += [aligned(score_table(verdict), left=(0, 2)), ""]
     lines += [aligned([ENERGY_HEADINGS, *map(energy_row, verdict.judged)]), ""]
-    lines += [aligned(pooled_table(verdict), left=(0, 1)), ""]
+    if pooled_tells_more(verdict):
+        lines += [aligned(pooled_table(verdict), left=(0, 1)), ""]
     lines.append("pairs of spins that depart most (adjusted p: all pairs of a case looked at together, Holm)")
     lines += [aligned([PAIR_HEADINGS, *worst_pairs(verdict)], left=(0, 1)), *suspects(verdict), ""]
     lines += [f"note: {note}" for note in notes(verdict)]
@@ -57,7 +58,8 @@ def summary(verdict: Verdict) -> str:
     if has_fields(verdict):
         lines.append("with fields: correlation errors are those of <ZZ> - <Z><Z>, pairs are listed with plain <ZZ>;")
         lines.append("<Z> error: root mean square over sites of (processor - truth), shot noise taken out")
-    lines.append("disorder: what the finite number of instances adds if they stand for their whole ensemble")
+    if pooled_tells_more(verdict):
+        lines.append("disorder: what the finite number of instances adds if they stand for their whole ensemble")
     lines += ["log-lik.: log-likelihood per shot under the truth, in nats, beside what a perfect processor scores", ""]
     lines += [f"{WORDS[verdict.outcome]}. {sentences(verdict)[0]}", *sentences(verdict)[1:]]
     return "\n".join(lines)
@@ -66,6 +68,13 @@ def summary(verdict: Verdict) -> str:
 def has_fields(verdict: Verdict) -> bool:
     """Return whether any instance has fields, so that <Z> is judged."""
     return any(one.comparison.has_fields for one in verdict.judged)
+
+
+def pooled_tells_more(verdict: Verdict) -> bool:
+    """Return whether rows pooled over instances say anything that the rows of the cases do not."""
+    several = any(pooled.n_instances > 1 for _, pooled in verdict.pooled)
+    alone = [(verdict.outcome_at(one.comparison.duration), one.comparison.verdict) for one in verdict.judged]
+    return several or any(at_duration != of_case for at_duration, of_case in alone)
 
 
 def score_table(verdict: Verdict) -> list[tuple[str, ...]]:
@@ -166,7 +175,8 @@ def worst_pairs(verdict: Verdict, count: int = 6, each: int = 2) -> list[tuple[s
         for k in range(min(each, len(pairs))):
             cells = (
                 one.case.label, f"{labels[pairs.first[k]]}-{labels[pairs.second[k]]}", f"{pairs.truth[k]:+.4f}",
-                f"{pairs.measured[k]:+.4f} ± {pairs.stat[k]:.4f}", f"{pairs.sigma[k]:+.1f}", p_text(float(pairs.adjusted[k])),
+                f"{pairs.measured[k]:+.4f} ± {pairs.stat[k]:.4f}", f"{pairs.sigma[k]:+.1f}",
+                p_text(float(pairs.adjusted[k])),
             )  # fmt: skip
             found.append((float(pairs.adjusted[k]), float(pairs.p[k]), cells))
     return [cells for _, _, cells in sorted(found)[:count]]
@@ -193,7 +203,9 @@ def suspects(verdict: Verdict, most: int = 8) -> list[str]:
     least = sorted((sigma for sigma, _ in found), reverse=True)[: most + 1]
     shown = [text for sigma, text in found if len(least) <= most or sigma > least[-1]]
     return shown + (
-        [f"and {len(found) - len(shown)} more cases with pairs that depart"] if len(shown) < len(found) else []
+        [f"and {counted(len(found) - len(shown), 'more case')} with pairs that depart"]
+        if len(shown) < len(found)
+        else []
     )
 
 
@@ -238,7 +250,8 @@ def _reservation(verdict: Verdict) -> str:
         return ""
     worst = min(excluded, key=lambda label: sigmas[label])
     return (
-        f" But within these limits it departs from the truth beyond doubt in {len(excluded)} of {len(sigmas)} cases: "
+        f" But within these limits it departs from the truth beyond doubt in {len(excluded)} of "
+        f"{counted(len(sigmas), 'case')}: "
         f"its samples are less likely than a perfect processor's, at worst by {-sigmas[worst]:.0f} standard errors "
         f"({worst})."
     )

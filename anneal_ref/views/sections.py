@@ -20,11 +20,13 @@ from anneal_ref.studies.summary import (
     has_fields,
     notes,
     pooled_table,
+    pooled_tells_more,
     score_table,
     sentences,
     suspects,
     worst_pairs,
 )
+from anneal_ref.studies.text import counted
 from anneal_ref.views import plots
 from anneal_ref.views.content import Grid, Row, Section, picture
 
@@ -53,7 +55,7 @@ def facts(verdict: Verdict) -> list[tuple[str, str]]:
     found = [
         ("Instances", f"{len(names)} of {span} spins"),
         ("Durations", f"{', '.join(f'{at:g}' for at, _ in verdict.pooled)} {unit}".strip()),
-        ("Shots", f"{shots} in {len(verdict.judged)} cases"),
+        ("Shots", f"{shots} in {counted(len(verdict.judged), 'case')}"),
         ("Limit on the correlation error", f"{limits.correlation_error:.1%}"),
     ]
     for name, limit in limits.limits(has_fields(verdict)).items():
@@ -67,32 +69,35 @@ def _errors(verdict: Verdict) -> Section:
     shown = sorted(verdict.judged, key=lambda one: -one.comparison.correlation_error.value)[:MOST_ROWS]
     shown = [one for one in verdict.judged if one in shown]
     unit = time_unit(verdict.study.schedule)
-    labels = [one.case.label for one in shown] + [f"all at {at:g} {unit}".strip() for at, _ in verdict.pooled]
-    scores = [one.comparison.correlation_error for one in shown] + [pooled.score for _, pooled in verdict.pooled]
+    # with one instance at each duration, the pooled figures are those of the cases
+    pools = verdict.pooled if pooled_tells_more(verdict) else ()
+    labels = [one.case.label for one in shown] + [f"all at {at:g} {unit}".strip() for at, _ in pools]
+    scores = [one.comparison.correlation_error for one in shown] + [pooled.score for _, pooled in pools]
     decisions = [one.comparison.decision for one in shown]
     findings = [finding for decision in decisions if decision is not None for finding in decision.findings]
-    findings += [finding for _, finding in verdict.findings]
+    findings += [finding for _, finding in verdict.findings] if pools else []
     outcomes = [finding.outcome for finding in findings if finding.name == "correlation_error"]
     axes = plots.correlation_errors(labels, scores, verdict.study.acceptance.correlation_error, outcomes=outcomes)
-    pooled_heads, *pooled = pooled_table(verdict)
     heads, *rows = score_table(verdict)
+    tables = [Grid(_spelled(heads), tuple(Row(cells) for cells in rows), title="Every case" if pools else "")]
+    if pools:
+        pooled_heads, *pooled = pooled_table(verdict)
+        tables.insert(0, Grid(_spelled(pooled_heads), tuple(Row(cells, pooled=True) for cells in pooled)))
     less = "" if len(shown) == len(verdict.judged) else f" The {len(shown)} cases with the largest errors are drawn."
     return Section(
         "How far the processor departs from quantum dynamics",
         (
             "The correlation error is the distance between measured and true pair correlations, relative to the "
-            "true ones, with the noise of the finite number of shots taken out. The verdict rests on the rows "
-            "pooled over all instances." + (f" {_CONNECTED}" if has_fields(verdict) else ""),
+            "true ones, with the noise of the finite number of shots taken out. The verdict rests on "
+            + ("the rows pooled over all instances." if pools else "one instance at each duration.")
+            + (f" {_CONNECTED}" if has_fields(verdict) else ""),
             *sentences(verdict)[1:],
         ),
-        (
-            Grid(_spelled(pooled_heads), tuple(Row(cells, pooled=True) for cells in pooled)),
-            Grid(_spelled(heads), tuple(Row(cells) for cells in rows), title="Every case"),
-        ),
+        tuple(tables),
         (
             picture(
                 axes,
-                "Correlation errors with intervals of every case and pooled, against the acceptance limit",
+                f"Correlation errors with intervals of every case{' and pooled' if pools else ''}, against the limit",
                 "Correlation error with its interval. The tick is what a perfect processor with the same shots "
                 f"stays below in 95 of 100 runs: an error to the left of it cannot be told from none.{less}",
             ),
@@ -111,7 +116,9 @@ def _refusals(verdict: Verdict, most: int = 6) -> tuple[str, ...]:
     """Say why cases have no fidelity, the first few of many."""
     found = [(one.case.label, one.comparison.fidelity) for one in verdict.judged]
     all_of_them = [f"{label}: {refusal.reason}" for label, refusal in found if isinstance(refusal, Refusal)]
-    more = [f"and {len(all_of_them) - most} more cases without a fidelity"] if len(all_of_them) > most else []
+    more = (
+        [f"and {counted(len(all_of_them) - most, 'more case')} without a fidelity"] if len(all_of_them) > most else []
+    )
     return (*all_of_them[:most], *more)
 
 
@@ -127,8 +134,8 @@ def _agreement(verdict: Verdict) -> Section:
             picture(
                 axes,
                 what,
-                f"{what}, all {len(group)} instances. A line less steep than the diagonal means correlations that "
-                "are too weak.",
+                f"{what}{f', all {len(group)} instances' if len(group) > 1 else ''}. A line less steep than the "
+                "diagonal means correlations that are too weak.",
             )
         )
     texts = ("Plain ⟨ZZ⟩, of instances with fields too.",) if has_fields(verdict) else ()

@@ -327,6 +327,19 @@ def test_a_note_is_told_once(study: Path, capsys: pytest.CaptureFixture[str]) ->
     assert "1 of 2 runs give a batch and 1 do not (ring_0.5ns_0.csv)" in study.with_suffix(".html").read_text()
 
 
+def test_one_instance_is_not_pooled_with_itself(study: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["assess", str(study)]) == 0
+    out, page = capsys.readouterr().out, study.with_suffix(".html").read_text()
+    assert out.startswith("one ring: 1 case, limit")
+    for text in (out, page):
+        assert "all at 0.5 ns" not in text
+        assert "all 1 instances" not in text
+        assert "1 cases" not in text
+    assert "rests on one instance at each duration" in page
+    assert "one-sided bounds at this level, which lie inside the two-sided intervals" in out
+    assert "disorder: " not in out
+
+
 def test_exit_codes_are_those_of_the_documentation() -> None:
     told = {int(line.split()[0]) for line in (cli.__doc__ or "").splitlines() if line[:1].isdigit()}
     assert told == {cli.OK, cli.REJECTED, cli.BAD_INPUT, cli.INCONCLUSIVE, cli.INTERRUPTED}
