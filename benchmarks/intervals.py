@@ -20,10 +20,10 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import stats
 
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.correlation_error import CorrelationError
 from anneal_ref.judgement.equivalence import judge_error
 from anneal_ref.judgement.squared_distance import SquaredDistance, pair_distance
+from anneal_ref.observe.clusters import Clusters
 
 LEVEL = 0.95
 

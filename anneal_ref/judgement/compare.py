@@ -12,7 +12,6 @@ from numpy.typing import NDArray
 from anneal_ref.base.checks import integer, number
 from anneal_ref.base.errors import InputError, NotSupported
 from anneal_ref.base.estimate import Estimate, Score
-from anneal_ref.judgement.clusters import FEW, Clusters
 from anneal_ref.judgement.comparison import Comparison
 from anneal_ref.judgement.correlation_error import correlation_error
 from anneal_ref.judgement.deviations import pair_deviations
@@ -37,6 +36,7 @@ from anneal_ref.judgement.scores import (
     standard_errors,
     student,
 )
+from anneal_ref.observe.clusters import FEW, Clusters
 from anneal_ref.observe.samples import Samples
 
 if TYPE_CHECKING:

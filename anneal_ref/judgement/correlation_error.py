@@ -11,8 +11,8 @@ from numpy.typing import ArrayLike, NDArray
 from anneal_ref.base.checks import signs
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.squared_distance import SquaredDistance, connected_distance, pair_distance
+from anneal_ref.observe.clusters import Clusters
 from anneal_ref.observe.moments import Moments
 
 ONE_SIGMA = 0.6826894921370859

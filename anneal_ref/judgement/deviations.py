@@ -11,8 +11,8 @@ from scipy import special, stats
 from anneal_ref.base.checks import finite, frozen
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.squared_distance import PSEUDO_SHOTS, cluster_sums
+from anneal_ref.observe.clusters import Clusters
 
 
 def holm(p: ArrayLike) -> NDArray[np.float64]:

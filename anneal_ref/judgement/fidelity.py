@@ -10,7 +10,7 @@ from scipy import special
 
 from anneal_ref.base.errors import NotSupported
 from anneal_ref.base.estimate import Estimate, Score
-from anneal_ref.judgement.clusters import Clusters
+from anneal_ref.observe.clusters import Clusters
 from anneal_ref.observe.resample import jackknife
 
 SUPPORT_SHARE = 0.99

@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 from scipy import special
 
 from anneal_ref.base.estimate import Estimate, Score
-from anneal_ref.judgement.clusters import Clusters
+from anneal_ref.observe.clusters import Clusters
 
 MIXTURE = 1e-6
 """Share of uniformly random shots that is mixed into the truth before the logarithm."""

@@ -10,9 +10,9 @@ from numpy.typing import NDArray
 
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.correlation_error import ONE_SIGMA
 from anneal_ref.judgement.squared_distance import SquaredDistance, site_distance
+from anneal_ref.observe.clusters import Clusters
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -9,12 +9,12 @@ from numpy.typing import NDArray
 from scipy import special
 
 from anneal_ref.base.estimate import Estimate, Score
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.correlation_error import CorrelationError
 from anneal_ref.judgement.likelihood import cautious, log_likelihood, outside, tempered
 from anneal_ref.judgement.magnetisation_error import MagnetisationError
 from anneal_ref.judgement.perfect import NoiseFloor, Perfect, Repetitions
 from anneal_ref.judgement.squared_distance import PSEUDO_SHOTS, pair_distance
+from anneal_ref.observe.clusters import Clusters
 from anneal_ref.observe.observables import problem_energy, q2
 
 if TYPE_CHECKING:

@@ -27,7 +27,7 @@ from numpy.typing import NDArray
 from scipy import optimize, special
 
 from anneal_ref.base.checks import frozen
-from anneal_ref.judgement.clusters import Clusters
+from anneal_ref.observe.clusters import Clusters
 
 # Uniformly random shots added to the noise (not to the value), in the manner of Agresti and Coull, Am. Stat. 52, 119
 # (1998): without them correlations that were measured as exactly +-1 would claim to have no error at all.

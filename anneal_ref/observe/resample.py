@@ -14,8 +14,7 @@ unequal size.
 from __future__ import annotations
 
 import warnings
-from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -23,11 +22,9 @@ from numpy.typing import ArrayLike, NDArray
 
 from anneal_ref.base.errors import AnnealRefWarning, InputError
 from anneal_ref.base.estimate import Estimate
+from anneal_ref.observe.clusters import FEW, Clusters
 from anneal_ref.observe.evaluating import evaluate
 from anneal_ref.observe.moments import Moments
-
-FEW_GROUPS = 16
-"""Below this number of groups their spread, and so every error made of it, is itself known to 18 % at best."""
 
 PSEUDO_SHOTS = 4
 """Uniformly random shots imagined beside the measured ones where these show no scatter (Agresti and Coull 1998)."""
@@ -35,41 +32,7 @@ PSEUDO_SHOTS = 4
 _CHUNK = 1 << 16
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class Blocks:
-    """A partition of the shots into blocks that are left out, or drawn, as a whole.
-
-    Parameters
-    ----------
-    order : ndarray of int, shape (n_shots,)
-        Shots, block after block.
-    edges : ndarray of int, shape (n_blocks + 1,)
-        Where each block begins and ends in `order`.
-    """
-
-    order: NDArray[np.intp]
-    edges: NDArray[np.intp]
-
-    @property
-    def sizes(self) -> NDArray[np.intp]:
-        """Number of shots in each block."""
-        return np.diff(self.edges)
-
-    def __len__(self) -> int:
-        """Return the number of blocks."""
-        return len(self.edges) - 1
-
-    def __iter__(self) -> Iterator[NDArray[np.intp]]:
-        """Give the shots of each block."""
-        for low, high in zip(self.edges[:-1], self.edges[1:], strict=True):
-            yield self.order[low:high]
-
-    def without(self, block: int) -> NDArray[np.intp]:
-        """Return the shots of all blocks but one."""
-        return np.concatenate((self.order[: self.edges[block]], self.order[self.edges[block + 1] :]))
-
-
-def blocks(n_shots: int, groups: NDArray[Any] | None = None, most: int = 1000) -> Blocks:
+def blocks(n_shots: int, groups: NDArray[Any] | None = None, most: int = 1000) -> Clusters:
     """Return the blocks of shots that resampling treats as one.
 
     With groups (gauges, batches, runs) each group is a block, however many there are, because shots of one group share
@@ -86,9 +49,9 @@ def blocks(n_shots: int, groups: NDArray[Any] | None = None, most: int = 1000) -
     if groups is not None:
         _, inverse, sizes = np.unique(groups, return_inverse=True, return_counts=True)
         if len(sizes) > 1:
-            return Blocks(np.argsort(inverse, kind="stable"), np.concatenate(([0], np.cumsum(sizes))))
+            return Clusters(np.argsort(inverse, kind="stable"), sizes.astype(np.intp))
     count = min(n_shots, most)
-    return Blocks(np.arange(n_shots), np.arange(count + 1) * n_shots // count)
+    return Clusters(np.arange(n_shots), np.diff(np.arange(count + 1) * n_shots // count))
 
 
 def warn_if_few(groups: NDArray[Any] | None) -> None:
@@ -101,7 +64,7 @@ def warn_if_few(groups: NDArray[Any] | None) -> None:
             "all shots belong to one group; errors are those of independent shots and hold nothing of the spread "
             "between gauges or batches"
         )
-    elif count < FEW_GROUPS:
+    elif count < FEW:
         message = (
             f"only {count} groups (gauges or batches) of shots; errors taken from their spread are themselves "
             f"uncertain by about {100 / np.sqrt(2 * (count - 1)):.0f} %"
@@ -188,7 +151,7 @@ def sums(spins: NDArray[np.int8]) -> tuple[NDArray[np.float64], NDArray[np.float
     return z, zz
 
 
-def block_sums(spins: NDArray[np.int8], parts: Blocks) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def block_sums(spins: NDArray[np.int8], parts: Clusters) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return the sums over each block: of s_i, (n_blocks, n_sites), of s_i s_j, (n_blocks, n_sites, n_sites)."""
     n = spins.shape[1]
     z, zz = np.empty((len(parts), n)), np.empty((len(parts), n, n))
@@ -198,7 +161,7 @@ def block_sums(spins: NDArray[np.int8], parts: Blocks) -> tuple[NDArray[np.float
 
 
 def estimate_of_moments(
-    f: Callable[[Moments], ArrayLike], spins: NDArray[np.int8], parts: Blocks, draws: NDArray[np.int64] | None
+    f: Callable[[Moments], ArrayLike], spins: NDArray[np.int8], parts: Clusters, draws: NDArray[np.int64] | None
 ) -> Estimate:
     """Return f of the moments of the spins, by jackknife, or by bootstrap where `draws` are given."""
     n = len(spins)
@@ -225,7 +188,10 @@ def estimate_of_moments(
 
 
 def estimate_of_spins(
-    f: Callable[[NDArray[np.int8]], ArrayLike], spins: NDArray[np.int8], parts: Blocks, draws: NDArray[np.int64] | None
+    f: Callable[[NDArray[np.int8]], ArrayLike],
+    spins: NDArray[np.int8],
+    parts: Clusters,
+    draws: NDArray[np.int64] | None,
 ) -> Estimate:
     """Return f of the spins, by jackknife, or by bootstrap where `draws` are given."""
 
@@ -233,7 +199,7 @@ def estimate_of_spins(
         return evaluate(f, chosen)
 
     if draws is None:
-        replicas = (value(spins[parts.without(k)]) for k in range(len(parts)))
+        replicas = (value(spins[shots]) for shots in parts.left_out())
     else:
         stretches = list(parts)
         replicas = (
@@ -247,7 +213,7 @@ def _estimate(
     full: NDArray[np.float64],
     replicas: list[NDArray[np.float64]],
     with_pseudo: NDArray[np.float64],
-    parts: Blocks,
+    parts: Clusters,
     drawn: bool,
 ) -> Estimate:
     for k, replica in enumerate([full, *replicas]):

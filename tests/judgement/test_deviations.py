@@ -6,8 +6,8 @@ from scipy import stats
 
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.deviations import PairTable, holm, pair_deviations
+from anneal_ref.observe.clusters import Clusters
 
 N = 8
 

@@ -5,8 +5,8 @@ import pytest
 from scipy import stats
 
 from anneal_ref.base.errors import NotSupported
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.fidelity import fidelity, fold, state_index, support
+from anneal_ref.observe.clusters import Clusters
 
 
 def spins_of(index: np.ndarray, n: int) -> np.ndarray:

@@ -5,9 +5,9 @@ import pytest
 from scipy import stats
 
 from anneal_ref.base.estimate import Estimate
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.likelihood import MIXTURE, cautious, log_likelihood, outside, tempered
 from anneal_ref.judgement.perfect import Perfect
+from anneal_ref.observe.clusters import Clusters
 
 
 def truth(seed: int = 1) -> Perfect:

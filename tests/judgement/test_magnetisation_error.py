@@ -9,11 +9,11 @@ from scipy import stats
 import anneal_ref as ar
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.compare import compare
 from anneal_ref.judgement.equivalence import Acceptance, judge_error
 from anneal_ref.judgement.magnetisation_error import MagnetisationError, magnetisation_error
 from anneal_ref.judgement.pooling import pool
+from anneal_ref.observe.clusters import Clusters
 from anneal_ref.observe.samples import Samples
 from anneal_ref.truth.reference import Reference, reference
 

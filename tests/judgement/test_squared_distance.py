@@ -7,13 +7,13 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from anneal_ref.judgement.clusters import Clusters
 from anneal_ref.judgement.squared_distance import (
     SquaredDistance,
     connected_distance,
     pair_distance,
     site_distance,
 )
+from anneal_ref.observe.clusters import Clusters
 
 
 def states(n: int) -> np.ndarray:

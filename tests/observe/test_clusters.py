@@ -6,7 +6,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from anneal_ref.base.errors import InputError
-from anneal_ref.judgement.clusters import Clusters
+from anneal_ref.observe.clusters import Clusters
 
 
 @given(st.lists(st.integers(-3, 3), min_size=2, max_size=30))
@@ -47,3 +47,9 @@ def test_bad_labels_are_refused() -> None:
         Clusters.of(3, [1, 2])
     with pytest.raises(InputError, match="finite"):
         Clusters.of(2, [1.0, np.nan])
+
+
+def test_what_is_left_out_is_the_rest() -> None:
+    clusters = Clusters.of(7, [2, 2, 0, 1, 1, 1, 0])
+    for shots, rest in zip(clusters, clusters.left_out(), strict=True):
+        assert sorted([*shots, *rest]) == list(range(7))

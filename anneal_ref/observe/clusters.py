@@ -12,7 +12,7 @@ from anneal_ref.base.checks import finite, integer
 from anneal_ref.base.errors import InputError
 
 FEW = 16
-"""Below this number of clusters an interval made of their scatter is wide and itself uncertain."""
+"""Below this number of clusters an interval made of their scatter is wide, and itself known to 18 % at best."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -85,6 +85,12 @@ class Clusters:
     def __iter__(self) -> Iterator[NDArray[np.intp]]:
         """Give the shots of each cluster."""
         yield from np.split(self.order, np.cumsum(self.sizes)[:-1])
+
+    def left_out(self) -> Iterator[NDArray[np.intp]]:
+        """Give the shots outside each cluster."""
+        edges = np.concatenate(([0], np.cumsum(self.sizes)))
+        for low, high in zip(edges[:-1], edges[1:], strict=True):
+            yield np.concatenate((self.order[:low], self.order[high:]))
 
     def sums(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
         """Return the sum over each cluster of an array with one row for each shot, shape (n_clusters, ...)."""
