@@ -237,7 +237,8 @@ def headline(verdict: Verdict) -> str:
     if kinds["inconclusive"] and verdict.outcome == "reject":
         text += f" At {_places(verdict, kinds['inconclusive'])} the samples do not settle it."
     if kinds["accept"] and verdict.outcome != "accept":
-        meets = f" At {_places(verdict, kinds['accept'])} it meets {limits}"
+        shared = {at for at, _ in kinds["accept"]} & {at for at, _ in decisive}
+        meets = " Within its limit" if shared else f" At {_places(verdict, kinds['accept'])} it meets {limits}"
         text += f"{meets}: {_details(verdict, kinds['accept'])}."
     return f"{text}{_reservation(verdict)}"
 

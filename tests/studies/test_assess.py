@@ -299,6 +299,7 @@ def test_fields_bring_a_limit_on_the_magnetisations(tmp_path: Path, truth: Archi
     assert good.pooled[0][1].magnetisation.n_sites == 8
     bad = assess(islands(tmp_path, sign=-1), truth, run=QUIET)
     assert bad.outcome == "reject"
+    assert " Within its limit: pair correlations are off by at most" in headline(bad)
     assert [finding.name for _, finding in bad.findings if finding.outcome == "reject"] == ["magnetisation_error"]
     lines = str(bad).splitlines()
     assert sum("<Z> error" in line for line in lines if line.startswith(("instance", "pooled"))) == 2
