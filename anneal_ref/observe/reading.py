@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from anneal_ref.base.checks import choice
-from anneal_ref.base.errors import InputError
+from anneal_ref.base.errors import AnnealRefError, InputError, in_words
 from anneal_ref.base.storage import PART, Record, read_record, write_record
 from anneal_ref.observe import text
 from anneal_ref.observe.bits import pack, unpack
@@ -48,7 +48,12 @@ def read(
         raise InputError(f"{path}: no such file")
     if path.stat().st_size == 0:
         raise InputError(f"{path}: the file is empty; a sample file holds at least one shot")
-    table = reader(path)
+    try:
+        table = reader(path)
+    except AnnealRefError:
+        raise
+    except OSError as error:
+        raise InputError(f"{path}: the file cannot be read: {in_words(error)}") from error
     if reader is text.read and values is not None and table.values not in (None, values):
         raise InputError(
             f"{path}: the file says that it holds {table.values}, and {values_by} says {values}; it is meant for files "
@@ -58,7 +63,11 @@ def read(
     found = table.manifest
     sidecar = _sidecar(path)
     if sidecar.is_file():
-        beside = Manifest.from_json(sidecar.read_text(encoding="utf-8"), str(sidecar))
+        try:
+            said = sidecar.read_text(encoding="utf-8")
+        except (OSError, UnicodeDecodeError) as error:
+            raise InputError(f"{sidecar}: the manifest cannot be read: {in_words(error)}") from error
+        beside = Manifest.from_json(said, str(sidecar))
         found = found.merged(beside, (str(path), str(sidecar)))
     if manifest is not None:
         found = found.merged(manifest, (str(path), "the manifest given by the caller"))

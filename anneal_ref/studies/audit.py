@@ -74,7 +74,7 @@ class Audit:
         lines += [f"leftover of an interrupted write, may be deleted: {name}" for name in self.leftovers]
         lines.append(
             f"{self.folder}: {len(self.rows)} references, {self.recomputed} recomputed, "
-            + (f"{bad} with problems" if bad else "all sound")
+            + (f"{bad} with problems" if bad else "all sound" if self.rows else "nothing was verified")
         )
         return "\n".join(lines)
 

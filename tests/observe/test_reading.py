@@ -211,6 +211,19 @@ def test_a_sidecar_with_a_gauge_of_another_length(tmp_path: Path) -> None:
         read(tmp_path, "# sites: 4 5\n1,-1\n")
 
 
+def test_files_that_the_system_does_not_give(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    (tmp_path / "run.csv.manifest.json").write_bytes(b"\xff")
+    with pytest.raises(InputError, match=r"run.csv.manifest.json: .*cannot be read: it is not text in UTF-8"):
+        read(tmp_path, "1,-1\n")
+
+    def refuse(*args: object, **kwargs: object) -> None:
+        raise PermissionError(13, "Permission denied")
+
+    monkeypatch.setattr(Path, "open", refuse)
+    with pytest.raises(InputError, match=r"run.csv: the file cannot be read: permission is denied"):
+        Samples.read(tmp_path / "run.csv")
+
+
 def test_manifest_beside_the_file(tmp_path: Path) -> None:
     (tmp_path / "run.csv.manifest.json").write_text('{"duration": 7}')
     assert read(tmp_path, "# batch: 1\n1,-1\n").manifest.to_dict() == {"duration": 7.0, "batch": 1}

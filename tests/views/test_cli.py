@@ -287,7 +287,9 @@ def test_a_case_that_does_not_fit_is_named(study: Path, capsys: pytest.CaptureFi
 
 def test_an_audit_of_nothing_does_not_pass(study: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["audit", str(study.parent)]) == 2
-    assert "there are no references in" in capsys.readouterr().err
+    captured = capsys.readouterr()
+    assert "there are no references in" in captured.err
+    assert "sound" not in captured.out
 
 
 def test_a_full_output_loses_no_page(study: Path) -> None:
