@@ -1,7 +1,7 @@
 """The step rule of the state vector: constants from a fit set, coverage on a held-out set.
 
-    python benchmarks/step_rule.py --quick     a tenth of the cases, held-out coverage only (a minute)
-    python benchmarks/step_rule.py --full      the fit and the coverage on both sets (about twenty minutes)
+    python benchmarks/step_rule.py --quick     a tenth of the cases, held-out coverage only (seconds)
+    python benchmarks/step_rule.py --full      the fit and the coverage on both sets (about a minute)
 
 For each anneal and splitting the error over all <Z> and <ZZ> is measured against a run with at least ten times finer
 steps. The fit gives the slope of `steps = slope * tolerance^(-1/order) * phase` that 97 % of the fit set stays below.

@@ -254,7 +254,7 @@ def test_rounding_common_to_every_order_of_the_sites_is_in_the_bars(precision, t
 
 
 def rough_tables(seed, count):
-    """Anneals whose schedule is a table of many uneven rows, as measured ones are: steps cannot meet all of its knots."""
+    """Anneals whose schedule is a table of many uneven rows, as measured ones are; steps cannot meet all its knots."""
     rng = np.random.default_rng(seed)
     for k in range(count):
         n, rows = int(rng.integers(3, 7)), int(rng.integers(60, 900))

@@ -108,8 +108,8 @@ def time_grid(anneal: Anneal, mesh: Mesh, density: float, marks: Sequence[float]
     """Return step ends from 0 to the duration, equally long in phase between the times that must be met.
 
     Met are the marks, the corners of the waveform, and all knots of the schedule unless there are more than 400 and
-    more than four for each step that the phase asks for; then only those that lie next to an interval of at least a step, and runs of
-    shorter intervals are straddled (see `splitting`).
+    more than four for each step that the phase asks for; then only those that lie next to an interval of at least a
+    step, and runs of shorter intervals are straddled (see `splitting`).
 
     Parameters
     ----------
