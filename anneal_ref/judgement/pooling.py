@@ -57,7 +57,7 @@ class Pooled:
     def __str__(self) -> str:
         """Return score, floor and verdict, a line each."""
         lines = [
-            f"pooled over {self.n_instances} instances, {self.n_comparisons} comparisons, {self.n_shots} shots",
+            f"pooled (instances: {self.n_instances}, comparisons: {self.n_comparisons}, shots: {self.n_shots})",
             f"  {self.score}",
             f"  plain, with the noise of the shots: {self.correlation.raw:.3g}; a perfect processor "
             f"{self.floor.raw_mean:.3g}, in 95 of 100 runs below {self.floor.raw_quantile:.3g}",
