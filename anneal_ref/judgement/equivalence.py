@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from statistics import NormalDist
 from typing import Protocol
 
-from scipy import optimize
+from scipy import optimize, special
 
 from anneal_ref.base.checks import integer, number, positive
 from anneal_ref.base.errors import InputError
@@ -199,10 +199,11 @@ def judge_error(
     accepting, rejecting = error.edges(limit)
 
     def margin(edge: float, alpha: float) -> Callable[[float], float]:
-        quantile, reserve = _normal(1 - alpha), _normal(POWER)
+        reserve, freedom = _normal(POWER), error.distance.freedom
+        # the tail that bounds have, with the clusters that there would be then
         return lambda more: (
             abs(present - edge)
-            - quantile * math.sqrt(error.distance.variance(edge, more))
+            - float(special.stdtrit(freedom * more / 2, 1 - alpha)) * math.sqrt(error.distance.variance(edge, more))
             - reserve * math.sqrt(error.distance.variance(present, more))
         )
 

@@ -98,7 +98,7 @@ class SquaredDistance:
     def variance(self, theta: float, more: float = 1.0) -> float:
         """Return the variance of the value if the true one is theta, from `more` times as much such data."""
         _, along, _ = self._forms(self._tilt(theta))
-        return 4 * along / more + 2 * self.traces[1] * (1 + 1 / self.freedom) / more**2
+        return 4 * along / more + 2 * self.traces[1] * (1 + 1 / (self.freedom * more)) / more**2
 
     def stat(self) -> float:
         """Return the standard error of the value."""
@@ -123,11 +123,12 @@ class SquaredDistance:
 
     def lower(self, level: float) -> float:
         """Return a one-sided lower bound on the true squared distance; 0 if 0 is not excluded."""
-        traces = self.traces
-        if any(own < least for own, least in zip(traces, self.least, strict=True)):
-            one, two, three = (max(pair) for pair in zip(traces, self.least, strict=True))
-            return replace(self, traces=(one, two, three), least=(0.0, 0.0, 0.0)).lower(level)
-        return self._crossing(lambda tilt: self._tail(tilt, self.value, upper_tail=True) - (1 - level))
+        plain = self._crossing(lambda tilt: self._tail(tilt, self.value, upper_tail=True) - (1 - level))
+        if plain == 0 or all(own >= least for own, least in zip(self.traces, self.least, strict=True)):
+            return plain
+        one, two, three = (max(pair) for pair in zip(self.traces, self.least, strict=True))
+        # more noise also leaves less of d for the signal; where that narrows the law, the bound stays where it was
+        return min(plain, replace(self, traces=(one, two, three), least=(0.0, 0.0, 0.0)).lower(level))
 
     def _forms(self, tilt: float) -> tuple[float, float, float]:
         """Theta, delta.V.delta and delta.V^2.delta for the squared components of d times exp(2 tilt) at the noisiest.

@@ -15,7 +15,9 @@ from anneal_ref.judgement.equivalence import (
     judge_error,
     outcome_of,
 )
+from anneal_ref.judgement.magnetisation_error import MagnetisationError, magnetisation_error
 from anneal_ref.judgement.perfect import Perfect
+from anneal_ref.observe.clusters import Clusters
 from anneal_ref.observe.moments import Moments
 
 N, REPEATS = 6, 300
@@ -101,6 +103,23 @@ def test_the_predicted_shots_settle_it() -> None:
     assert 0.65 < again.count("accept") / 200 < 0.95
     assert again.count("reject") <= 2
     assert "more shots" in next(one.advice for one in findings if one.more_shots is not None)
+
+
+def test_the_predicted_shots_settle_it_with_few_gauges_too() -> None:
+    """Bounds of few gauges have a wide tail, and a prediction without it promises too much."""
+    z, size, limit = np.array([0.1, -0.4, 0.7, 0.2, -0.6]), 1500, 0.05
+
+    def grouped(gauges: int, seed: int) -> MagnetisationError:
+        shots = gauges * size
+        spins = np.where(np.random.default_rng(seed).random((shots, 5)) < (1 + z) / 2, 1, -1).astype(np.int8)
+        return magnetisation_error(spins, Estimate(z, 0.0, 0.0), Clusters.of(shots, np.arange(shots) // size))
+
+    findings = [judge_error("magnetisation_error", grouped(3, k), limit, 3 * size) for k in range(40)]
+    needed = [one.more_shots for one in findings if one.more_shots is not None]
+    assert len(needed) > 30
+    gauges = 3 + int(np.ceil(np.median(needed) / size))
+    again = [judge_error("magnetisation_error", grouped(gauges, 100 + k), limit, gauges * size) for k in range(100)]
+    assert [one.outcome for one in again].count("accept") >= 75
 
 
 def test_a_blunt_truth_cannot_be_settled_by_shots() -> None:

@@ -355,3 +355,19 @@ def test_rare_events_that_were_not_seen_do_not_make_a_departure() -> None:
     assert safe <= allowed
     # the wrong twin trusts what it saw
     assert plain > allowed
+
+
+@pytest.mark.parametrize("gauges", [None, 3, 8])
+def test_a_floor_under_the_noise_never_raises_a_lower_bound(gauges: int | None) -> None:
+    rng, lowered = np.random.default_rng(0), 0
+    for k in range(120):
+        n, shots = int(rng.integers(2, 8)), 100
+        z = rng.uniform(-0.98, 0.98, n)
+        up = np.clip((1 + z + 0.2 * (k % 2) * rng.normal(size=n)) / 2, 0, 1)
+        spins = np.where(rng.random((shots, n)) < up, 1, -1).astype(np.int8)
+        clusters = Clusters.of(shots, None if gauges is None else np.arange(shots) % gauges)
+        floored = site_distance(spins, z, clusters, np.diag(1 - z**2)).lower(0.95)
+        plain = site_distance(spins, z, clusters).lower(0.95)
+        assert floored <= plain
+        lowered += floored < plain
+    assert lowered > 0
