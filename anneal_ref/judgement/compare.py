@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from anneal_ref.base.checks import integer, number
 from anneal_ref.base.errors import InputError, NotSupported
 from anneal_ref.base.estimate import Estimate, Score
-from anneal_ref.judgement.comparison import Comparison
+from anneal_ref.judgement.comparison import EXCLUDED, Comparison
 from anneal_ref.judgement.correlation_error import correlation_error
 from anneal_ref.judgement.deviations import pair_deviations
 from anneal_ref.judgement.equivalence import (
@@ -44,9 +44,6 @@ if TYPE_CHECKING:
 
 SUSPICIOUS = 1e-3
 """Probability of so small an error from a perfect processor below which the samples are called too good."""
-
-CLEAR = 5.0
-"""Standard errors of the log-likelihood beyond which a departure is certain."""
 
 RARE = 10
 """Expected shots away from one configuration below which the scatter of the shots does not tell their noise."""
@@ -162,7 +159,7 @@ def compare(
         scores["log_likelihood"], sigma["log_likelihood"] = score, z
         if score.floor is not None:
             truth["log_likelihood"] = score.floor
-        if z < -CLEAR:
+        if z < EXCLUDED:
             notes.append(
                 "the log-likelihood shows beyond doubt that the processor departs from the truth, whether or not the "
                 "limits allow it"

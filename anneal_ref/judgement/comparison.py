@@ -17,7 +17,7 @@ from anneal_ref.judgement.magnetisation_error import MagnetisationError
 from anneal_ref.judgement.perfect import NoiseFloor
 
 EXCLUDED = -6.0
-"""Standard errors of the log-likelihood below which a verdict of acceptance says that the truth is excluded."""
+"""Standard errors of the log-likelihood below which a departure from the truth is beyond doubt, whatever the limits."""
 
 _PLAIN = "  plain, shot noise included"
 

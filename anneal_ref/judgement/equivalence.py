@@ -41,8 +41,8 @@ class Acceptance:
     magnetisation_error : float, optional
         Largest allowed root mean square over sites of (measured <Z> - true <Z>). With fields the correlation error is
         that of connected correlations, which do not see <Z>; an instance with fields is therefore always held
-        against a limit on <Z> too, by default the one on the correlation error. Without fields there is such a
-        test only where the limit is given.
+        against a limit on <Z> too, by default the one on the correlation error. Without fields <Z> vanishes by
+        symmetry and has no limit.
     level : float
         Confidence of each verdict, between 0.5 and 1: a processor exactly at a limit is accepted, and is rejected,
         with a chance of at most 1 - level.
@@ -66,10 +66,10 @@ class Acceptance:
 
     def limits(self, fields: bool) -> dict[str, float]:
         """Return the limits that hold for instances with or without fields, by name."""
-        magnetisation = self.magnetisation_error
+        magnetisation = self.correlation_error if self.magnetisation_error is None else self.magnetisation_error
         named = {
             "correlation_error": self.correlation_error,
-            "magnetisation_error": self.correlation_error if fields and magnetisation is None else magnetisation,
+            "magnetisation_error": magnetisation if fields else None,
             "residual_energy": self.residual_energy,
             "order_parameter": self.order_parameter,
         }

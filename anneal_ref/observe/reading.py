@@ -61,14 +61,14 @@ def read(
         )
     spins, groups = expand(to_spins(table, table.values or values), table)
     found = table.manifest
-    sidecar = _sidecar(path)
-    if sidecar.is_file():
+    file = sidecar(path)
+    if file.is_file():
         try:
-            said = sidecar.read_text(encoding="utf-8")
+            said = file.read_text(encoding="utf-8")
         except (OSError, UnicodeDecodeError) as error:
-            raise InputError(f"{sidecar}: the manifest cannot be read: {in_words(error)}") from error
-        beside = Manifest.from_json(said, str(sidecar))
-        found = found.merged(beside, (str(path), str(sidecar)))
+            raise InputError(f"{file}: the manifest cannot be read: {in_words(error)}") from error
+        beside = Manifest.from_json(said, str(file))
+        found = found.merged(beside, (str(path), str(file)))
     if manifest is not None:
         found = found.merged(manifest, (str(path), "the manifest given by the caller"))
     if found.n_columns not in (None, spins.shape[1]):
@@ -90,7 +90,8 @@ def _format(path: Path) -> tuple[Callable[[Path], Table], Callable[..., None]]:
     return _FORMATS[suffix]
 
 
-def _sidecar(path: Path) -> Path:
+def sidecar(path: Path) -> Path:
+    """Return where the manifest of a samples file may lie beside it."""
     return path.with_name(path.name + ".manifest.json")
 
 
@@ -147,7 +148,7 @@ def _write_npy(path: Path, spins: NDArray[np.int8], manifest: Manifest, groups: 
         raise InputError(f"{path}: NPY has no room for the groups of the shots; write .npz, .h5 or .csv")
     _aside(path, lambda file: np.save(file, spins))
     # always written, so that no sidecar of an earlier file stays behind
-    _aside(_sidecar(path), lambda file: file.write(manifest.to_json().encode()))
+    _aside(sidecar(path), lambda file: file.write(manifest.to_json().encode()))
 
 
 def _read_npz(path: Path) -> Table:

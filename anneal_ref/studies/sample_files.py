@@ -72,11 +72,14 @@ def refuse_copies(paths: Iterable[str | Path]) -> None:
         # what is wrong with a missing or empty file is said by whoever reads it
         if not path.is_file() or path.stat().st_size == 0:
             continue
-        first = seen.setdefault(hashlib.sha256(path.read_bytes()).hexdigest(), path)
+        beside = reading.sidecar(path)
+        content = path.read_bytes() + (beside.read_bytes() if beside.is_file() else b"")
+        first = seen.setdefault(hashlib.sha256(content).hexdigest(), path)
         if first is not path:
             same = "are one file" if first.resolve() == path.resolve() else "are the same byte for byte"
             raise InputError(
-                f"{first} and {path} {same}; the same shots must not count twice, so leave one of them out"
+                f"{first} and {path} {same}; the same shots must not count twice, so leave one of them out, "
+                "or, if they are runs of their own, give each its batch in its manifest"
             )
 
 

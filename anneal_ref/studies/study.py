@@ -30,8 +30,8 @@ A study is a TOML file that is pleasant to write by hand. Paths are relative to 
 
     [acceptance]
     correlation_error = 0.10                     # largest allowed correlation error, pooled over the instances
-    magnetisation_error = 0.10                   # largest allowed root mean square of <Z> - true <Z>; with fields the
-                                                 # default is the limit above, without them only what is written
+    magnetisation_error = 0.10                   # largest allowed root mean square of <Z> - true <Z>, over instances
+                                                 # with fields; the default is the limit above
     residual_energy = 0.05                       # optional: largest allowed |processor - truth|, per spin
     order_parameter = 0.05                       # optional: largest allowed |processor - truth| of q2
     level = 0.95                                 # confidence of the verdict

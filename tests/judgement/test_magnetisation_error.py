@@ -75,7 +75,8 @@ def test_a_limit_that_is_written_takes_the_place_of_the_default(two_islands: Ref
 def test_which_limits_hold() -> None:
     assert Acceptance(0.1).limits(False) == {"correlation_error": 0.1}
     assert Acceptance(0.1).limits(True) == {"correlation_error": 0.1, "magnetisation_error": 0.1}
-    assert Acceptance(0.1, magnetisation_error=0.2).limits(False)["magnetisation_error"] == 0.2
+    assert "magnetisation_error" not in Acceptance(0.1, magnetisation_error=0.2).limits(False)
+    assert Acceptance(0.1, magnetisation_error=0.2).limits(True)["magnetisation_error"] == 0.2
     with pytest.raises(InputError, match="magnetisation_error"):
         Acceptance(0.1, magnetisation_error=0.0)
 

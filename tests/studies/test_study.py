@@ -325,3 +325,14 @@ def test_a_gauge_of_another_length_names_its_file(folder: Path) -> None:
     for case, name in zip(read(folder, GOOD).cases, FILES[1:], strict=True):
         with pytest.raises(InputError, match=name):
             case.samples()
+
+
+def test_equal_files_with_batches_of_their_own_are_no_copies(folder: Path) -> None:
+    (folder / "ring_0.5ns_b.csv").write_bytes((folder / "ring_0.5ns_a.csv").read_bytes())
+    with pytest.raises(InputError, match="give each its batch in its manifest"):
+        read(folder, GOOD).cases[0].samples()
+    for name, batch in (("a", 1), ("b", 2)):
+        (folder / f"ring_0.5ns_{name}.csv.manifest.json").write_text(
+            f'{{"format": "anneal_ref samples 1", "batch": {batch}}}'
+        )
+    assert read(folder, GOOD).cases[0].samples().n_groups == 2
