@@ -255,7 +255,8 @@ def judge_distance(
     room = abs(distance - limit) - num
     if room <= 0:
         return Finding(name, limit, low, high, outcome, None, _TRUTH_LIMITS)
-    need = _normal(acceptance_level if distance < limit else 1 - alpha / tests) + _normal(POWER)
+    # the quantile of today's clusters, so that few of them are not promised too much
+    need = quantile(acceptance_level if distance < limit else 1 - alpha / tests) + _normal(POWER)
     more_shots, advice = _needed(lambda more: room - need * stat / math.sqrt(more), shots, unit)
     return Finding(name, limit, low, high, outcome, more_shots, advice)
 

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from anneal_ref.base.run import Run
 from anneal_ref.observe.moments import Moments
-from anneal_ref.studies.text import aligned
+from anneal_ref.studies.text import aligned, counted
 from anneal_ref.truth.reference import Reference
 from anneal_ref.truth.refinement import SAFETY
 
@@ -73,7 +73,7 @@ class Audit:
         lines = [aligned(rows, left=(0, 1, 2))] if self.rows else []
         lines += [f"leftover of an interrupted write, may be deleted: {name}" for name in self.leftovers]
         lines.append(
-            f"{self.folder}: {len(self.rows)} references, {self.recomputed} recomputed, "
+            f"{self.folder}: {counted(len(self.rows), 'reference')}, {self.recomputed} recomputed, "
             + (f"{bad} with problems" if bad else "all sound" if self.rows else "nothing was verified")
         )
         return "\n".join(lines)

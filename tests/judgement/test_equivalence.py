@@ -204,3 +204,12 @@ def test_acceptance_checks_its_limits() -> None:
         Acceptance(0.1, residual_energy=-1.0)
     with pytest.raises(InputError, match="level"):
         Acceptance(0.1, level=0.5)
+
+
+def test_few_clusters_are_promised_more_shots_for_a_distance() -> None:
+    """Data times (q stat / room)^2, by hand; q adds the quantiles of test and power, Student with 2 degrees."""
+    few = judge_distance("residual_energy", 0.03, 0.02, 0.0, 0.05, 1000, quantile=lambda p: float(stats.t.ppf(p, 2)))
+    many = judge_distance("residual_energy", 0.03, 0.02, 0.0, 0.05, 1000)
+    # 2.920 + 0.842 and 1.645 + 0.842 standard errors (tables of Student's t and of the normal law)
+    assert few.more_shots == pytest.approx(1000 * (3.762**2 - 1), rel=0.1)
+    assert many.more_shots == pytest.approx(1000 * (2.486**2 - 1), rel=0.1)
