@@ -17,7 +17,8 @@ import numpy as np
 
 import anneal_ref as ar
 from anneal_ref.backends.exact.splitting import BLANES_MOAN_4, BLANES_MOAN_6, SPLITTINGS, STRANG
-from anneal_ref.backends.exact.steps import SLOPES, phase_mesh
+from anneal_ref.backends.exact.steps import SLOPES
+from anneal_ref.backends.phase import phase_mesh
 
 COVERED = 0.97
 TOLERANCES = {

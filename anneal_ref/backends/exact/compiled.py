@@ -1,26 +1,16 @@
-"""The entry points of the compiled kernels, cached on disk under a stamp of all their sources.
-
-Numba keys a cached function to the file that defines it, not to the files of the functions it calls. The stamp, a
-constant in each entry point's closure, is part of the key too: when any kernel file changes, all of them compile again.
-"""
+"""The entry points of the compiled kernels, cached on disk under a stamp of all their sources (`backends.stamp`)."""
 
 from __future__ import annotations
 
-import hashlib
 from pathlib import Path
 from typing import Any
 
 from numba import njit
 
 from anneal_ref.backends.exact import measure, sweeps
+from anneal_ref.backends.stamp import stamp_of
 
 KERNELS = ("simd", "bundles", "rotations", "phases", "sweeps", "measure")
-
-
-def _stamp() -> int:
-    folder = Path(__file__).parent
-    sources = b"".join((folder / f"{name}.py").read_bytes() for name in KERNELS)
-    return int.from_bytes(hashlib.sha256(sources).digest()[:7], "little")
 
 
 def _entries(stamp: int) -> tuple[Any, ...]:
@@ -57,4 +47,4 @@ def _entries(stamp: int) -> tuple[Any, ...]:
     return run, chunk_moments, chunk_currents, chunk_weights, draw
 
 
-run, chunk_moments, chunk_currents, chunk_weights, draw = _entries(_stamp())
+run, chunk_moments, chunk_currents, chunk_weights, draw = _entries(stamp_of(Path(__file__).parent, KERNELS))

@@ -14,8 +14,9 @@ from anneal_ref.backends.exact.ground_start import ground_start, ground_start_by
 from anneal_ref.backends.exact.register import Register
 from anneal_ref.backends.exact.splitting import SPLITTINGS, Floats, Splitting, merge_steps, order_on, step_angles
 from anneal_ref.backends.exact.state import ExactState
-from anneal_ref.backends.exact.steps import choose_splitting, halved, phase_mesh, step_density, time_grid
+from anneal_ref.backends.exact.steps import choose_splitting, step_density, time_grid
 from anneal_ref.backends.memory import require_memory
+from anneal_ref.backends.phase import halved, phase_mesh
 from anneal_ref.base.checks import choice, integer, number
 from anneal_ref.base.errors import InputError, NotSupported
 from anneal_ref.base.run import Bar, Run

@@ -18,7 +18,8 @@ from numpy.polynomial import chebyshev
 from anneal_ref.backends.contract import check_anneal
 from anneal_ref.backends.exact.splitting import Floats
 from anneal_ref.backends.exact.state_vector import StateVector
-from anneal_ref.backends.exact.steps import phase_mesh, time_grid
+from anneal_ref.backends.exact.steps import time_grid
+from anneal_ref.backends.phase import phase_mesh
 from anneal_ref.base.run import Run
 from anneal_ref.model.anneal import Anneal
 

@@ -5,7 +5,8 @@ import pytest
 
 import anneal_ref as ar
 from anneal_ref.backends.exact.splitting import BLANES_MOAN_4, BLANES_MOAN_6
-from anneal_ref.backends.exact.steps import choose_splitting, halved, phase_mesh, step_density, step_rate, time_grid
+from anneal_ref.backends.exact.steps import choose_splitting, step_density, time_grid
+from anneal_ref.backends.phase import halved, phase_mesh, step_rate
 
 
 def anneal(kind, n=7, duration=2.0, fields=0.0, weights=None, schedule=None, waveform=None, seed=0):
