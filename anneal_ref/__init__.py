@@ -29,6 +29,7 @@ _ROOMS = {
     "anneal_ref.observe.manifest": ("Manifest",),
     "anneal_ref.backends.contract": ("Plan",),
     "anneal_ref.backends.exact.state_vector": ("StateVector",),
+    "anneal_ref.backends.mps.mps": ("MPS",),
     "anneal_ref.truth.reference": ("Reference", "reference"),
     "anneal_ref.judgement.compare": ("compare",),
     "anneal_ref.judgement.comparison": ("Comparison",),

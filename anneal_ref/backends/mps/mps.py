@@ -1,0 +1,287 @@
+"""`MPS`: the evolution of a matrix product state by the time-dependent variational principle."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, replace
+from functools import lru_cache
+from time import perf_counter
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from anneal_ref.backends.blas_threads import blas_threads
+from anneal_ref.backends.contract import Kick, Plan, check_anneal, check_kicks, check_times
+from anneal_ref.backends.memory import require_memory
+from anneal_ref.backends.mps.chain import Chain, Limits
+from anneal_ref.backends.mps.costs import bond_limits, cost_of
+from anneal_ref.backends.mps.entropies import cut_entropies
+from anneal_ref.backends.mps.ordering import best_order, cut_ranks
+from anneal_ref.backends.mps.start import kicked, plus_state
+from anneal_ref.backends.mps.state import MPSState
+from anneal_ref.backends.mps.steps import step_ends, sweep_strengths
+from anneal_ref.backends.mps.work import Work
+from anneal_ref.backends.mps.wiring import Floats
+from anneal_ref.backends.phase import phase_mesh
+from anneal_ref.base.checks import choice, frozen, integer, number
+from anneal_ref.base.errors import InputError
+from anneal_ref.base.run import Run
+from anneal_ref.model.anneal import Anneal
+
+REFRESH = 4
+"""Every so many steps all bonds are updated by two sites; in between those that cannot grow, by one."""
+
+_DTYPES: dict[str, Any] = {"double": np.complex128, "single": np.complex64}
+# smallest error of a local exponential that makes sense
+_KRYLOV = {"double": 1e-13, "single": 1e-7}
+# interpreter, libraries and compiled kernels, beside the arrays
+_OVERHEAD = 250 << 20
+
+
+@dataclass(frozen=True, slots=True)
+class MPS:
+    """Matrix-product-state back-end: variational time evolution with a settable bond dimension, on any graph.
+
+    Parameters
+    ----------
+    bond_dimension : int
+        Cap on the dimension of every bond.
+    truncation : float
+        Weight that one update of a bond may discard below the cap, relative to the weight beyond the largest Schmidt
+        value. Local exponentials are exact to a hundredth of its square root.
+    step : float
+        Length of a time step in the phase of the anneal (see `anneal_ref.backends.phase`), about one over the local
+        energy; up to 4.
+    precision : {"double", "single"}
+        Of the tensors.
+    site_order : sequence of int, optional
+        The site at every position of the chain; by default the order with the smallest cuts that is found.
+    halvings : int
+        How often every step is cut in half; `finer("step")` adds one.
+
+    Raises
+    ------
+    InputError
+        A setting outside its range.
+
+    References
+    ----------
+    J. Haegeman, C. Lubich, I. Oseledets, B. Vandereycken and F. Verstraete, Phys. Rev. B 94, 165116 (2016).
+
+    Examples
+    --------
+    >>> import anneal_ref as ar
+    >>> schedule = ar.Schedule.linear(transverse=(20.0, 0.0), problem=(0.0, 10.0))
+    >>> instance = ar.draw_instance(ar.lattices.square(3, 3), ar.disorder.plus_minus(), seed=1)
+    >>> anneal = ar.Anneal(instance, schedule, duration=1.0)
+    >>> state = ar.MPS(bond_dimension=16).evolve(anneal)
+    >>> exact = ar.StateVector().evolve(anneal)
+    >>> bool(abs(state.moments().zz.value - exact.moments().zz.value).max() < 1e-3)
+    True
+    """
+
+    bond_dimension: int = 64
+    truncation: float = 1e-12
+    step: float = 1.0
+    precision: Literal["double", "single"] = "double"
+    site_order: tuple[int, ...] | None = None
+    halvings: int = 0
+
+    def __post_init__(self) -> None:
+        """Check the settings."""
+        put = object.__setattr__
+        put(self, "bond_dimension", integer("bond_dimension", self.bond_dimension, low=1))
+        put(self, "truncation", number("truncation", self.truncation, 0.0, 0.1))
+        put(self, "step", number("step", self.step, 0.0, 4.0))
+        if self.step == 0.0:
+            raise InputError("step must be above 0 (and at most 4); got 0")
+        choice("precision", self.precision, _DTYPES)
+        put(self, "halvings", integer("halvings", self.halvings, 0, 20))
+        if self.site_order is not None:
+            places = tuple(integer(f"site_order[{p}]", site, low=0) for p, site in enumerate(self.site_order))
+            if sorted(places) != list(range(len(places))):
+                raise InputError(f"site_order must hold every site from 0 to {len(places) - 1} once; got {places}")
+            put(self, "site_order", places)
+
+    @property
+    def knobs(self) -> tuple[str, ...]:
+        """Names of the knobs that `finer` turns."""
+        return ("step", "bond_dimension")
+
+    def finer(self, knob: str) -> MPS:
+        """Return the back-end with every step cut in half, or with twice the bond dimension."""
+        choice("knob", knob, self.knobs)
+        if knob == "step":
+            return replace(self, halvings=self.halvings + 1)
+        return replace(self, bond_dimension=2 * self.bond_dimension)
+
+    def plan(self, anneal: Anneal) -> Plan:
+        """Return memory, time and steps of a run, told from the size, the ranks of the cuts and the bond dimension.
+
+        Raises
+        ------
+        InputError
+            A site order of another length.
+        TooLarge
+            More memory than there is.
+        """
+        check_anneal(anneal)
+        order = self._order(anneal)
+        grid = self._grid(anneal, ())
+        needed, seconds = self._require(anneal, order, len(grid) - 1)
+        ranks = cut_ranks(anneal.instance.coupling_matrix(), order) if len(order) > 1 else np.zeros(1, int)
+        return Plan(
+            backend=type(self).__name__,
+            bytes=needed + _OVERHEAD,
+            seconds=seconds,
+            steps=len(grid) - 1,
+            layers=2 * (len(grid) - 1),
+            details={
+                "bond dimension": self.bond_dimension,
+                "largest that could matter": max(bond_limits(anneal.n_sites, not anneal.instance.has_fields, 1 << 60)),
+                "cut ranks": f"largest {int(ranks.max())}, mean {float(ranks.mean()):.1f}",
+                "symmetric": not anneal.instance.has_fields,
+                "precision": self.precision,
+            },
+        )
+
+    def evolve(self, anneal: Anneal, at: float = 1.0, kicks: Sequence[Kick] = (), run: Run = Run()) -> MPSState:  # noqa: B008
+        """Return the state at one time.
+
+        Parameters
+        ----------
+        anneal : Anneal
+        at : float
+            Fraction of the duration, from 0 to 1.
+        kicks : sequence of (float, int)
+            Z on a site at a fraction of the duration, in ascending time up to `at`.
+        run : Run
+            Threads and progress.
+
+        Raises
+        ------
+        InputError, TooLarge
+            Something other than an anneal, times outside their range, kicks out of order; see `plan`.
+        NotConverged
+            From `start="ground"`, when the ground state of H(0) is not found; see `ground_product`.
+        """
+        check_anneal(anneal)
+        end = number("at", at, 0.0, 1.0)
+        return next(self._march(anneal, (end,), check_kicks(kicks, anneal.n_sites, end), run))
+
+    def states(self, anneal: Anneal, at: Sequence[float], run: Run = Run()) -> Iterator[MPSState]:  # noqa: B008
+        """Give the states at ascending fractions of the duration, in one pass of time."""
+        check_anneal(anneal)
+        return self._march(anneal, check_times(at), (), run)
+
+    def _march(self, anneal: Anneal, stops: tuple[float, ...], kicks: tuple[Kick, ...], run: Run) -> Iterator[MPSState]:
+        began = perf_counter()
+        duration = anneal.duration
+        order = self._order(anneal)
+        grid = self._grid(anneal, sorted({u * duration for u in (*stops, *(u for u, _ in kicks))}))
+        self._require(anneal, order, len(grid) - 1)
+        grid = grid[: _nearest(grid, stops[-1] * duration) + 1]
+        events = {_nearest(grid, u * duration) for u in (*stops, *(u for u, _ in kicks))}
+        limits = Limits(self.bond_dimension, self.truncation, max(1e-2 * self.truncation**0.5, _KRYLOV[self.precision]))
+        with run.track(len(grid) - 1, f"{anneal.n_sites} spins") as bar:
+            chain = Chain(self._start(anneal, order), anneal.instance, limits)
+            work = Work(anneal)
+            work.note(grid[0], chain.energies())
+            idle = anneal.start == "plus"
+            two_site_steps = turned = 0
+            for k in range(len(grid)):
+                if k in events:
+                    for site in [site for u, site in kicks if _nearest(grid, u * duration) == k]:
+                        chain.replace(kicked(chain.product(), site))
+                        turned += 1
+                    for at in (u for u in stops if _nearest(grid, u * duration) == k):
+                        ledger = self._ledger(chain, k, two_site_steps, turned, work.residual())
+                        yield MPSState(anneal, at, chain.product(), ledger | {"seconds": perf_counter() - began})
+                if k == len(grid) - 1:
+                    break
+                first, second = sweep_strengths(anneal, grid[k], grid[k + 1])
+                # while there is no problem part, |+...+> only turns its phase, and its enrichment must wait
+                idle = idle and first[1] == 0 == second[1]
+                if not idle:
+                    two_site = k % REFRESH == 0 or two_site_steps == 0
+                    two_site_steps += two_site
+                    with blas_threads(run.threads):
+                        for strengths in (first, second):
+                            chain.sweep(1.0, strengths, two_site)
+                            chain.flip()
+                work.note(grid[k + 1], chain.energies())
+                bar.update(
+                    1,
+                    f"s {grid[k + 1] / duration:.2f}, bond {max(chain.bond_dimensions)}, "
+                    f"discarded {chain.discarded.sum():.1e}",
+                )
+
+    def _ledger(self, chain: Chain, steps: int, two_site_steps: int, kicks: int, residual: float) -> dict[str, Any]:
+        product = chain.product()
+        return {
+            "backend": type(self).__name__,
+            "precision": self.precision,
+            "symmetric": chain.symmetric,
+            "order": 2,
+            "steps": steps,
+            "layers": 2 * steps,
+            "two_site_steps": two_site_steps,
+            "kicks": kicks,
+            "bond_dimension": self.bond_dimension,
+            "largest_bond": chain.largest,
+            "truncation": self.truncation,
+            "discarded_weight": float(chain.discarded.sum()),
+            "discarded_weights": tuple(chain.discarded[1:-1].tolist()),
+            "entropies": tuple(cut_entropies(product).tolist()),
+            "site_order": tuple(int(site) for site in chain.order),
+            "exponentials": chain.exponentials,
+            "lanczos_vectors": chain.vectors,
+            "norm_drift": chain.norm() ** 2 - 1.0,
+            "work_identity": residual,
+            "parity": {(1, 0): "even", (0, 1): "odd"}[product.dims[-1]] if chain.symmetric else "broken by fields",
+        }
+
+    def _start(self, anneal: Anneal, order: NDArray[np.intp]) -> Any:
+        return plus_state(anneal.instance, order, not anneal.instance.has_fields, _DTYPES[self.precision])
+
+    def _order(self, anneal: Anneal) -> NDArray[np.intp]:
+        n = anneal.n_sites
+        if self.site_order is None:
+            coordinates = anneal.instance.lattice.coordinates
+            places = None if coordinates is None else (coordinates.shape[1], coordinates.tobytes())
+            return _found_order(n, np.packbits(anneal.instance.coupling_matrix() != 0).tobytes(), places)
+        if len(self.site_order) != n:
+            raise InputError(f"site_order must hold the {n} sites of the anneal; got {len(self.site_order)}")
+        return np.array(self.site_order, dtype=np.intp)
+
+    def _grid(self, anneal: Anneal, marks: Sequence[float]) -> Floats:
+        mesh = phase_mesh(anneal)
+        steps = mesh.total / self.step * 2.0**self.halvings
+        require_memory(
+            int(64 * steps), f"an anneal of duration {anneal.duration:g} in about {steps:.1g} time steps",
+            ("a shorter duration", "a longer step"),
+        )  # fmt: skip
+        return step_ends(anneal, mesh, self.step, marks, self.halvings)
+
+    def _require(self, anneal: Anneal, order: NDArray[np.intp], steps: int) -> tuple[int, float]:
+        """Return bytes and seconds of a run, or raise `TooLarge`."""
+        cost = cost_of(anneal.instance, order, self.bond_dimension, self.precision, 1 / REFRESH)
+        smaller = max(1, self.bond_dimension // 2)
+        require_memory(
+            cost.bytes, f"a matrix product state of {len(order)} spins with bond dimension {self.bond_dimension}",
+            (f"MPS(bond_dimension={smaller})", "precision='single'", "a machine with more memory"),
+        )  # fmt: skip
+        return cost.bytes, cost.seconds * steps
+
+
+@lru_cache(maxsize=256)
+def _found_order(n: int, pattern: bytes, places: tuple[int, bytes] | None) -> NDArray[np.intp]:
+    # a search of up to a second, for all anneals of a lattice
+    couplings = np.unpackbits(np.frombuffer(pattern, np.uint8), count=n * n).reshape(n, n)
+    return frozen(best_order(couplings, None if places is None else np.frombuffer(places[1]).reshape(n, places[0])))
+
+
+def _nearest(grid: Floats, time: float) -> int:
+    # times that differ by rounding alone share a step end
+    return int(np.abs(grid - time).argmin())

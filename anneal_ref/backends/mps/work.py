@@ -1,0 +1,50 @@
+r"""The work identity along an evolution, from the two parts of the energy after every step.
+
+With f = <dH/dG> = -<sum w X> and g = <dH/dP> = <E>, the exact evolution obeys d<H>/dt = f dG/dt + g dP/dt, that is
+
+    \int ( G f' + P g' ) dt = 0.
+
+What a computed evolution leaves of it shows a step that is too long or a Hamiltonian that is not the one of the
+schedule; its own floor is the spline through the step ends. It is no error bar: a projected evolution may obey it while
+being wrong.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from scipy.interpolate import CubicSpline
+
+from anneal_ref.model.anneal import Anneal
+
+_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(4)
+
+
+class Work:
+    """Energies noted along an evolution.
+
+    Parameters
+    ----------
+    anneal : Anneal
+    """
+
+    def __init__(self, anneal: Anneal) -> None:
+        self.anneal = anneal
+        self.times: list[float] = []
+        self.parts: list[tuple[float, float]] = []
+
+    def note(self, time: float, parts: tuple[float, float]) -> None:
+        """Keep the transverse and the problem part of the energy, per unit of G and P, at a time."""
+        self.times.append(float(time))
+        self.parts.append(parts)
+
+    def residual(self) -> float:
+        """Return what is left of the identity, in the unit of the schedule; 0 before there are three times."""
+        if len(self.times) < 3:
+            return 0.0
+        times = np.array(self.times)
+        slopes = CubicSpline(times, np.array(self.parts)).derivative()
+        half = np.diff(times)[:, None] / 2
+        nodes = times[:-1, None] + half * (1 + _NODES)
+        f, g = np.moveaxis(slopes(nodes), -1, 0)
+        power = self.anneal.transverse(nodes) * f + self.anneal.problem(nodes) * g
+        return float(np.sum(half * _WEIGHTS * power))
