@@ -1,0 +1,1 @@
+"""Chains and rings without fields as free fermions."""
