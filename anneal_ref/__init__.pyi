@@ -1,5 +1,7 @@
 from anneal_ref.backends.contract import Plan as Plan
 from anneal_ref.backends.exact.state_vector import StateVector as StateVector
+from anneal_ref.backends.fermions.free_fermions import FreeFermions as FreeFermions
+from anneal_ref.backends.mps.mps import MPS as MPS
 from anneal_ref.base.errors import (
     AnnealRefError as AnnealRefError,
 )
@@ -89,6 +91,7 @@ from anneal_ref.truth.reference import (
 from anneal_ref.truth.reference import (
     reference as reference,
 )
+from anneal_ref.truth.refining import Budget as Budget
 from anneal_ref.views import plots as plots
 
 __version__: str

@@ -215,7 +215,7 @@ def _fidelity(
 def missed(reference: Reference) -> str:
     """Say in what a truth that is not converged fell short."""
     asked = f"asked to be within {reference.tolerance:.2g}"
-    if reference.decay.settled:
+    if reference.settled:
         text = f"the truth was {asked} and reached {reference.error:.2g}"
     else:
         text = f"the truth was {asked}, and its runs have not settled (measured error {reference.error:.2g})"

@@ -137,7 +137,7 @@ class Archive:
             except ArchiveError as error:
                 warnings.warn(f"passed over a reference: {error}", AnnealRefWarning, stacklevel=2)
                 continue
-            fits = found.anneal.identity == anneal.identity and found.decay.settled and found.error <= tolerance
+            fits = found.anneal.identity == anneal.identity and found.settled and found.error <= tolerance
             if fits and (best is None or found.error < best.error):
                 best = found
         return best

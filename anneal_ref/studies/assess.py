@@ -35,7 +35,9 @@ from anneal_ref.observe.samples import Samples
 from anneal_ref.studies.archive import Archive
 from anneal_ref.studies.sample_files import refuse_copies
 from anneal_ref.studies.study import Case, Study
-from anneal_ref.truth.reference import Reference, default_backend, reference
+from anneal_ref.truth.choosing import choose_backend
+from anneal_ref.truth.reference import Reference, reference
+from anneal_ref.truth.refining import Budget, plan_reference
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -117,9 +119,9 @@ class Planned:
     ----------
     case : Case
     plan : Plan
-        Of the coarsest run.
+        Of the largest of the runs that are made in any case.
     seconds : float
-        Of the whole reference, all refinements included.
+        Of all of these; more follow where the tolerance is not met.
     archived : bool
         Whether nothing needs to be done, because the archive has the reference.
     """
@@ -139,18 +141,12 @@ def plan(study: Study, archive: Archive) -> tuple[Planned, ...]:
         A case that no back-end can treat on this machine; it is named.
     """
     tolerance = study.table.truth.tolerance
-    coarse = default_backend(tolerance)
     planned = []
     for case in study.cases:
         archived = archive.find(case.anneal, tolerance) is not None
-        # the coarsest run twice (once reordered), and with half and a quarter of the step
         with _naming(case):
-            costs = [
-                coarse.plan(case.anneal),
-                coarse.finer("step").plan(case.anneal),
-                coarse.finer("step").finer("step").plan(case.anneal),
-            ]
-        planned.append(Planned(case, costs[-1], costs[0].seconds + sum(cost.seconds for cost in costs), archived))
+            largest, seconds = plan_reference(case.anneal, choose_backend(case.anneal, tolerance, Budget()))
+        planned.append(Planned(case, largest, seconds, archived))
     return tuple(planned)
 
 

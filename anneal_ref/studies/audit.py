@@ -13,7 +13,6 @@ from anneal_ref.base.run import Run
 from anneal_ref.observe.moments import Moments
 from anneal_ref.studies.text import aligned, counted
 from anneal_ref.truth.reference import Reference
-from anneal_ref.truth.refinement import SAFETY
 
 BARS = 3.0
 """Deviation of a recomputed number, in error bars, that is beyond chance; a bar covers about 95 % of the entries."""
@@ -87,7 +86,7 @@ def deviation(reference: Reference, run: Run) -> float:
     if stored.x is not None and again.x is not None:
         pairs.append((stored.x, again.x))
     # twice the layers: the new run has up to twice the rounding errors of the stored one, on top of the stored bars
-    own = 2 * SAFETY * reference.decay.rounding
+    own = 2 * reference.rounding
     worst = [float((np.abs(b.value - a.value) / (a.num + own)).max()) for a, b in pairs]
     table = reference.probabilities()
     if table is not None and hasattr(state, "probabilities"):
@@ -106,7 +105,7 @@ def inconsistency(reference: Reference, arrays: Mapping[str, NDArray[Any]]) -> s
         n = reference.n_sites
         spins = (1 - 2 * ((np.arange(1 << n)[:, None] >> np.arange(n)) & 1)).astype(np.float64)
         off = _largest_difference(moments, spins.T @ table, spins.T @ (table[:, None] * spins))
-        if not off <= 10 * reference.decay.rounding + 1e-12:
+        if not off <= 5 * reference.rounding + 1e-12:
             return f"its probabilities give moments that differ by {off:.2g} from the stored ones"
     samples = reference.stored_samples
     spins = samples.spins.astype(np.float64)

@@ -164,7 +164,7 @@ def notes(verdict: Verdict) -> list[str]:
 
 def good_enough(verdict: Verdict, one: Judged) -> bool:
     """Return whether a truth has the error that the study asks for, whatever it was made for."""
-    return one.reference.decay.settled and one.reference.error <= verdict.study.table.truth.tolerance
+    return one.reference.settled and one.reference.error <= verdict.study.table.truth.tolerance
 
 
 def worst_pairs(verdict: Verdict, count: int = 6, each: int = 2) -> list[tuple[str, ...]]:

@@ -1,10 +1,10 @@
-"""The runs behind a reference: what is kept of each, and the moments with error bars that they give together."""
+"""One run behind a reference: what is kept of it."""
 
 from __future__ import annotations
 
 import warnings
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -14,38 +14,49 @@ from scipy.sparse.csgraph import connected_components
 
 from anneal_ref.backends.contract import Backend, State
 from anneal_ref.base.errors import AnnealRefWarning
-from anneal_ref.base.estimate import Estimate
 from anneal_ref.base.run import Run
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.observe.moments import Moments
-from anneal_ref.truth.refinement import Decay, measure_decay
-
-RUNS = 3
-"""As many as it takes to see a decay."""
-
-_LOWEST_ORDER = 2  # of any symmetric scheme
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Evolution:
-    """One run: its moments, `num` not measured, and its ledger.
+    """One run: its moments, `num` not measured, its ledger, and how it was made.
 
     Parameters
     ----------
     moments : Moments
     ledger : mapping
         Counters and checks of the back-end; numbers and words.
+    refined : mapping of str to int
+        How often every knob was refined, beginning with the coarsest run; a knob that is left out, not at all.
+    reordered : bool
+        Whether the sites were solved in another order; the moments are back in that of the instance.
     """
 
     moments: Moments
     ledger: Mapping[str, Any]
+    refined: Mapping[str, int] = field(default_factory=dict)
+    reordered: bool = False
 
     @classmethod
-    def of(cls, state: State) -> Evolution:
+    def of(cls, state: State, refined: Mapping[str, int]) -> Evolution:
         """Return what is kept of a final state."""
         ledger = state.ledger.items()
         plain = {name: value.item() if isinstance(value, np.generic) else value for name, value in ledger}
-        return cls(state.moments(), plain)
+        return cls(state.moments(), plain, {knob: count for knob, count in refined.items() if count})
+
+    def times(self, knob: str) -> int:
+        """Return how often a knob was refined."""
+        return self.refined.get(knob, 0)
+
+
+def refined(backend: Backend, counts: Mapping[str, int]) -> Backend:
+    """Return the back-end with every knob refined as often as it is told."""
+    for knob, count in counts.items():
+        for _ in range(count):
+            backend = backend.finer(knob)
+    return backend
 
 
 def solve_reordered(anneal: Anneal, backend: Backend, run: Run) -> Evolution:
@@ -56,53 +67,18 @@ def solve_reordered(anneal: Anneal, backend: Backend, run: Run) -> Evolution:
         # whoever made the anneal was warned then
         warnings.simplefilter("ignore", AnnealRefWarning)
         other = replace(anneal, instance=anneal.instance.relabelled(order))
-    solved = Evolution.of(backend.evolve(other, run=run))
+    solved = Evolution.of(backend.evolve(other, run=run), {})
     found, place = solved.moments, np.argsort(order)
     x = None if found.x is None else found.x.value[place]
     moments = Moments.of(found.z.value[place], found.zz.value[np.ix_(place, place)], x, found.zz.how)
-    return Evolution(moments, solved.ledger)
+    return replace(solved, moments=moments, reordered=True)
 
 
-def decay_of(anneal: Anneal, runs: Sequence[Evolution], reordered: Evolution) -> Decay:
-    """Return how the moments settle over the last three runs; entries that symmetry fixes say nothing and stay out."""
-    ledger, coarsest = runs[-1].ledger, runs[0].ledger
+def free_entries(anneal: Anneal, moments: Moments) -> NDArray[np.float64]:
+    """Return all entries of the moments that symmetry does not fix, one after the other."""
     z_zero, zz_zero = fixed_by_symmetry(anneal)
-    pairs = np.triu(~zz_zero, 1)
-
-    def entries(moments: Moments) -> NDArray[np.float64]:
-        x = np.zeros(0) if moments.x is None else moments.x.value
-        return np.concatenate((moments.z.value[~z_zero], moments.zz.value[pairs], x))
-
-    return measure_decay(
-        [entries(run.moments) for run in runs[-RUNS:]],
-        entries(reordered.moments) - entries(runs[0].moments),
-        growth=float(ledger.get("layers", 2 ** (len(runs) - 1))) / float(coarsest.get("layers", 1)),
-        drift=float(ledger.get("norm_drift", 0.0)),
-        order=_order(ledger),
-        least=_least_rounding(ledger),
-    )
-
-
-def measured_moments(anneal: Anneal, runs: Sequence[Evolution], decay: Decay) -> Moments:
-    """Return the moments of the finest run with their error bars."""
-    last = [run.moments for run in runs[-RUNS:]]
-    z_zero, zz_zero = fixed_by_symmetry(anneal)
-
-    def measured(values: list[NDArray[np.float64]], zero: NDArray[np.bool_] | None = None) -> Estimate:
-        bars = decay.bars(values, decay.rounding)
-        if zero is not None:
-            # the true value is known, and so is the error
-            bars = np.where(zero, np.abs(values[-1]), bars)
-        if bars.ndim == 2:
-            np.fill_diagonal(bars, 0.0)
-        return Estimate(values[-1], 0.0, bars, last[-1].zz.how)
-
-    x = [moments.x.value for moments in last if moments.x is not None]
-    return Moments(
-        measured([moments.z.value for moments in last], z_zero),
-        measured([moments.zz.value for moments in last], zz_zero),
-        measured(x) if len(x) == RUNS else None,
-    )
+    x = np.zeros(0) if moments.x is None else moments.x.value
+    return np.concatenate((moments.z.value[~z_zero], moments.zz.value[np.triu(~zz_zero, 1)], x))
 
 
 def fixed_by_symmetry(anneal: Anneal) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
@@ -118,15 +94,3 @@ def fixed_by_symmetry(anneal: Anneal) -> tuple[NDArray[np.bool_], NDArray[np.boo
     part = connected_components(graph, directed=False)[1]
     free = ~np.isin(part, part[instance.fields != 0])
     return free, (part[:, None] != part[None, :]) & (free[:, None] | free[None, :])
-
-
-def _least_rounding(ledger: Mapping[str, Any]) -> float:
-    """Random walk of half a unit roundoff of the stored numbers a layer, and never below one step of a double."""
-    stored = np.float32 if ledger.get("precision") == "single" else np.float64
-    walk = float(np.finfo(stored).eps / 4 * np.sqrt(ledger.get("layers", 1)))
-    return max(walk, float(np.finfo(np.float64).eps))
-
-
-def _order(ledger: Mapping[str, Any]) -> int:
-    """Order of the refinement: as the back-end says, or the lowest that a symmetric scheme can have."""
-    return int(ledger.get("order", _LOWEST_ORDER))

@@ -10,7 +10,6 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from anneal_ref.backends.contract import Backend, State, check_anneal
-from anneal_ref.backends.exact.state_vector import StateVector
 from anneal_ref.base.checks import frozen, integer, number, signs
 from anneal_ref.base.errors import InputError, NotConverged
 from anneal_ref.base.estimate import Estimate
@@ -24,8 +23,11 @@ from anneal_ref.observe.evaluating import evaluate
 from anneal_ref.observe.manifest import Manifest
 from anneal_ref.observe.moments import Moments
 from anneal_ref.observe.samples import Samples
-from anneal_ref.truth.evolutions import RUNS, Evolution, decay_of, measured_moments, solve_reordered
-from anneal_ref.truth.refinement import Decay
+from anneal_ref.truth.choosing import choose_backend, second_backend
+from anneal_ref.truth.errors import RUNS, Errors, errors_of, measured_moments
+from anneal_ref.truth.evolutions import Evolution, refined
+from anneal_ref.truth.opinions import Opinion
+from anneal_ref.truth.refining import MET, Budget, Refining, plan_reference
 
 LARGEST_TABLE = 16
 """Sites up to which a reference keeps the probability of every configuration."""
@@ -47,21 +49,28 @@ class Reference:
     seed : int
         Of the stored samples.
     max_runs : int
-        The most runs that were allowed.
+        The most values of one knob that were allowed.
+    budget : Budget
+        What it was allowed to cost.
     runs : tuple of Evolution
-        Coarse to fine, each with half the step of the one before.
-    reordered : Evolution
-        The coarsest run once more with the sites solved in another order; moments in the order of the instance.
+        In the order in which they were made; each tells what was refined in it. `errors.final` is the one whose numbers
+        are reported.
     bits : ndarray of uint8, shape (n_samples, ceil(n_sites/8))
         The stored samples, packed.
     folded : ndarray of float64, shape (2^n,) or (2^(n-1),), optional
         Probabilities at the end, up to 16 sites. With the spin-flip symmetry, the half with the last spin up.
     ground : GroundEnergy
         The classical ground energy of the instance.
+    stopped : str
+        Why no more runs were made.
+    second : Opinion, optional
+        What a back-end that shares no evolution code says.
     provenance : mapping of str to str
         Versions, machine and time.
-    decay : Decay
-        How the changes shrink from run to run; see `anneal_ref.truth.refinement`.
+    errors : Errors
+        How the errors are measured from the runs; see `anneal_ref.truth.errors`.
+    parts : mapping of str to float
+        The largest error over all <Z_i> and <Z_i Z_j> from every source: "step", "truncation", "rounding".
     """
 
     anneal: Anneal
@@ -69,19 +78,25 @@ class Reference:
     tolerance: float
     seed: int
     max_runs: int
+    budget: Budget
     runs: tuple[Evolution, ...]
-    reordered: Evolution
     bits: NDArray[np.uint8]
     folded: NDArray[np.float64] | None
     ground: GroundEnergy
+    stopped: str = MET
+    second: Opinion | None = None
     provenance: Mapping[str, str] = field(default_factory=provenance)
-    decay: Decay = field(init=False)
+    errors: Errors = field(init=False)
+    parts: Mapping[str, float] = field(init=False)
     _moments: Moments = field(init=False, repr=False)
 
     def __post_init__(self) -> None:
         """Measure the errors from the runs."""
-        object.__setattr__(self, "decay", decay_of(self.anneal, self.runs, self.reordered))
-        object.__setattr__(self, "_moments", measured_moments(self.anneal, self.runs, self.decay))
+        put = object.__setattr__
+        put(self, "errors", errors_of(self.anneal, self.runs))
+        moments, parts = measured_moments(self.anneal, self.runs, self.errors)
+        put(self, "_moments", moments)
+        put(self, "parts", parts)
 
     @property
     def n_sites(self) -> int:
@@ -94,24 +109,39 @@ class Reference:
         return float(max(self._moments.z.num.max(), self._moments.zz.num.max()))
 
     @property
+    def settled(self) -> bool:
+        """Whether the changes shrink as the runs are refined; where they do not, the error is no more than a guess."""
+        return self.errors.settled
+
+    @property
     def outcome(self) -> str:
-        """Either "converged" or "not converged"."""
-        return "converged" if self.decay.settled and self.error <= self.tolerance else "not converged"
+        """Either "converged", "not converged", or "disagreement" with the second opinion."""
+        if self.second is not None and self.second.disagrees:
+            return "disagreement"
+        return "converged" if self.settled and self.error <= self.tolerance else "not converged"
 
     @property
     def identity(self) -> str:
         """Name of the reference: 32 hexadecimal digits of the anneal, a hyphen, 16 of what else changes digits."""
-        return identity_of(self.anneal, self.backend, self.tolerance, len(self.bits), self.seed, self.max_runs)
+        return identity_of(
+            self.anneal, self.backend, self.tolerance, len(self.bits), self.seed, self.max_runs, self.budget,
+            self.second is not None,
+        )  # fmt: skip
 
     @property
     def finest(self) -> Backend:
-        """The back-end as the last run used it."""
-        return _refined(self.backend, len(self.runs) - 1)
+        """The back-end as the run used it whose numbers are reported."""
+        return refined(self.backend, self.runs[self.errors.final].refined)
 
     @property
     def ledger(self) -> Mapping[str, Any]:
-        """Counters and checks of the finest run."""
-        return self.runs[-1].ledger
+        """Counters and checks of the run whose numbers are reported."""
+        return self.runs[self.errors.final].ledger
+
+    @property
+    def rounding(self) -> float:
+        """Bound on the rounding error of an entry, as it was measured."""
+        return max(self.parts["rounding"], self.errors.model.level)
 
     def probabilities(self) -> NDArray[np.float64] | None:
         """Return the probabilities of all configurations at the end, shape (2^n,), or None beyond 16 sites."""
@@ -146,13 +176,10 @@ class Reference:
         InputError
             Values that are no finite numbers, or of different shapes.
         """
-        runs = (*self.runs[-RUNS:], self.runs[0], self.reordered)
-        values = [evaluate(f, run.moments) for run in runs]
+        values = [evaluate(f, run.moments) for run in self.runs]
         if any(value.shape != values[0].shape or not np.isfinite(value).all() for value in values):
             raise InputError("f must give finite numbers of one shape for the moments of every run; got something else")
-        *last, coarsest, reordered = values
-        rounding = self.decay.growth * np.abs(reordered - coarsest) + np.finfo(np.float64).eps * np.abs(last[-1])
-        return Estimate(last[-1], 0.0, self.decay.bars(last, rounding), "reference")
+        return Estimate(values[self.errors.final], 0.0, self.errors.bars(values), "reference")
 
     def sample(self, shots: int, seed: int) -> Samples:
         """Return `shots` measurements of the truth, the same ones for the same seed.
@@ -218,21 +245,19 @@ class Reference:
             f"  largest error {self.error:.2g} (z {moments.z.num.max():.2g}, zz {moments.zz.num.max():.2g}), "
             f"tolerance {self.tolerance:g}",
             f"  back-end {self.backend}",
-            "  run       steps    layers  largest change   norm drift",
+            f"  {'run':<24}{'steps':>8}{'layers':>9}{'change':>10}{'norm drift':>12}",
         ]
-        previous: Moments | None = None
-        for k, run in enumerate((*self.runs, self.reordered)):
-            again = k == len(self.runs)
-            previous = self.runs[0].moments if again else previous
-            change = "-" if previous is None else f"{_change(previous, run.moments):.2g}"
+        first = self.runs[0].moments
+        for run in self.runs:
+            change = "-" if run is self.runs[0] else f"{_change(first, run.moments):.2g}"
             steps, layers = (str(run.ledger.get(name, "-")) for name in ("steps", "layers"))
             drift = f"{run.ledger['norm_drift']:.1e}" if "norm_drift" in run.ledger else "-"
-            lines.append(f"  {'reordered' if again else k:<9} {steps:>5} {layers:>9} {change:>15} {drift:>12}")
-            previous = run.moments
-        lines.append(
-            f"  decay per run {self.decay.ratio:.2g}{'' if self.decay.settled else ' (not settled)'}, "
-            f"rounding {self.decay.rounding:.1g}; ground energy {self.ground}; {len(self.bits)} samples kept"
-        )
+            lines.append(f"  {_label(run):<24}{steps:>8}{layers:>9}{change:>10}{drift:>12}")
+        sources = ", ".join(f"{name} {error:.2g}" for name, error in self.parts.items())
+        lines.append(f"  error by source: {sources}{'' if self.settled else ' (not settled)'}; {self.stopped}")
+        if self.second is not None:
+            lines.append(f"  {self.second}")
+        lines.append(f"  ground energy {self.ground}; {len(self.bits)} samples kept")
         return "\n".join(lines)
 
     def _manifest(self) -> Manifest:
@@ -246,15 +271,18 @@ def reference(
     samples: int = 16384,
     seed: int = 0,
     max_runs: int = 6,
+    budget: Budget | float | None = None,
+    independent: bool = False,
     strict: bool = False,
     run: Run = Run(),  # noqa: B008
 ) -> Reference:
     """Solve an anneal and measure how wrong the result can be.
 
-    Three runs with the step halved from one to the next show how the error decays; more follow while the measured error
-    is above the tolerance. Every <Z_i>, <Z_i Z_j> and <X_i> of the finest run gets its own error bar; see
-    `anneal_ref.truth.refinement`. The cost is about seven times that of the coarsest run, plus once more to measure
-    rounding.
+    The state vector and free fermions are solved with the step halved from one run to the next, three times at least,
+    which shows how the error decays, and once more with the sites reordered, which shows the rounding. A matrix product
+    state is solved with three bond dimensions, each twice the one before, and apart from that with half the step and
+    with less rounding. More runs follow while the measured error is above the tolerance, of the knob that matters most.
+    Every <Z_i>, <Z_i Z_j> and <X_i> gets its own error bar; see `anneal_ref.truth.errors`.
 
     Parameters
     ----------
@@ -262,24 +290,31 @@ def reference(
     tolerance : float
         Largest absolute error allowed over all <Z_i> and <Z_i Z_j>, between 0 and 1.
     backend : Backend, optional
-        Settings of the coarsest run; by default a `StateVector` whose steps are meant for 1e-5, or for a hundred times
-        the tolerance where that is less.
+        Settings of the coarsest run; by default those of the cheapest back-end that is sure to do within the budget,
+        and of a matrix product state otherwise.
     samples : int
         Measurements of the truth to keep.
     seed : int
         Of these samples.
     max_runs : int
-        The most runs to try, each twice as long as the one before; at least 3.
+        The most values of one knob to try, each about twice as fine as the one before; at least 3.
+    budget : Budget or float, optional
+        Seconds, or a `Budget(seconds, bytes)`; an hour by default. The first runs, without which there is no error, are
+        made whatever they cost; `backend.plan(anneal)` tells beforehand.
+    independent : bool
+        Solve also with a back-end that shares no evolution code, and say whether the two agree within their joint
+        error bars.
     strict : bool
-        Raise `NotConverged`, with the reference inside, instead of returning one that missed the tolerance.
+        Raise `NotConverged`, with the reference inside, instead of returning one that missed the tolerance or that the
+        second opinion contradicts.
     run : Run
         Threads and progress.
 
     Returns
     -------
     Reference
-        Its `outcome` says whether the tolerance was met. The measured error may well be far below the tolerance, and is
-        not derived from it.
+        Its `outcome` says whether the tolerance was met, `stopped` why no more runs were made. The measured error may
+        well be far below the tolerance, and is not derived from it.
 
     Raises
     ------
@@ -306,45 +341,48 @@ def reference(
         raise InputError("tolerance must be above 0; got 0")
     samples, seed = integer("samples", samples, low=1), integer("seed", seed, low=0)
     max_runs = integer("max_runs", max_runs, low=RUNS)
-    backend = default_backend(tolerance) if backend is None else backend
+    budget = Budget.of(budget)
+    backend = choose_backend(anneal, tolerance, budget) if backend is None else backend
     if isinstance(backend, type) or not isinstance(backend, Backend):
         raise InputError(f"backend must be a back-end such as StateVector(tolerance=1e-6); got {backend!r}")
     if "step" not in backend.knobs:
         raise InputError(f"backend must be one whose step can be refined; got {backend}, with knobs {backend.knobs}")
-    _refined(backend, RUNS - 1).plan(anneal)
+    plan_reference(anneal, backend)
+    other = second_backend(anneal, tolerance, backend) if independent else None
 
     ground = ground_energy(anneal.instance)
-    reordered = solve_reordered(anneal, backend, run)
-    runs: list[Evolution] = []
-    while True:
-        state = _refined(backend, len(runs)).evolve(anneal, run=run)
-        runs.append(Evolution.of(state))
-        if len(runs) >= RUNS:
-            decay = decay_of(anneal, runs, reordered)
-            moments = measured_moments(anneal, runs, decay)
-            met = decay.settled and max(moments.z.num.max(), moments.zz.num.max()) <= tolerance
-            if met or len(runs) == max_runs:
-                break
-        del state  # before the next one is allocated
-    bits = frozen(state.sample(samples, seed).bits)
+    work = Refining(anneal, backend, tolerance, max_runs, budget, run)
+    work.go()
+    assert work.state is not None
+    bits = frozen(work.state.sample(samples, seed).bits)
+    folded = _folded(anneal, work.state)
+    work.state = None
+    second = None
+    if other is not None:
+        twin = Refining(anneal, other, tolerance, max_runs, budget, run)
+        twin.go()
+        errors = errors_of(anneal, twin.runs)
+        outcome = "converged" if twin.stopped == MET else "not converged"
+        first = measured_moments(anneal, work.runs, errors_of(anneal, work.runs))[0]
+        second = Opinion.of(anneal, first, other, outcome, measured_moments(anneal, twin.runs, errors)[0])
     result = Reference(
-        anneal, backend, tolerance, seed, max_runs, tuple(runs), reordered, bits, _folded(anneal, state), ground
+        anneal, backend, tolerance, seed, max_runs, budget, tuple(work.runs), bits, folded, ground, work.stopped, second
     )
-    if strict and not met:
-        raise NotConverged(
-            f"the error after {len(runs)} runs is {result.error:.2g}, above the tolerance {tolerance:g}; "
-            f"allow more runs (max_runs={max_runs + 2}), give a back-end with a smaller step, or ask for less",
-            result=result,
-        )
+    if strict and result.outcome != "converged":
+        raise NotConverged(_missed(result), result=result)
     return result
 
 
-def default_backend(tolerance: float) -> StateVector:
-    """Return the back-end of the coarsest run where none is given; its steps are small enough for a clear decay."""
-    return StateVector(tolerance=min(1e-5, max(100.0 * tolerance, 1e-11)))
-
-
-def identity_of(anneal: Anneal, backend: Backend, tolerance: float, samples: int, seed: int, max_runs: int) -> str:
+def identity_of(
+    anneal: Anneal,
+    backend: Backend,
+    tolerance: float,
+    samples: int,
+    seed: int,
+    max_runs: int,
+    budget: Budget,
+    independent: bool = False,
+) -> str:
     """Return the identity of the reference with these settings, whether or not it exists yet."""
     settings = {
         "backend": repr(backend),
@@ -352,14 +390,38 @@ def identity_of(anneal: Anneal, backend: Backend, tolerance: float, samples: int
         "samples": samples,
         "seed": seed,
         "max_runs": max_runs,
+        "budget": repr(budget),
+        "independent": independent,
     }
     return f"{anneal.identity[:32]}-{digest(settings)[:16]}"
 
 
-def _refined(backend: Backend, times: int) -> Backend:
-    for _ in range(times):
-        backend = backend.finer("step")
-    return backend
+def _missed(result: Reference) -> str:
+    """Say what a reference fell short of, and what it would take."""
+    if result.second is not None and result.second.disagrees:
+        return f"the two back-ends contradict each other: {result.second}"
+    text = f"the error after {len(result.runs)} runs is {result.error:.2g}, above the tolerance {result.tolerance:g}"
+    if not result.settled:
+        text += ", and the changes do not shrink yet"
+    if result.stopped.startswith("out of"):
+        return f"{text}; {result.stopped}"
+    worst = max(result.parts, key=lambda name: result.parts[name])
+    advice = {
+        "step": "give a back-end with a smaller step",
+        "truncation": "give a back-end with a larger bond dimension",
+        "rounding": "give a back-end with less rounding",
+    }[worst]
+    return f"{text}; allow more runs (max_runs={result.max_runs + 2}), {advice}, or ask for less"
+
+
+def _label(run: Evolution) -> str:
+    if run.reordered:
+        return "coarsest, reordered"
+    words = {"step": "step / {}", "bond_dimension": "bond {}", "rounding": "less rounding"}
+    named = [words[knob].format(2**count) for knob, count in run.refined.items() if knob != "bond_dimension"]
+    if "bond_dimension" in run.ledger:
+        named.insert(0, words["bond_dimension"].format(run.ledger["bond_dimension"]))
+    return ", ".join(named) or "coarsest"
 
 
 def _folded(anneal: Anneal, state: State) -> NDArray[np.float64] | None:

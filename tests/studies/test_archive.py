@@ -42,10 +42,10 @@ def assert_same(a, b):
     assert a.identity == b.identity
     assert a.anneal.identity == b.anneal.identity
     assert a.backend == b.backend
-    for name in ("outcome", "error", "tolerance", "seed", "max_runs"):
+    for name in ("outcome", "error", "tolerance", "seed", "max_runs", "budget", "stopped", "parts"):
         assert getattr(a, name) == getattr(b, name)
-    for run, other in zip((*a.runs, a.reordered), (*b.runs, b.reordered), strict=True):
-        assert run.ledger == other.ledger
+    for run, other in zip(a.runs, b.runs, strict=True):
+        assert (run.ledger, run.refined, run.reordered) == (other.ledger, other.refined, other.reordered)
         for name in ("z", "zz", "x"):
             np.testing.assert_array_equal(getattr(run.moments, name).value, getattr(other.moments, name).value)
     for name in ("z", "zz", "x"):

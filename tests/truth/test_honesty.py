@@ -157,7 +157,7 @@ def test_other_settings_are_honest_too(backend):
 def test_the_default_is_far_better_than_asked():
     for anneal in list(catalogue())[::9]:
         truth = reference(anneal, tolerance=1e-3, samples=1)
-        assert len(truth.runs) == 3
+        assert len(truth.runs) == 4
         assert truth.outcome == "converged"
         assert truth.error < 1e-6
 

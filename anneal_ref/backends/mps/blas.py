@@ -42,10 +42,11 @@ def _gemm(  # type: ignore[no-untyped-def]
             if isinstance(kind, types.Array):
                 data = context.make_array(kind)(context, builder, value).data
             else:
-                data = cgutils.alloca_once_value(builder, value)
+                data = cgutils.alloca_once_value(builder, value)  # type: ignore[no-untyped-call]
             pointers.append(builder.bitcast(data, ir.IntType(8).as_pointer()))
         kind = ir.FunctionType(ir.VoidType(), [pointer.type for pointer in pointers])
-        builder.call(cgutils.get_or_insert_function(builder.module, kind, _SYMBOLS[dtype]), pointers)
+        function = cgutils.get_or_insert_function(builder.module, kind, _SYMBOLS[dtype])  # type: ignore[no-untyped-call]
+        builder.call(function, pointers)
         return context.get_dummy_value()
 
     return signature, generate
@@ -65,7 +66,7 @@ def multiply(out, first, second, first_op=PLAIN, second_op=PLAIN, alpha=1.0, bet
     item = out.itemsize
     one = out.dtype.type(1)
     # a row-major matrix is the transpose of a Fortran one, and so is the product
-    _gemm(
+    _gemm(  # type: ignore[call-arg]
         types.uint8(second_op), types.uint8(first_op), types.int32(n), types.int32(m), types.int32(k),
         one * alpha, second, types.int32(max(second.strides[0] // item, second.shape[1])),
         first, types.int32(max(first.strides[0] // item, first.shape[1])),

@@ -1,4 +1,4 @@
-r"""`Chain`: a matrix product state with its blocks, moved in time by sweeps of the time-dependent variational principle.
+r"""`Chain`: a matrix product state with its blocks, moved by sweeps of the time-dependent variational principle.
 
 A sweep to the right goes through the splitting of the tangent-space projector
 
@@ -80,6 +80,8 @@ class Chain:
         self.discarded = np.zeros(n + 1)
         self.singular: list[NDArray[Any] | None] = [None] * (n + 1)
         self.exponentials = self.vectors = self.largest = 0
+        self.left: list[Any] = []
+        self.right: list[Any] = []
         self._lay_blocks()
 
     @property
@@ -143,8 +145,7 @@ class Chain:
 
     def _lay_blocks(self) -> None:
         n = self.n_sites
-        self.left: list[Block | None] = [None] * (n + 1)
-        self.right: list[Block | None] = [None] * (n + 1)
+        self.left, self.right = [None] * (n + 1), [None] * (n + 1)
         self.left[0] = self._empty_block(self.dims[0])
         self.right[n] = self._empty_block(self.dims[n])
         self.flip()
@@ -174,6 +175,7 @@ class Chain:
         evens = (self.dims[p][0], self.dims[right][0])
         weights = np.zeros(2)
         weights[:sites] = self.weights[p:right]
+        out: Tensor
         out, vectors = compiled.evolve(
             theta, tau, self.limits.krylov, self.left[p], self.right[right], self.wiring.wires[sites][p],
             self._inner(p, sites), weights, strengths, evens, sites, self.symmetric,
@@ -185,12 +187,12 @@ class Chain:
     def _inner(self, p: int, sites: int) -> Floats:
         """Return the problem energies of the open spins alone, one for every matrix of the tensor."""
         if sites == 2:
-            coupling = self.wiring.couplings[p, p + 1]
+            coupling = float(self.wiring.couplings[p, p + 1])
             if self.symmetric:
                 return coupling * _TWO_SPINS[:2]
-            return coupling * _TWO_SPINS + self.fields[p] * _FIRST + self.fields[p + 1] * _SECOND
+            return np.asarray(coupling * _TWO_SPINS + self.fields[p] * _FIRST + self.fields[p + 1] * _SECOND)
         if sites == 1 and not self.symmetric:
-            return self.fields[p] * _SECOND[:2]
+            return np.asarray(self.fields[p] * _SECOND[:2])
         return _NONE
 
     def _evolve_pair(self, p: int, tau: float, strengths: Strengths) -> None:

@@ -213,9 +213,7 @@ def _channels_dense(theta, out, lefts, rights, count, buffer):  # type: ignore[n
     t = buffer[: matrices * rows * count * n].reshape(matrices * rows, count * n)
     multiply(t, theta.reshape(matrices * rows, columns), rights[0])
     for b in range(matrices):
-        multiply(
-            out[b], lefts[0], t[b * rows : (b + 1) * rows].reshape(rows * count, n), PLAIN, PLAIN, 1.0, 1.0
-        )
+        multiply(out[b], lefts[0], t[b * rows : (b + 1) * rows].reshape(rows * count, n), PLAIN, PLAIN, 1.0, 1.0)
 
 
 @njit
@@ -224,7 +222,9 @@ def apply(theta, out, kl, kr, lefts, rights, count, de, re, flips, sites, even, 
     if sites == 0 and even:
         for rows, columns in ((slice(0, de), slice(0, re)), (slice(de, None), slice(re, None))):
             multiply(out[0, rows, columns], kl[0, rows, rows], theta[0, rows, columns])
-            multiply(out[0, rows, columns], theta[0, rows, columns], kr[0, columns, columns], PLAIN, TRANSPOSED, 1.0, 1.0)
+            multiply(
+                out[0, rows, columns], theta[0, rows, columns], kr[0, columns, columns], PLAIN, TRANSPOSED, 1.0, 1.0
+            )
     else:
         for b in range(theta.shape[0]):
             multiply(out[b], kl[b], theta[b])

@@ -21,8 +21,8 @@ from anneal_ref.backends.mps.ordering import best_order, cut_ranks
 from anneal_ref.backends.mps.start import kicked, plus_state
 from anneal_ref.backends.mps.state import MPSState
 from anneal_ref.backends.mps.steps import step_ends, sweep_strengths
-from anneal_ref.backends.mps.work import Work
 from anneal_ref.backends.mps.wiring import Floats
+from anneal_ref.backends.mps.work import Work
 from anneal_ref.backends.phase import phase_mesh
 from anneal_ref.base.checks import choice, frozen, integer, number
 from anneal_ref.base.errors import InputError
@@ -107,14 +107,25 @@ class MPS:
     @property
     def knobs(self) -> tuple[str, ...]:
         """Names of the knobs that `finer` turns."""
-        return ("step", "bond_dimension")
+        return ("step", "bond_dimension", "rounding")
 
     def finer(self, knob: str) -> MPS:
-        """Return the back-end with every step cut in half, or with twice the bond dimension."""
+        """Return the back-end with one knob refined.
+
+        Parameters
+        ----------
+        knob : {"step", "bond_dimension", "rounding"}
+            Half of every step; twice the bond dimension; or double precision in place of single, and from there a
+            hundredth of the weight that an update may discard and a tenth of the error of local exponentials.
+        """
         choice("knob", knob, self.knobs)
         if knob == "step":
             return replace(self, halvings=self.halvings + 1)
-        return replace(self, bond_dimension=2 * self.bond_dimension)
+        if knob == "bond_dimension":
+            return replace(self, bond_dimension=2 * self.bond_dimension)
+        if self.precision == "single":
+            return replace(self, precision="double")
+        return replace(self, truncation=self.truncation / 100)
 
     def plan(self, anneal: Anneal) -> Plan:
         """Return memory, time and steps of a run, told from the size, the ranks of the cuts and the bond dimension.

@@ -15,7 +15,9 @@ from anneal_ref.backends.mps.product import Product
 from anneal_ref.model.instances import Instance
 
 
-def plus_state(instance: Instance, order: NDArray[np.intp], symmetric: bool, dtype: type[np.complexfloating]) -> Product:
+def plus_state(
+    instance: Instance, order: NDArray[np.intp], symmetric: bool, dtype: type[np.complexfloating]
+) -> Product:
     """Return |+...+>, its right bases enriched by single flipped spins.
 
     Parameters

@@ -25,8 +25,8 @@ from collections.abc import Sequence
 import numpy as np
 
 from anneal_ref.backends.mps.chain import Strengths
-from anneal_ref.backends.phase import Mesh, halved
 from anneal_ref.backends.mps.wiring import Floats
+from anneal_ref.backends.phase import Mesh, halved
 from anneal_ref.model.anneal import Anneal
 
 
@@ -52,10 +52,12 @@ def step_ends(anneal: Anneal, mesh: Mesh, step: float, marks: Sequence[float], h
     ndarray, shape (steps + 1,)
     """
     corners = () if anneal.waveform is None else tuple(np.asarray(anneal.waveform.u) * anneal.duration)
-    ends = np.unique(np.concatenate([[0.0, anneal.duration], corners, marks]))
+    ends, given = np.array([0.0, *corners, anneal.duration]), np.array(sorted(marks), dtype=np.float64)
     # times that differ by rounding are one, and a mark is kept as it was given
-    apart = np.append(np.diff(ends) > 1e-12 * anneal.duration, True)
-    ends = ends[apart | np.isin(ends, marks)]
+    slack = 1e-12 * anneal.duration
+    ends = ends[np.abs(ends[:, None] - given).min(axis=1, initial=np.inf) > slack]
+    ends = np.unique(np.concatenate([ends, given]))
+    ends = ends[np.append(True, np.diff(ends) > slack)]
     phases = np.interp(ends, mesh.times, mesh.phase)
     grid = [ends[:1]]
     for k in range(len(ends) - 1):
@@ -72,7 +74,10 @@ def sweep_strengths(anneal: Anneal, start: float, stop: float, frozen: bool = Fa
     """
     middle = (start + stop) / 2
     if frozen:
-        both = ((stop - start) / 2 * float(anneal.transverse(middle)), (stop - start) / 2 * float(anneal.problem(middle)))
+        both = (
+            (stop - start) / 2 * float(anneal.transverse(middle)),
+            (stop - start) / 2 * float(anneal.problem(middle)),
+        )
         return both, both
     first, second = [], []
     for integral in (anneal.transverse_integral, anneal.problem_integral):
