@@ -106,7 +106,8 @@ def exponential(  # type: ignore[no-untyped-def]
         off[k] = np.sqrt(_subtract(flat_w, vectors[k], vectors[max(k - 1, 0)], real(diagonal[k]), real(before)))
         k += 1
         used = k
-        if k == n or off[k - 1] < 1e-13 * (abs(diagonal[k - 1]) + before):
+        # nothing new, and nothing at all under a Hamiltonian that is zero here
+        if k == n or off[k - 1] <= 1e-13 * (abs(diagonal[k - 1]) + before):
             x = tridiagonal_exponential(diagonal, off, k, tau)
             break
         _scaled(vectors[k], flat_w, real(1 / off[k - 1]))
