@@ -10,7 +10,7 @@ from numba import njit
 from anneal_ref.backends.fermions import measuring, pfaffians, turning
 from anneal_ref.backends.stamp import stamp_of
 
-KERNELS = ("turning", "pfaffians", "measuring", "../exact/simd")
+KERNELS = ("turning", "eliminating", "pfaffians", "measuring", "../exact/simd")
 
 
 def _entries(stamp: int) -> tuple[Any, ...]:
@@ -33,10 +33,10 @@ def _entries(stamp: int) -> tuple[Any, ...]:
         turning.pair_rows(v, room, spans, ring, partner, band)
 
     @njit(cache=True, nogil=True)
-    def correlations(band, ends, reach, first, stop, out):  # type: ignore[no-untyped-def]
+    def correlations(band, ends, s, work, out):  # type: ignore[no-untyped-def]
         """See `pfaffians.correlations`."""
         stamp  # noqa: B018
-        pfaffians.correlations(band, ends, reach, first, stop, out)
+        pfaffians.correlations(band, ends, s, work, out)
 
     @njit(cache=True, nogil=True)
     def measure(band, s, draws, outcomes, given, logs, least):  # type: ignore[no-untyped-def]

@@ -16,8 +16,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from anneal_ref.backends.exact.layout import aligned
 from anneal_ref.backends.fermions import compiled
 from anneal_ref.backends.fermions.cones import Cones
+from anneal_ref.backends.fermions.eliminating import window
 
 Floats = NDArray[np.float64]
 
@@ -93,7 +95,10 @@ class Covariance:
             Largest r; below N, on a ring at most N/2.
         """
         out = np.zeros((self.n_sites, reach))
-        compiled.correlations(self.band, ends, reach, 0, self.n_sites, out)
+        room = window.py_func(2 * reach)
+        s, work = (aligned(room.slots * room.stride, np.float64) for _ in range(2))
+        s[:] = 0.0
+        compiled.correlations(self.band, ends, s, work, out)
         return out
 
     def all_correlations(self, ends: NDArray[np.int64]) -> Floats:

@@ -1,10 +1,7 @@
 r"""Kernels for Pfaffians of all leading blocks of a skew matrix by elimination.
 
-Eliminating the first two rows of a skew matrix with the pivot p = S[0, 1] leaves
-
-    S'[i, j] = S[i, j] - (S[0, i] S[1, j] - S[1, i] S[0, j]) / p,      Pf(S) = p Pf(S'),
-
-so one elimination from left to right gives the Pfaffian of every leading block on its way. A pivot that is small
+Eliminating the first two rows with the factor 1/p, p = S[0, 1] the pivot, leaves a matrix S' with Pf(S) = p Pf(S').
+One elimination from left to right thus gives the Pfaffian of every leading block on its way. A pivot that is small
 against what it divides would spoil all that follow. Then the pivot becomes a block of four rows, six, ..., within which
 rows may be exchanged; the Pfaffians of the leading blocks inside come from exchanges of their own. At worst the block
 grows to the whole matrix, and every Pfaffian has been computed with complete pivoting.
@@ -15,135 +12,151 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from anneal_ref.backends.exact.simd import lanes_of, vfma, vload, vset, vstore
+from anneal_ref.backends.fermions.eliminating import PANEL, change_row, change_rows, load_row, place, window
 
 LARGEST_GROWTH = 1e3
 """Of rounding errors from one pivot block to the Pfaffians that follow."""
 
-PAD = 16
-"""Floats beyond the end of every row that vectors may touch."""
-
 
 @njit
-def eliminate(s, stride, k, top):  # type: ignore[no-untyped-def]
-    """Eliminate the rows k and k + 1 from the rows k + 2 .. top-1 of the upper triangle."""
-    lanes = lanes_of(s)
-    x, y = k * stride, (k + 1) * stride
-    p = s[x + k + 1]
-    for i in range(k + 2, top):
-        a, b = s[y + i] / p, -s[x + i] / p
-        if a == 0.0 and b == 0.0:
-            continue
-        a, b = vset(a), vset(b)
-        o = i * stride
-        for j in range(i + 1, top, lanes):
-            vstore(s, o + j, vfma(a, vload(s, x + j), vfma(b, vload(s, y + j), vload(s, o + j))))
-
-
-@njit
-def exchange(s, stride, k, a, b, top):  # type: ignore[no-untyped-def]
+def exchange(s, w, k, a, b, top):  # type: ignore[no-untyped-def]
     """Exchange the rows and columns a <= b of the upper triangle from row k on; return the sign of the Pfaffian."""
     if a == b:
         return 1.0
+    pa, pb = place(w, a), place(w, b)
     for i in range(k, a):
-        s[i * stride + a], s[i * stride + b] = s[i * stride + b], s[i * stride + a]
-    s[a * stride + b] = -s[a * stride + b]
+        o = place(w, i)
+        s[o + a], s[o + b] = s[o + b], s[o + a]
+    s[pa + b] = -s[pa + b]
     for j in range(a + 1, b):
-        s[a * stride + j], s[j * stride + b] = -s[j * stride + b], -s[a * stride + j]
+        o = place(w, j)
+        s[pa + j], s[o + b] = -s[o + b], -s[pa + j]
     for j in range(b + 1, top):
-        s[a * stride + j], s[b * stride + j] = s[b * stride + j], s[a * stride + j]
+        s[pa + j], s[pb + j] = s[pb + j], s[pa + j]
     return -1.0
 
 
 @njit
-def largest_in(s, stride, k, end):  # type: ignore[no-untyped-def]
+def largest_in(s, w, k, end):  # type: ignore[no-untyped-def]
     """Place of the largest element among the rows and columns k .. end-1."""
     size, a, b = -1.0, k, k + 1
     for i in range(k, end):
+        o = place(w, i)
         for j in range(i + 1, end):
-            if abs(s[i * stride + j]) > size:
-                size, a, b = abs(s[i * stride + j]), i, j
+            if abs(s[o + j]) > size:
+                size, a, b = abs(s[o + j]), i, j
     return a, b
 
 
 @njit
-def eliminate_block(s, stride, k, end, top):  # type: ignore[no-untyped-def]
+def eliminate_block(s, w, k, end, top):  # type: ignore[no-untyped-def]
     """Eliminate the rows k .. end-1 with complete pivoting among them; return their Pfaffian and the smallest pivot."""
     value, smallest = 1.0, np.inf
-    while k < end:
-        a, b = largest_in(s, stride, k, end)
-        value *= exchange(s, stride, k, k, a, top) * exchange(s, stride, k, k + 1, b, top)
-        p = s[k * stride + k + 1]
+    for r in range(k, end, 2):
+        a, b = largest_in(s, w, r, end)
+        value *= exchange(s, w, r, r, a, top) * exchange(s, w, r, r + 1, b, top)
+        p = s[place(w, r) + r + 1]
         value *= p
         smallest = min(smallest, abs(p))
         if p == 0.0:
-            return 0.0, 0.0
-        eliminate(s, stride, k, top)
-        k += 2
+            break
+        for i in range(r + 2, top):
+            change_row(s, w, r, i, 1.0 / p, top)
     return value, smallest
 
 
 @njit
-def largest_row(s, stride, k, end, top):  # type: ignore[no-untyped-def]
+def largest_of(s, w, k, end, top):  # type: ignore[no-untyped-def]
     """Largest element of the rows k .. end-1."""
     size = 0.0
     for i in range(k, end):
+        o = place(w, i)
         for j in range(i + 1, top):
-            size = max(size, abs(s[i * stride + j]))
+            size = max(size, abs(s[o + j]))
     return size
 
 
 @njit
-def leading_pfaffians(s, work, stride, m, reach, out):  # type: ignore[no-untyped-def]
-    """Write the Pfaffians of the leading blocks of 2, 4, ..., m rows to `out` (m/2,).
+def safe(value, largest, smallest):  # type: ignore[no-untyped-def]
+    """Whether pivots are large enough, for a Pfaffian `value` so far and rows with elements up to `largest`."""
+    return abs(value) * largest * largest <= LARGEST_GROWTH * smallest
+
+
+@njit
+def load_rows(s, w, band, first, loaded, stop, m):  # type: ignore[no-untyped-def]
+    """Put the rows loaded .. stop-1 of the block of m rows at `first` into their slots; return the larger end."""
+    rows, width = band.shape[0], band.shape[1] - 1
+    while loaded < stop:
+        load_row(s, w, loaded, band[(first + loaded) % rows, : min(width, m - 1 - loaded) + 1])
+        loaded += 1
+    return loaded
+
+
+@njit
+def leading_pfaffians(s, work, w, band, first, m, out):  # type: ignore[no-untyped-def]
+    """Write the Pfaffians of 2, 4, ..., m rows of a band matrix, from the row `first` on, to `out` (m/2,).
 
     Parameters
     ----------
-    s : 1d array
-        Upper triangle of a skew matrix in rows of length `stride`; overwritten.
-    work : 1d array
-        As large as s.
-    stride : int
-        At least m + PAD.
-    m : int
-        Even.
-    reach : int
-        Elements further than this from the diagonal are zero.
+    s, work : 1d arrays
+        Work space for the window of m rows.
+    w : Window
+    band : (rows, width + 1) array
+        Entry (k, d) belongs to the rows k and k + d; rows are counted modulo their number.
+    first, m : int
     out : (m/2,) array
     """
-    value, k = 1.0, 0
+    width = band.shape[1] - 1
+    factors = np.zeros(PANEL // 2)
+    value, k, loaded = 1.0, 0, 0
     while k < m:
-        end = k + 2
-        while True:
-            top = min(m, end + reach)
-            largest = largest_row(s, stride, k, end, top)
-            if end == k + 2:
-                factor = s[k * stride + k + 1]
-                smallest = abs(factor)
-            else:
-                for i in range(k, end):
-                    work[i * stride + i + 1 : i * stride + end] = s[i * stride + i + 1 : i * stride + end]
-                factor, smallest = eliminate_block(work, stride, k, end, end)
-            out[end // 2 - 1] = value * factor
-            if end == m or abs(value) * largest * largest <= LARGEST_GROWTH * smallest:
+        end = min(m, k + PANEL)
+        top = min(m, end + width)
+        loaded = load_rows(s, w, band, first, loaded, min(m, top + 1), m)
+        r = k
+        while r < end:
+            p = s[place(w, r) + r + 1]
+            out[r // 2] = value * p
+            if not safe(value, largest_of(s, w, r, r + 2, top), abs(p)):
                 break
+            if p == 0.0:
+                out[r // 2 :] = 0.0
+                return
+            value *= p
+            factors[(r - k) // 2] = 1.0 / p
+            for i in range(r + 2, end):
+                change_row(s, w, r, i, 1.0 / p, top)
+            r += 2
+        if r == end:
+            for i in range(end, top, 2):
+                change_rows(s, w, k, i, factors, top)
+            k = end
+            continue
+        for i in range(end, top):
+            for q in range(k, r, 2):
+                change_row(s, w, q, i, factors[(q - k) // 2], top)
+        # the pivot at r is too small: a block that is large enough, or all that is left
+        end = r + 2
+        while end < m:
             end += 2
-        if end == m:
-            return
-        if factor == 0.0:
-            out[end // 2 :] = 0.0
-            return
-        if end == k + 2:
-            eliminate(s, stride, k, top)
-        else:
-            eliminate_block(s, stride, k, end, top)
-        value *= factor
+            top = min(m, end + width)
+            loaded = load_rows(s, w, band, first, loaded, top, m)
+            for i in range(r, end):
+                o = place(w, i)
+                work[o + i + 1 : o + end] = s[o + i + 1 : o + end]
+            factor, smallest = eliminate_block(work, w, r, end, end)
+            out[end // 2 - 1] = value * factor
+            if safe(value, largest_of(s, w, r, end, top), smallest):
+                break
+        if end < m:
+            eliminate_block(s, w, r, end, top)
+            value *= factor
         k = end
 
 
 @njit
-def correlations(band, ends, reach, first, stop, out):  # type: ignore[no-untyped-def]
-    """Write <Z_i Z_i+r> to out[i, r-1] for the positions first .. stop-1 and r up to `reach`.
+def correlations(band, ends, s, work, out):  # type: ignore[no-untyped-def]
+    """Write <Z_i Z_i+r> to out[i, r-1].
 
     Parameters
     ----------
@@ -151,18 +164,12 @@ def correlations(band, ends, reach, first, stop, out):  # type: ignore[no-untype
         Covariance of neighbouring Majorana operators; see `covariance`.
     ends : (sites,) array of int64
         How many further positions each position may be correlated with.
-    reach, first, stop : int
+    s, work : 1d arrays
+        Work space for a window of 2 reach rows.
     out : (sites, reach) array
     """
-    rows, width = band.shape[0], band.shape[1] - 1
-    stride = 2 * reach + PAD
-    s, work = np.zeros(2 * reach * stride), np.zeros(2 * reach * stride)
-    for i in range(first, stop):
+    sites, reach = out.shape
+    for i in range(sites):
         m = 2 * min(reach, ends[i])
-        if m == 0:
-            continue
-        for a in range(m):
-            k, count = (2 * i + 1 + a) % rows, min(width, m - 1 - a)
-            s[a * stride + a + 1 : a * stride + a + 1 + count] = band[k, 1 : count + 1]
-            s[a * stride + a + 1 + count : (a + 1) * stride] = 0.0
-        leading_pfaffians(s, work, stride, m, width, out[i, : m // 2])
+        if m > 0:
+            leading_pfaffians(s, work, window(m), band, 2 * i + 1, m, out[i, : m // 2])

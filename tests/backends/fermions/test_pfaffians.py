@@ -3,7 +3,6 @@
 import numpy as np
 import pytest
 
-from anneal_ref.backends.fermions import pfaffians
 from anneal_ref.backends.fermions.covariance import Covariance
 
 
@@ -92,9 +91,3 @@ def test_an_elimination_without_care_fails(kind, gaussian_band):
 def test_the_square_is_the_determinant(gaussian_band):
     _, gamma = gaussian_band(turns("any", 6, np.random.default_rng(1)))
     assert pfaffian(gamma[1:9, 1:9]) ** 2 == pytest.approx(np.linalg.det(gamma[1:9, 1:9]), rel=1e-10)
-
-
-def test_rows_have_room_for_vectors():
-    from anneal_ref.backends.exact.simd import VECTOR_BYTES
-
-    assert pfaffians.PAD >= 2 * VECTOR_BYTES // 8 - 1
