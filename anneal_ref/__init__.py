@@ -33,6 +33,8 @@ _ROOMS = {
     "anneal_ref.backends.fermions.free_fermions": ("FreeFermions",),
     "anneal_ref.truth.reference": ("Reference", "reference"),
     "anneal_ref.truth.refining": ("Budget",),
+    "anneal_ref.truth.inputs": ("InputUncertainty",),
+    "anneal_ref.truth.uncertainty": ("UncertaintyBudget", "uncertainty_budget"),
     "anneal_ref.judgement.compare": ("compare",),
     "anneal_ref.judgement.comparison": ("Comparison",),
     "anneal_ref.judgement.equivalence": ("Acceptance", "Decision"),

@@ -85,6 +85,7 @@ from anneal_ref.studies.assess import (
     assess as assess,
 )
 from anneal_ref.studies.study import Study as Study
+from anneal_ref.truth.inputs import InputUncertainty as InputUncertainty
 from anneal_ref.truth.reference import (
     Reference as Reference,
 )
@@ -92,6 +93,12 @@ from anneal_ref.truth.reference import (
     reference as reference,
 )
 from anneal_ref.truth.refining import Budget as Budget
+from anneal_ref.truth.uncertainty import (
+    UncertaintyBudget as UncertaintyBudget,
+)
+from anneal_ref.truth.uncertainty import (
+    uncertainty_budget as uncertainty_budget,
+)
 from anneal_ref.views import plots as plots
 
 __version__: str
