@@ -1,4 +1,4 @@
-"""The state vector against the outside: closed forms, published chains, and three other codes.
+"""The state vector, and free fermions on rings, against the outside: closed forms, chains, and three other codes.
 
 Hamiltonians for the other codes are built here from Pauli matrices, from the one line that states the convention:
 H = -G sum_i w_i X_i + P (sum J_ij Z_i Z_j + sum_i h_i Z_i), site 0 the least significant bit, bit 0 for Z = +1.
@@ -254,6 +254,14 @@ def random_anneal(seed):
     return ar.Anneal(instance, schedule, duration), transverse, problem
 
 
+def random_ring(seed):
+    anneal, transverse, problem = random_anneal(seed)
+    instance = ar.Instance(
+        ar.lattices.chain(6, periodic=True), anneal.instance.couplings[:6], transverse=anneal.instance.transverse
+    )
+    return ar.Anneal(instance, anneal.schedule, anneal.duration), transverse, problem
+
+
 def scipy_state(anneal, transverse, problem):
     flip, diagonal = pauli_parts(anneal.instance)
     energies = diagonal.diagonal()
@@ -292,9 +300,12 @@ def qutip_state(anneal, transverse, problem):
 OUTSIDE = {"scipy": scipy_state, "quimb": quimb_state, "qutip": qutip_state}
 
 
-def disagreement(anneal, outside, solved):
+STATE_VECTOR, FERMIONS = ar.StateVector(tolerance=1e-9), ar.FreeFermions(tolerance=1e-9)
+
+
+def disagreement(anneal, outside, solved, backend=STATE_VECTOR):
     """Largest difference over all <Z> and <ZZ> between our solution of `solved` and theirs of `anneal`."""
-    moments = ar.StateVector(tolerance=1e-9).evolve(solved).moments()
+    moments = backend.evolve(solved).moments()
     z, zz = outside_moments(outside, anneal.n_sites)
     return max(np.abs(moments.z.value - z).max(), np.abs(moments.zz.value - zz).max())
 
@@ -304,6 +315,14 @@ def test_agreement_on_random_graphs(code):
     for seed in (1, 2):
         anneal, transverse, problem = random_anneal(seed)
         assert disagreement(anneal, OUTSIDE[code](anneal, transverse, problem), anneal) < 3e-8
+
+
+@pytest.mark.parametrize("code", OUTSIDE)
+def test_free_fermions_agree_on_random_rings(code):
+    for seed in (1, 2):
+        anneal, transverse, problem = random_ring(seed)
+        outside = OUTSIDE[code](anneal, transverse, problem)
+        assert disagreement(anneal, outside, anneal, FERMIONS) < 3e-8
 
 
 def mistaken(anneal, mistake):
@@ -330,3 +349,10 @@ def test_a_wrong_twin_fails_the_agreement(mistake):
     anneal, transverse, problem = random_anneal(1)
     outside = scipy_state(anneal, transverse, problem)
     assert disagreement(anneal, outside, mistaken(anneal, mistake)) > 1e-2
+
+
+@pytest.mark.parametrize("mistake", ["sign of J", "factor 2 in G", "weights ignored", "unit"])
+def test_a_wrong_ring_fails_the_agreement(mistake):
+    anneal, transverse, problem = random_ring(1)
+    outside = scipy_state(anneal, transverse, problem)
+    assert disagreement(anneal, outside, mistaken(anneal, mistake), FERMIONS) > 1e-2
