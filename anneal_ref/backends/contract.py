@@ -145,6 +145,14 @@ def check_kicks(kicks: Sequence[Kick], n_sites: int, end: float = 1.0) -> tuple[
     return tuple(checked)
 
 
+def refuse_checkpoint(run: Run, what: str) -> None:
+    """Raise `InputError` if the run asks for a checkpoint, which `what` does not write."""
+    if run.checkpoint is not None:
+        raise InputError(
+            f"{what} writes no checkpoint; got Run(checkpoint={run.checkpoint!r}): leave it out, or use MPS.evolve"
+        )
+
+
 def _readable_seconds(seconds: float) -> str:
     for limit, factor, unit in (
         (1.0, 1e3, "ms"),

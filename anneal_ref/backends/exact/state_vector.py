@@ -9,7 +9,7 @@ from typing import Any, Literal
 
 import numpy as np
 
-from anneal_ref.backends.contract import Kick, Plan, check_anneal, check_kicks, check_times
+from anneal_ref.backends.contract import Kick, Plan, check_anneal, check_kicks, check_times, refuse_checkpoint
 from anneal_ref.backends.exact.ground_start import ground_start, ground_start_bytes
 from anneal_ref.backends.exact.register import Register
 from anneal_ref.backends.exact.splitting import SPLITTINGS, Floats, Splitting, merge_steps, order_on, step_angles
@@ -146,7 +146,7 @@ class StateVector:
         kicks : sequence of (float, int)
             Z on a site at a fraction of the duration, in ascending time up to `at`.
         run : Run
-            Threads and progress.
+            Threads and progress; no checkpoint.
 
         Raises
         ------
@@ -154,6 +154,7 @@ class StateVector:
             Something other than an anneal, times outside their range, kicks out of order; see `plan`.
         """
         check_anneal(anneal)
+        refuse_checkpoint(run, "StateVector")
         end = number("at", at, 0.0, 1.0)
         return next(self._march(anneal, (end,), check_kicks(kicks, anneal.n_sites, end), run))
 
@@ -164,6 +165,7 @@ class StateVector:
         moments that it has been asked for before.
         """
         check_anneal(anneal)
+        refuse_checkpoint(run, "StateVector")
         return self._march(anneal, check_times(at), (), run)
 
     def _march(

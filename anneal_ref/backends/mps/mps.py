@@ -5,32 +5,29 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
+from pathlib import Path
 from time import perf_counter
 from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
-from anneal_ref.backends.blas_threads import blas_threads
-from anneal_ref.backends.contract import Kick, Plan, check_anneal, check_kicks, check_times
+from anneal_ref.backends.contract import Kick, Plan, check_anneal, check_kicks, check_times, refuse_checkpoint
 from anneal_ref.backends.memory import require_memory
-from anneal_ref.backends.mps.chain import Chain, Limits
+from anneal_ref.backends.mps.chain import Limits
+from anneal_ref.backends.mps.checkpoint import Checkpoint, Saved, subject_of
 from anneal_ref.backends.mps.costs import bond_limits, cost_of
-from anneal_ref.backends.mps.entropies import cut_entropies
+from anneal_ref.backends.mps.course import REFRESH, Course
 from anneal_ref.backends.mps.ordering import best_order, cut_ranks
-from anneal_ref.backends.mps.start import kicked, plus_state
+from anneal_ref.backends.mps.start import plus_state
 from anneal_ref.backends.mps.state import MPSState
-from anneal_ref.backends.mps.steps import step_ends, sweep_strengths
+from anneal_ref.backends.mps.steps import step_ends
 from anneal_ref.backends.mps.wiring import Floats
-from anneal_ref.backends.mps.work import Work
 from anneal_ref.backends.phase import phase_mesh
 from anneal_ref.base.checks import choice, frozen, integer, number
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.run import Run
 from anneal_ref.model.anneal import Anneal
-
-REFRESH = 4
-"""Every so many steps all bonds are updated by two sites; in between those that cannot grow, by one."""
 
 _DTYPES: dict[str, Any] = {"double": np.complex128, "single": np.complex64}
 # smallest error of a local exponential that makes sense
@@ -168,12 +165,17 @@ class MPS:
         kicks : sequence of (float, int)
             Z on a site at a fraction of the duration, in ascending time up to `at`.
         run : Run
-            Threads and progress.
+            Threads, progress and checkpoint. The file is written at the start, after a step when `run.every` seconds
+            have passed, and at the end; with the same anneal, settings, `at` and kicks the evolution goes on from it,
+            on the same machine to the same bits.
 
         Raises
         ------
         InputError, TooLarge
-            Something other than an anneal, times outside their range, kicks out of order; see `plan`.
+            Something other than an anneal, times outside their range, kicks out of order, a checkpoint of another
+            computation; see `plan`.
+        ArchiveError
+            A checkpoint that is damaged, or cannot be written.
         NotConverged
             From `start="ground"`, when the ground state of H(0) is not found; see `ground_product`.
         """
@@ -182,8 +184,9 @@ class MPS:
         return next(self._march(anneal, (end,), check_kicks(kicks, anneal.n_sites, end), run))
 
     def states(self, anneal: Anneal, at: Sequence[float], run: Run = Run()) -> Iterator[MPSState]:  # noqa: B008
-        """Give the states at ascending fractions of the duration, in one pass of time."""
+        """Give the states at ascending fractions of the duration, in one pass of time; no checkpoint is written."""
         check_anneal(anneal)
+        refuse_checkpoint(run, "MPS.states")
         return self._march(anneal, check_times(at), (), run)
 
     def _march(self, anneal: Anneal, stops: tuple[float, ...], kicks: tuple[Kick, ...], run: Run) -> Iterator[MPSState]:
@@ -193,65 +196,38 @@ class MPS:
         grid = self._grid(anneal, sorted({u * duration for u in (*stops, *(u for u, _ in kicks))}))
         self._require(anneal, order, len(grid) - 1)
         grid = grid[: _nearest(grid, stops[-1] * duration) + 1]
-        events = {_nearest(grid, u * duration) for u in (*stops, *(u for u, _ in kicks))}
-        limits = Limits(self.bond_dimension, self.truncation, max(1e-2 * self.truncation**0.5, _KRYLOV[self.precision]))
-        with run.track(len(grid) - 1, f"{anneal.n_sites} spins") as bar:
-            chain = Chain(self._start(anneal, order), anneal.instance, limits)
-            work = Work(anneal)
-            work.note(grid[0], chain.energies())
-            idle = anneal.start == "plus"
-            two_site_steps = turned = 0
-            for k in range(len(grid)):
-                if k in events:
-                    for site in [site for u, site in kicks if _nearest(grid, u * duration) == k]:
-                        chain.replace(kicked(chain.product(), site))
-                        turned += 1
-                    for at in (u for u in stops if _nearest(grid, u * duration) == k):
-                        ledger = self._ledger(chain, k, two_site_steps, turned, work.residual())
-                        yield MPSState(anneal, at, chain.product(), ledger | {"seconds": perf_counter() - began})
-                if k == len(grid) - 1:
-                    break
-                first, second = sweep_strengths(anneal, grid[k], grid[k + 1])
-                # while there is no problem part, |+...+> only turns its phase, and its enrichment must wait
-                idle = idle and first[1] == 0 == second[1]
-                if not idle:
-                    two_site = k % REFRESH == 0 or two_site_steps == 0
-                    two_site_steps += two_site
-                    with blas_threads(run.threads):
-                        for strengths in (first, second):
-                            chain.sweep(1.0, strengths, two_site)
-                            chain.flip()
-                work.note(grid[k + 1], chain.energies())
-                bar.update(
-                    1,
-                    f"s {grid[k + 1] / duration:.2f}, bond {max(chain.bond_dimensions)}, "
-                    f"discarded {chain.discarded.sum():.1e}",
-                )
+        last = len(grid) - 1
+        kick_steps = [(_nearest(grid, u * duration), site) for u, site in kicks]
+        stop_steps = [(_nearest(grid, u * duration), u) for u in stops]
+        settings = {name: getattr(self, name) for name in ("precision", "bond_dimension", "truncation")}
 
-    def _ledger(self, chain: Chain, steps: int, two_site_steps: int, kicks: int, residual: float) -> dict[str, Any]:
-        product = chain.product()
-        return {
-            "backend": type(self).__name__,
-            "precision": self.precision,
-            "symmetric": chain.symmetric,
-            "order": 2,
-            "steps": steps,
-            "layers": 2 * steps,
-            "two_site_steps": two_site_steps,
-            "kicks": kicks,
-            "bond_dimension": self.bond_dimension,
-            "largest_bond": chain.largest,
-            "truncation": self.truncation,
-            "discarded_weight": float(chain.discarded.sum()),
-            "discarded_weights": tuple(chain.discarded[1:-1].tolist()),
-            "entropies": tuple(cut_entropies(product).tolist()),
-            "site_order": tuple(int(site) for site in chain.order),
-            "exponentials": chain.exponentials,
-            "lanczos_vectors": chain.vectors,
-            "norm_drift": chain.norm() ** 2 - 1.0,
-            "work_identity": residual,
-            "parity": {(1, 0): "even", (0, 1): "odd"}[product.dims[-1]] if chain.symmetric else "broken by fields",
-        }
+        checkpoint, saved = None, None
+        if run.checkpoint is not None:
+            checkpoint = Checkpoint(Path(run.checkpoint), run.every, subject_of(anneal, self, stops[-1], kicks))
+            saved = checkpoint.read()
+        begun = Saved(self._start(anneal, order), seconds=perf_counter() - began) if saved is None else saved
+        course = Course(anneal, grid, self._limits, begun, run.threads)
+        if checkpoint is not None and saved is None:
+            checkpoint.write(course.saved())
+        with run.track(last, f"{anneal.n_sites} spins") as bar:
+            bar.update(course.steps, course.note())
+            while True:
+                for site in (site for step, site in kick_steps if step == course.steps):
+                    course.kick(site)
+                for at in (u for step, u in stop_steps if step == course.steps):
+                    ledger = {"backend": type(self).__name__} | settings | course.ledger()
+                    yield MPSState(anneal, at, course.chain.product(), ledger)
+                if course.steps == last:
+                    return
+                course.step()
+                bar.update(1, course.note())
+                if checkpoint is not None and (checkpoint.is_due or course.steps == last):
+                    checkpoint.write(course.saved())
+
+    @property
+    def _limits(self) -> Limits:
+        krylov = max(1e-2 * self.truncation**0.5, _KRYLOV[self.precision])
+        return Limits(self.bond_dimension, self.truncation, krylov)
 
     def _start(self, anneal: Anneal, order: NDArray[np.intp]) -> Any:
         return plus_state(anneal.instance, order, not anneal.instance.has_fields, _DTYPES[self.precision])

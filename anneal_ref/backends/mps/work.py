@@ -11,6 +11,8 @@ being wrong.
 
 from __future__ import annotations
 
+from collections.abc import Iterable
+
 import numpy as np
 from scipy.interpolate import CubicSpline
 
@@ -25,12 +27,14 @@ class Work:
     Parameters
     ----------
     anneal : Anneal
+    times : iterable of float
+    parts : iterable of (float, float)
+        Energies that were noted before, and when.
     """
 
-    def __init__(self, anneal: Anneal) -> None:
+    def __init__(self, anneal: Anneal, times: Iterable[float] = (), parts: Iterable[tuple[float, float]] = ()) -> None:
         self.anneal = anneal
-        self.times: list[float] = []
-        self.parts: list[tuple[float, float]] = []
+        self.times, self.parts = list(times), list(parts)
 
     def note(self, time: float, parts: tuple[float, float]) -> None:
         """Keep the transverse and the problem part of the energy, per unit of G and P, at a time."""

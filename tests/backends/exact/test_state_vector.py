@@ -216,7 +216,7 @@ def test_progress_counts_the_layers():
     seen = []
 
     class Watching:
-        threads = 1
+        threads, checkpoint = 1, None
 
         @contextmanager
         def track(self, total, label):

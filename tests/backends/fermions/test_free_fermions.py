@@ -297,7 +297,7 @@ def test_progress_counts_the_layers(chain_anneal):
     seen = []
 
     class Watching:
-        threads = 1
+        threads, checkpoint = 1, None
 
         @contextmanager
         def track(self, total, label):
