@@ -6,16 +6,18 @@ import math
 
 from anneal_ref.backends.contract import Backend
 from anneal_ref.backends.exact.state_vector import StateVector
+from anneal_ref.backends.fermions.free_fermions import FreeFermions
 from anneal_ref.backends.mps.mps import MPS
 from anneal_ref.base.errors import NotSupported, TooLarge
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.truth.refining import Budget
 
-_COARSEST = 16  # bond dimension of the first run
+_COARSEST = 8  # bond dimension of the first run
 # error of a correlation at the default step and truncation, from which fourth and half order go on
 _STEP_ERROR, _CUT_ERROR = 3e-4, 1e-5
 # of all runs, in units of the coarsest: it twice, once with half and once with a quarter of the step
 _NESTED = 8.0
+_QUICK = 1.0  # seconds of a run that are not worth a choice
 
 
 def default_state_vector(tolerance: float) -> StateVector:
@@ -33,8 +35,8 @@ def default_mps(tolerance: float) -> MPS:
 def choose_backend(anneal: Anneal, tolerance: float, budget: Budget) -> Backend:
     """Return the settings of the coarsest run of a reference.
 
-    The state vector knows no truncation, and is taken wherever it fits into the budget; free fermions where there is a
-    chain without fields that they solve in less time. Matrix product states are for all else.
+    The state vector knows no truncation, and is taken wherever it is quick, or fits into the budget and nothing exact is
+    faster; free fermions are, for long chains without fields. Matrix product states are for all else.
     """
     candidates: list[tuple[float, Backend]] = []
     for backend in _exact(tolerance):
@@ -46,7 +48,7 @@ def choose_backend(anneal: Anneal, tolerance: float, budget: Budget) -> Backend:
         if fits and (budget.seconds is None or _NESTED * plan.seconds <= budget.seconds):
             candidates.append((plan.seconds, backend))
     if candidates:
-        return min(candidates, key=lambda one: one[0])[1]
+        return min(candidates, key=lambda one: max(one[0], _QUICK))[1]
     return default_mps(tolerance)
 
 
@@ -75,4 +77,5 @@ def second_backend(anneal: Anneal, tolerance: float, first: Backend) -> Backend:
 
 
 def _exact(tolerance: float) -> list[Backend]:
-    return [default_state_vector(tolerance)]
+    vector = default_state_vector(tolerance)
+    return [vector, FreeFermions(tolerance=vector.tolerance)]

@@ -39,7 +39,7 @@ RUNS = 3
 
 _LOWEST_ORDER = 2  # of any symmetric scheme
 _LEAST_RATIO = 0.1  # of truncation errors from one doubling of the bond dimension to the next
-_SAFETY = 1.25  # of parts that are measured from pairs or from bond dimensions
+_SAFETY = 1.1  # of parts that are measured from pairs or from bond dimensions
 _TYPICAL = 0.15  # share of the typical change that every entry is given
 _EPS = float(np.finfo(np.float64).eps)
 
