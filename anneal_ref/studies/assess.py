@@ -21,7 +21,7 @@ from functools import partial
 import numpy as np
 from scipy import special
 
-from anneal_ref.backends.contract import Plan
+from anneal_ref.backends.contract import Backend, Plan
 from anneal_ref.base.errors import AnnealRefError
 from anneal_ref.base.estimate import Estimate
 from anneal_ref.base.provenance import provenance
@@ -34,6 +34,7 @@ from anneal_ref.model.anneal import Anneal
 from anneal_ref.observe.samples import Samples
 from anneal_ref.studies.archive import Archive
 from anneal_ref.studies.sample_files import refuse_copies
+from anneal_ref.studies.schema import TruthTable
 from anneal_ref.studies.study import Case, Study
 from anneal_ref.truth.choosing import choose_backend
 from anneal_ref.truth.reference import Reference, reference
@@ -140,12 +141,13 @@ def plan(study: Study, archive: Archive) -> tuple[Planned, ...]:
     NotSupported, TooLarge
         A case that no back-end can treat on this machine; it is named.
     """
-    tolerance = study.table.truth.tolerance
+    tolerance, budget = study.table.truth.tolerance, Budget(study.table.truth.budget)
     planned = []
     for case in study.cases:
         archived = archive.find(case.anneal, tolerance) is not None
         with _naming(case):
-            largest, seconds = plan_reference(case.anneal, choose_backend(case.anneal, tolerance, Budget()))
+            backend = study.backend or choose_backend(case.anneal, tolerance, budget)
+            largest, seconds = plan_reference(case.anneal, backend)
         planned.append(Planned(case, largest, seconds, archived))
     return tuple(planned)
 
@@ -277,12 +279,11 @@ def _solved(
     if executor is None:
         for k in missing:
             with _naming(study.cases[k]):
-                solved = _solve_one(study.cases[k].anneal, truth.tolerance, truth.samples, truth.seed, run.threads)
+                solved = _solve_one(study.cases[k].anneal, truth, study.backend, run.threads)
             yield k, solved
         return
     jobs: dict[Future[Reference], int] = {
-        executor.submit(_solve_one, study.cases[k].anneal, truth.tolerance, truth.samples, truth.seed, 1): k
-        for k in missing
+        executor.submit(_solve_one, study.cases[k].anneal, truth, study.backend, 1): k for k in missing
     }
     try:
         for job in as_completed(jobs):
@@ -304,9 +305,12 @@ def _naming(case: Case) -> Iterator[None]:
         raise
 
 
-def _solve_one(anneal: Anneal, tolerance: float, samples: int, seed: int, threads: int) -> Reference:
+def _solve_one(anneal: Anneal, truth: TruthTable, backend: Backend | None, threads: int) -> Reference:
     """Solve one case, here or in a worker; the bar over all of them is enough."""
-    return reference(anneal, tolerance, samples=samples, seed=seed, run=Run(threads, progress=False))
+    return reference(
+        anneal, truth.tolerance, backend, truth.samples, truth.seed, budget=truth.budget,
+        run=Run(threads, progress=False),
+    )  # fmt: skip
 
 
 def _student(freedom: float, p: float) -> float:

@@ -12,12 +12,14 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from anneal_ref.backends.contract import Backend
 from anneal_ref.base.errors import AnnealRefError, InputError, StudyError
 from anneal_ref.model import disorder, lattices
 from anneal_ref.model.instances import Instance, draw_instance
 from anneal_ref.model.lattice import Lattice
 from anneal_ref.model.schedules import Schedule
-from anneal_ref.studies.schema import InstanceTable, LatticeTable, LawTable, ScheduleTable
+from anneal_ref.studies.records import BACKENDS
+from anneal_ref.studies.schema import BackendTable, InstanceTable, LatticeTable, LawTable, ScheduleTable
 
 LATTICES = (
     "biclique", "chain", "complete", "cubic", "diamond", "honeycomb", "ladder", "random_regular", "square",
@@ -71,6 +73,19 @@ def make_instance(table: InstanceTable, k: int, path: Path) -> Instance:
         )
     except AnnealRefError as error:
         raise StudyError(f"{path}: `{where}` ('{table.name}'): {error}") from error
+
+
+def make_backend(table: BackendTable | None, path: Path) -> Backend | None:
+    """Return the back-end that a study file asks for, None if it leaves the choice, or raise `StudyError`."""
+    if table is None:
+        return None
+    if table.kind not in BACKENDS:
+        raise StudyError(
+            f"{path}: `truth.backend.kind` must be one of {', '.join(BACKENDS)}; got '{table.kind}'"
+            f"{nearest(table.kind, BACKENDS)}"
+        )
+    made: Backend = _called(BACKENDS[table.kind], dict(table.model_extra or {}), "truth.backend", path)
+    return made
 
 
 def _lattice(table: LatticeTable | None, where: str, path: Path) -> Lattice:

@@ -193,7 +193,9 @@ def _rebuilt(record: Record, recipe: Mapping[str, Any]) -> Reference:
     runs = tuple(
         Evolution(
             Moments.of(z, zz, None if x is None else x[k], recipe["how"]),
-            _plain(kept["ledger"]), kept["refined"], kept["reordered"],
+            _plain(kept["ledger"]),
+            kept["refined"],
+            kept["reordered"],
         )  # fmt: skip
         for k, (z, zz, kept) in enumerate(zip(arrays["z"], arrays["zz"], recipe["runs"], strict=True))
     )

@@ -61,6 +61,14 @@ class WaveformTable(Table):
     s: list[float]
 
 
+class BackendTable(Table):
+    """`truth.backend`: a back-end by name, and the settings of its coarsest run."""
+
+    model_config = ConfigDict(extra="allow", frozen=True, strict=True, allow_inf_nan=False)
+
+    kind: str
+
+
 class TruthTable(Table):
     """`[truth]`: how well the Schrodinger equation is solved."""
 
@@ -68,6 +76,8 @@ class TruthTable(Table):
     samples: int = Field(default=16384, ge=1)
     seed: int = Field(default=0, ge=0)
     start: Literal["plus", "ground"] = "plus"
+    budget: float = Field(default=3600.0, gt=0)
+    backend: BackendTable | None = None
 
 
 class AcceptanceTable(Table):

@@ -27,6 +27,8 @@ A study is a TOML file that is pleasant to write by hand. Paths are relative to 
     samples = 16384                              # stored shots of the truth
     seed = 0
     start = "plus"                               # or "ground"
+    budget = 3600.0                              # seconds that one case may take
+    backend = { kind = "MPS", bond_dimension = 16 }   # default: the cheapest that does; settings of the coarsest run
 
     [acceptance]
     correlation_error = 0.10                     # largest allowed correlation error, pooled over the instances
@@ -77,12 +79,13 @@ from pathlib import Path
 
 import numpy as np
 
+from anneal_ref.backends.contract import Backend
 from anneal_ref.base.errors import AnnealRefError, InputError, StudyError
 from anneal_ref.judgement.equivalence import Acceptance
 from anneal_ref.model.anneal import Anneal, Waveform
 from anneal_ref.model.schedules import Schedule
 from anneal_ref.observe.samples import Samples
-from anneal_ref.studies.building import make_instance, make_schedule, nearest
+from anneal_ref.studies.building import make_backend, make_instance, make_schedule, nearest
 from anneal_ref.studies.sample_files import Values, find_files, read_samples, read_with_note, refuse_copies
 from anneal_ref.studies.schema import StudyTable, read_table
 
@@ -172,6 +175,8 @@ class Study:
         Instances run slowest, in the order of the file.
     table : StudyTable
         The file's contents, defaults filled in.
+    backend : Backend, optional
+        What the truth is made with, where the file says so.
 
     Examples
     --------
@@ -191,6 +196,7 @@ class Study:
     schedule: Schedule
     cases: tuple[Case, ...]
     table: StudyTable
+    backend: Backend | None = None
 
     @property
     def acceptance(self) -> Acceptance:
@@ -244,7 +250,8 @@ class Study:
             files, missing = find_files(patterns, name, duration, path, where)
             cases.append(Case(name, anneal, files, table.samples.values, missing))
         sha256 = hashlib.sha256(path.read_bytes()).hexdigest()
-        return cls(table.name, table.description, path, sha256, schedule, tuple(cases), table)
+        backend = make_backend(table.truth.backend, path)
+        return cls(table.name, table.description, path, sha256, schedule, tuple(cases), table, backend)
 
 
 def time_unit(schedule: Schedule) -> str:

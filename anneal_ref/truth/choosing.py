@@ -35,8 +35,8 @@ def default_mps(tolerance: float) -> MPS:
 def choose_backend(anneal: Anneal, tolerance: float, budget: Budget) -> Backend:
     """Return the settings of the coarsest run of a reference.
 
-    The state vector knows no truncation, and is taken wherever it is quick, or fits into the budget and nothing exact is
-    faster; free fermions are, for long chains without fields. Matrix product states are for all else.
+    The state vector knows no truncation, and is taken wherever it is quick, or fits into the budget and nothing exact
+    is faster; free fermions are, for long chains without fields. Matrix product states are for all else.
     """
     candidates: list[tuple[float, Backend]] = []
     for backend in _exact(tolerance):

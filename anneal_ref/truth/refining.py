@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from time import perf_counter
 
 from anneal_ref.backends.contract import Backend, Plan, State
@@ -120,11 +120,13 @@ class Refining:
         """Make runs until the tolerance is met or something runs out; the first few are made whatever they cost."""
         if "bond_dimension" in self.backend.knobs:
             self._go_grid()
+            for run in self.runs:
+                self._run_of(run.refined).forget()
         else:
             self._go_nested()
 
     def _go_nested(self) -> None:
-        self.runs.append(solve_reordered(self.anneal, self.backend, self.run))
+        self.runs.append(solve_reordered(self.anneal, self.backend, self._run_of({})))
         for k in range(self.max_runs):
             if k >= RUNS and not self._affordable({"step": k}):
                 return
@@ -166,11 +168,17 @@ class Refining:
             # before the next one is allocated
             self.state = None
         planned, began = backend.plan(self.anneal).seconds, perf_counter()
-        state = backend.evolve(self.anneal, run=self.run)
+        state = backend.evolve(self.anneal, run=self._run_of(counts))
         self._pace = (perf_counter() - began) / max(planned, 1e-9)
         self.runs.append(Evolution.of(state, counts))
         if keep:
             self.state = state
+
+    def _run_of(self, counts: Mapping[str, int]) -> Run:
+        """Return the run with a checkpoint of its own; the exact back-ends are quick, and keep none."""
+        if "bond_dimension" not in self.backend.knobs:
+            return replace(self.run, checkpoint=None)
+        return self.run.part("-".join(["run", *(f"{knob}-{count}" for knob, count in counts.items() if count)]))
 
     def _affordable(self, counts: Mapping[str, int]) -> bool:
         """Return whether a run fits into what is left of the budget; say in `stopped` if not."""

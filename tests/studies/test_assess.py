@@ -167,6 +167,19 @@ def test_an_interrupt_loses_only_the_reference_at_work(tmp_path: Path, monkeypat
     assert [reused for _, reused in solve(study, archive, run=QUIET)] == [True, True, False, False]
 
 
+def test_the_study_says_which_back_end_makes_the_truth(tmp_path: Path) -> None:
+    truth = '[truth]\ntolerance = 1e-2\nsamples = 500\nbackend = { kind = "MPS", bond_dimension = 4 }\n'
+    study = write(tmp_path, more=truth)
+    archive = Archive(tmp_path / "truth")
+    assert {one.plan.backend for one in plan(study, archive)} == {"MPS"}
+    verdict = assess(study, archive, run=QUIET)
+    assert {type(one.reference.backend).__name__ for one in verdict.judged} == {"MPS"}
+    assert all(one.reference.outcome == "converged" for one in verdict.judged)
+    assert archive.audit(recompute=1.0).sound
+    # the same verdict as with the truth of the state vector
+    assert verdict.decision.outcome == assess(write(tmp_path), Archive(tmp_path / "other"), run=QUIET).decision.outcome
+
+
 def test_any_executor_gives_the_same_references(tmp_path: Path) -> None:
     study = write(tmp_path, shots=500)
     serial = solve(study, Archive(tmp_path / "serial"), run=QUIET)

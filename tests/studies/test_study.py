@@ -10,6 +10,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from anneal_ref.backends.mps.mps import MPS
 from anneal_ref.base.errors import AnnealRefWarning, InputError, StudyError
 from anneal_ref.model.instances import Instance
 from anneal_ref.model.lattice import Lattice
@@ -60,6 +61,14 @@ def test_a_product_of_instances_and_durations(folder: Path) -> None:
     assert study.cases[1].samples().spins[0].tolist() == [1, 1, -1, 1]
     assert study.acceptance.limits(False) == {"correlation_error": 0.1}
     assert study.table.truth.tolerance == 1e-3
+
+
+def test_the_back_end_of_the_truth_and_its_budget(folder: Path) -> None:
+    assert read(folder, GOOD).backend is None
+    table = '[truth]\nbudget = 60\nbackend = { kind = "MPS", bond_dimension = 8, site_order = [3, 1, 0, 2] }\n'
+    study = read(folder, GOOD.replace("[acceptance]", table + "[acceptance]"))
+    assert study.backend == MPS(bond_dimension=8, site_order=(3, 1, 0, 2))
+    assert study.table.truth.budget == 60.0
 
 
 def test_cases_one_by_one_and_files_of_instances(folder: Path) -> None:
@@ -169,6 +178,18 @@ def test_the_format_in_the_docstring_is_a_study(folder: Path) -> None:
         ("[samples]\n", "[samples]\ntruth = 1\n", "`truth` belongs at the top of the file"),
         ("{instance}_{duration}ns*.csv", "{instance}_{time}ns.csv", "{instance} and {duration}"),
         ("[samples]", '[samples]\nvalues = "byts"', "did you mean 'bits'?"),
+        ("[acceptance]", "[truth]\nbudget = 0\n[acceptance]", "`truth.budget` must be greater than 0"),
+        ("[acceptance]", '[truth]\nbackend = { kind = "MSP" }\n[acceptance]', "did you mean 'MPS'?"),
+        (
+            "[acceptance]",
+            '[truth]\nbackend = { kind = "MPS", bond = 8 }\n[acceptance]',
+            "unknown key `truth.backend.bond`; MPS takes bond_dimension",
+        ),
+        (
+            "[acceptance]",
+            '[truth]\nbackend = { kind = "MPS", bond_dimension = 0 }\n[acceptance]',
+            "`truth.backend`: bond_dimension must be",
+        ),
     ],
 )
 def test_what_is_not_allowed_is_named(folder: Path, old: str, new: str, said: str) -> None:

@@ -253,7 +253,7 @@ class StateVector:
         def alternatives(free: int) -> tuple[str, ...]:
             fits = self.precision == "double" and Register.bytes_needed(n, symmetric, "single") <= free
             single = ("StateVector(precision='single', tolerance=1e-4)",) if fits else ()
-            return (*single, "a machine with more memory", "fewer spins")
+            return (*single, "MPS(bond_dimension=64)", "FreeFermions() for chains without fields", "fewer spins")
 
         require_memory(needed, f"the state vector of {n} spins", alternatives)
         return needed
