@@ -50,6 +50,18 @@ from anneal_ref.judgement.equivalence import (
 from anneal_ref.judgement.equivalence import (
     Decision as Decision,
 )
+from anneal_ref.judgement.growth import (
+    Growth as Growth,
+)
+from anneal_ref.judgement.growth import (
+    fit_growth as fit_growth,
+)
+from anneal_ref.judgement.matching import (
+    Matching as Matching,
+)
+from anneal_ref.judgement.matching import (
+    matching_bond_dimension as matching_bond_dimension,
+)
 from anneal_ref.judgement.pooling import (
     Pooled as Pooled,
 )
@@ -85,6 +97,12 @@ from anneal_ref.studies.assess import (
     assess as assess,
 )
 from anneal_ref.studies.study import Study as Study
+from anneal_ref.truth.convergence import (
+    Convergence as Convergence,
+)
+from anneal_ref.truth.convergence import (
+    converge as converge,
+)
 from anneal_ref.truth.inputs import InputUncertainty as InputUncertainty
 from anneal_ref.truth.reference import (
     Reference as Reference,
