@@ -10,15 +10,21 @@ from numba import njit
 from anneal_ref.backends.fermions import measuring, pfaffians, turning
 from anneal_ref.backends.stamp import stamp_of
 
-KERNELS = ("turning", "eliminating", "pfaffians", "measuring", "../exact/simd")
+KERNELS = ("turning", "eliminating", "pfaffians", "measuring", "../exact/phases", "../exact/simd")
 
 
 def _entries(stamp: int) -> tuple[Any, ...]:
     @njit(cache=True, nogil=True)
-    def advance(v, room, spans, cut, first, stop, ring, edge, cp, sp, cx, sx):  # type: ignore[no-untyped-def]
+    def tables(angles, strengths, c, s):  # type: ignore[no-untyped-def]
+        """See `turning.tables`."""
+        stamp  # noqa: B018
+        turning.tables(angles, strengths, c, s)
+
+    @njit(cache=True, nogil=True)
+    def advance(v, room, spans, cut, first, stop, n, ring, edge, cp, sp, cx, sx):  # type: ignore[no-untyped-def]
         """See `turning.advance`."""
         stamp  # noqa: B018
-        turning.advance(v, room, spans, cut, first, stop, ring, edge, cp, sp, cx, sx)
+        turning.advance(v, room, spans, cut, first, stop, n, ring, edge, cp, sp, cx, sx)
 
     @njit(cache=True, nogil=True)
     def sum_rows(v, room, spans, norms):  # type: ignore[no-untyped-def]
@@ -44,7 +50,7 @@ def _entries(stamp: int) -> tuple[Any, ...]:
         stamp  # noqa: B018
         measuring.measure(band, s, draws, outcomes, given, logs, least)
 
-    return advance, sum_rows, pair_rows, correlations, measure
+    return tables, advance, sum_rows, pair_rows, correlations, measure
 
 
-advance, sum_rows, pair_rows, correlations, measure = _entries(stamp_of(Path(__file__).parent, KERNELS))
+tables, advance, sum_rows, pair_rows, correlations, measure = _entries(stamp_of(Path(__file__).parent, KERNELS))

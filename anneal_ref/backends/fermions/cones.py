@@ -22,7 +22,6 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -94,7 +93,7 @@ class Cones:
         progress : callable
             Told how many layers have been done.
         """
-        few = max(8, _TABLE // self.n_sites)
+        few = max(32, _TABLE // self.n_sites)
         for start in range(0, len(problem_angles), few):
             part = slice(start, start + few)
             tables = (*_turns(problem_angles[part], couplings), *_turns(transverse_angles[part], weights))
@@ -139,7 +138,7 @@ class Cones:
 
         def work(share: int) -> None:
             first, stop = ends[share : share + 2]
-            compiled.advance(flat, room, self.spans, self.cut, first, stop, self.ring, EDGE, *tables)
+            compiled.advance(flat, room, self.spans, self.cut, first, stop, self.n_sites, self.ring, EDGE, *tables)
 
         if shares == 1:
             work(0)
@@ -163,7 +162,9 @@ class Cones:
 
 
 def _turns(angles: Floats, strengths: Floats) -> tuple[Floats, Floats]:
-    """Cosines and sines of twice the angles times the strengths, each shape (layers, N)."""
-    different, which = np.unique(strengths, return_inverse=True)
-    full: Any = 2 * angles[:, None] * different
-    return np.ascontiguousarray(np.cos(full)[:, which]), np.ascontiguousarray(np.sin(full)[:, which])
+    """Cosines and sines of twice the angles times the strengths, each shape (layers, N or a little more)."""
+    padded = np.zeros(-(-len(strengths) // COLUMNS) * COLUMNS)
+    padded[: len(strengths)] = strengths
+    cosines, sines = np.empty((2, len(angles), len(padded)))
+    compiled.tables(np.ascontiguousarray(angles), padded, cosines, sines)
+    return cosines, sines

@@ -30,10 +30,10 @@ from anneal_ref.model.lattices import chain as open_chain
 _FLOOR = 1e-11
 # time of a layer per element of M, and per site for its table; measured on one core of about 3 GHz with 512-bit vectors
 _ELEMENT_SECONDS = 1e-10
-_SITE_SECONDS = 2.5e-8
+_SITE_SECONDS = 4e-9
 _LAYER_SECONDS = 5e-7
 # singular values and two products of dense matrices, per N^3
-_GROUND_SECONDS = 2e-9
+_GROUND_SECONDS = 5e-10
 # times, clocks, angles and merged angles
 _LAYER_BYTES = 64
 # interpreter, libraries and compiled kernels, beside the arrays

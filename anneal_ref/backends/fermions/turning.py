@@ -13,12 +13,20 @@ from __future__ import annotations
 
 from numba import njit
 
+from anneal_ref.backends.exact.phases import unit_phases
 from anneal_ref.backends.exact.simd import lanes_of, vfma, vload, vmul, vneg, vset, vstore, vsum
 
 LOW, HIGH, BASE, DONE = 0, 1, 2, 3
 """Columns of `spans`: the window, the row at the start of the bundle's storage, and layers done."""
 
 _MORE = 4
+
+
+@njit
+def tables(angles, strengths, c, s):  # type: ignore[no-untyped-def]
+    """Write cosines and sines of twice the angles (layers,) times the strengths, padded to whole vectors."""
+    for k in range(len(angles)):
+        unit_phases(-2.0 * angles[k], strengths, 0, len(strengths), c[k], s[k])
 
 
 @njit
@@ -68,7 +76,7 @@ def turn(v, o, low, high, closed, n, cp, sp, cx, sx):  # type: ignore[no-untyped
 
 
 @njit
-def advance(v, room, spans, cut, first, stop, ring, edge, cp, sp, cx, sx):  # type: ignore[no-untyped-def]
+def advance(v, room, spans, cut, first, stop, n, ring, edge, cp, sp, cx, sx):  # type: ignore[no-untyped-def]
     """Apply layers to the bundles first .. stop-1, each until all are done or its window has no room to widen.
 
     Parameters
@@ -80,14 +88,16 @@ def advance(v, room, spans, cut, first, stop, ring, edge, cp, sp, cx, sx):  # ty
     cut : (bundles,) array
         Largest weight so far of two outermost rows when a layer was applied.
     first, stop : int
+    n : int
+        Number of sites.
     ring : bool
     edge : float
-    cp, sp, cx, sx : (layers, sites) arrays
+    cp, sp, cx, sx : (layers, at least n) arrays
         Cosines and sines of the rotations of bonds and sites.
     """
     lanes = lanes_of(v)
     row = 2 * lanes
-    layers, n = cp.shape
+    layers = len(cp)
     for b in range(first, stop):
         low, high, base, done = spans[b, LOW], spans[b, HIGH], spans[b, BASE], spans[b, DONE]
         start = b * room * row
