@@ -16,7 +16,7 @@ from anneal_ref.backends.exact.steps import choose_splitting, step_density, time
 from anneal_ref.backends.fermions.chains import Chain, chain_of
 from anneal_ref.backends.fermions.cones import COLUMNS, Cones
 from anneal_ref.backends.fermions.covariance import grown, grown_bytes
-from anneal_ref.backends.fermions.ground_modes import GroundModes, ground_modes
+from anneal_ref.backends.fermions.ground_modes import ground_modes
 from anneal_ref.backends.fermions.state import FermionState
 from anneal_ref.backends.memory import require_memory
 from anneal_ref.backends.phase import halved, phase_mesh
@@ -129,7 +129,7 @@ class FreeFermions:
         return Plan(
             backend=type(self).__name__,
             bytes=needed + _OVERHEAD,
-            seconds=layers * a_layer + (0.0 if anneal.start == "plus" else _GROUND_SECONDS * n**3),
+            seconds=layers * a_layer + (0.0 if _starts_as_plus(anneal, chain) else _GROUND_SECONDS * n**3),
             steps=len(grid) - 1,
             layers=layers,
             details={
@@ -179,7 +179,7 @@ class FreeFermions:
         grid = grid[: _nearest(grid, stops[-1] * duration) + 1]
         problem, transverse = step_angles(anneal, grid, splitting)
         with blas_threads(run.threads):
-            ground = _ground(anneal, chain)
+            ground = None if _starts_as_plus(anneal, chain) else ground_modes(anneal, chain)
         cones = Cones(chain.n_sites, chain.ring, width, run.threads)
         ledger: dict[str, Any] = {"backend": type(self).__name__, "ring": chain.ring, "bytes": needed}
         if ground is not None:
@@ -226,7 +226,7 @@ class FreeFermions:
     def _require(self, anneal: Anneal, chain: Chain, splitting: Splitting, grid: Floats) -> tuple[int, int]:
         """Return the bytes of a run and the rows of a light cone, or raise `TooLarge`."""
         n, width = chain.n_sites, cone_width(anneal, chain)
-        local = anneal.start == "plus"
+        local = _starts_as_plus(anneal, chain)
         needed = grown_bytes(n, width, local) + _LAYER_BYTES * len(grid) * splitting.stages
         alternatives = ("a shorter duration", "fewer spins", *(() if local else ("start='plus'",)))
         require_memory(needed, f"free fermions on {n} spins with light cones of {width} operators", alternatives)
@@ -253,13 +253,10 @@ def _two_spins(chain: Chain) -> Instance:
     return Instance(open_chain(2), [local], transverse=[chain.weights.max()] * 2)
 
 
-def _ground(anneal: Anneal, chain: Chain) -> GroundModes | None:
-    """Return the ground state of H(0) where it is asked for and not |+...+>."""
-    if anneal.start == "plus":
-        return None
+def _starts_as_plus(anneal: Anneal, chain: Chain) -> bool:
+    """Whether the start is |+...+>, as it also is where the ground state of H(0) is asked for and P(0) = 0."""
     free = anneal.problem(0.0) == 0.0 or not chain.couplings.any()
-    decided = anneal.transverse(0.0) > 0 and chain.weights.all()
-    return None if free and decided else ground_modes(anneal, chain)
+    return anneal.start == "plus" or bool(free and anneal.transverse(0.0) > 0 and chain.weights.all())
 
 
 def _nearest(grid: Floats, time: float) -> int:

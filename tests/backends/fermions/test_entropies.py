@@ -23,18 +23,10 @@ def test_entropies_of_several_chains_add_up(chain_anneal):
     case = chain_anneal("parts", n=10)
     state = ar.FreeFermions(tolerance=1e-11).evolve(case)
     other = ar.StateVector(scheme="blanes-moan-4", tolerance=1e-11).evolve(case)
-    asked = 0
-    for bits in range(1 << 10):
+    # of three spins in a row any set is a stretch, or what is left of one: no set is refused
+    for bits in range(0, 1 << 10, 13):
         sites = [site for site in range(10) if bits >> site & 1]
-        try:
-            found = state.entropy(sites)
-        except ar.NotSupported:
-            continue
-        asked += 1
-        if asked % 20 == 0:
-            assert found == pytest.approx(other.entropy(sites), abs=1e-9)
-    # three spins in a row: all but the first and the last one alone; four: 14 of 16; the single spin is no part
-    assert asked > 500
+        assert state.entropy(sites) == pytest.approx(other.entropy(sites), abs=1e-9)
 
 
 @pytest.mark.parametrize(("kind", "sites"), [("chain", [1, 3]), ("chain", [0, 4, 9]), ("ring", [0, 1, 5, 6])])

@@ -91,6 +91,8 @@ def test_a_start_without_couplings_is_plus():
     plus = ar.Anneal(case.instance, case.schedule, 1.0)
     one, other = ar.FreeFermions().evolve(case), ar.FreeFermions().evolve(plus)
     np.testing.assert_array_equal(one.moments().zz.value, other.moments().zz.value)
+    # and needs no more memory or time
+    assert ar.FreeFermions().plan(case) == ar.FreeFermions().plan(plus)
 
 
 TWO_CHAINS = ar.Instance(ar.lattices.from_edges(5, [(0, 1), (1, 2), (3, 4)]), [1.0, -1.0, 1.0])
