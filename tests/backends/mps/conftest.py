@@ -90,3 +90,32 @@ def product_of():
 def spins_of():
     """All 2^N configurations, shape (2^N, N), in the order of the basis."""
     return lambda n: 1 - 2 * ((np.arange(1 << n)[:, None] >> np.arange(n)) & 1)
+
+
+@pytest.fixture(scope="session")
+def apart():
+    """Largest difference between two states over all <Z>, <ZZ> and <X>."""
+
+    def largest(first, second):
+        first, second = first.moments(), second.moments()
+        pairs = ((first.z, second.z), (first.zz, second.zz), (first.x, second.x))
+        return max(float(np.abs(one.value - other.value).max()) for one, other in pairs)
+
+    return largest
+
+
+@pytest.fixture(scope="session")
+def parts():
+    """The transverse and the problem part of a Hamiltonian as dense matrices, from the line that defines them."""
+
+    def build(instance):
+        n = instance.n_sites
+        states = np.arange(1 << n)
+        spins = 1 - 2 * ((states[:, None] >> np.arange(n)) & 1)
+        transverse = np.zeros((1 << n, 1 << n))
+        for site, weight in enumerate(instance.transverse):
+            transverse[states, states ^ (1 << site)] -= weight
+        couplings = np.einsum("xi,ij,xj->x", spins, np.triu(instance.coupling_matrix(), 1), spins)
+        return transverse, np.diag(couplings + spins @ instance.fields)
+
+    return build
