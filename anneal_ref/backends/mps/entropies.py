@@ -156,8 +156,10 @@ def _joined_values(blocks: tuple[Matrix, ...]) -> Floats:
 
 def _entropy_of(values: Floats) -> float:
     """Return the entropy, in nats, of weights that are the squares of singular values."""
-    weights = np.square(values[values > 0])
+    weights = np.square(values)
     weights /= weights.sum()
+    # the square of a tiny value may be zero
+    weights = weights[weights > 0]
     return float(max(0.0, -np.sum(weights * np.log(weights))))
 
 
