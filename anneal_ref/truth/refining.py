@@ -128,7 +128,8 @@ class Refining:
     def _go_nested(self) -> None:
         self.runs.append(solve_reordered(self.anneal, self.backend, self._run_of({})))
         for k in range(self.max_runs):
-            if k >= RUNS and not self._affordable({"step": k}):
+            if k >= RUNS and (obstacle := self._obstacle({"step": k})) is not None:
+                self.stopped = obstacle
                 return
             self._solve({"step": k}, keep=True)
             if k >= RUNS - 1 and self._met():
@@ -136,31 +137,37 @@ class Refining:
         self.stopped = MOST_RUNS
 
     def _go_grid(self) -> None:
-        top, halvings = RUNS - 1, 0
+        place = {"bond_dimension": RUNS - 1, "step": 0}
         for counts in first_runs(self.backend):
-            self._solve(counts, keep=counts == {"bond_dimension": top})
+            self._solve(counts, keep=counts == {"bond_dimension": RUNS - 1})
         while not self._met():
-            parts = self._largest()
-            place = {"bond_dimension": top - 1, "step": halvings}
-            # a heavily truncated pair of runs differs by more than what it is asked about: ask a better one first
-            if parts["step"] > self.tolerance / 4 and not self._has(halved := _more(place, "step")):
-                wanted = halved
-            elif parts["rounding"] > self.tolerance / 4 and not self._has(tight := _more(place, "rounding")):
-                wanted = tight
-            elif parts["step"] > max(parts["truncation"], self.tolerance / 4):
-                halvings += 1
-                wanted = {"bond_dimension": top, "step": halvings}
-            else:
-                top += 1
-                wanted = {"bond_dimension": top, "step": halvings}
-            if max(top, halvings) >= self.max_runs:
-                self.stopped = MOST_RUNS
+            options = [(self._obstacle(counts), counts, final) for counts, final in self._options(place)]
+            possible = [(counts, final) for obstacle, counts, final in options if obstacle is None]
+            if not possible:
+                self.stopped = str(options[0][0])
                 return
-            if not self._affordable(wanted):
-                return
-            if wanted.get("rounding") and not self._has(place):
-                self._solve(place)
-            self._solve(wanted, keep=wanted == {"bond_dimension": top, "step": halvings})
+            counts, final = possible[0]
+            if counts.get("rounding") and not self._has(untightened := {**counts, "rounding": 0}):
+                self._solve(untightened)
+            self._solve(counts, keep=final)
+            place = counts if final else place
+
+    def _options(self, place: dict[str, int]) -> list[tuple[dict[str, int], bool]]:
+        """Return what to solve next, best first, and whether its numbers would be reported; `place` are those now."""
+        parts = self._largest()
+        much = self.tolerance / 4
+        wider = _more(place, "bond_dimension"), True
+        # a heavily truncated pair of runs differs by more than what it is asked about: ask the best that can be had
+        pair = {**place, "bond_dimension": place["bond_dimension"] - 1}
+        asked = [_more(pair, knob) for knob in ("step", "rounding") if parts[knob] > much]
+        checks = [(counts, False) for counts in asked if not self._has(counts)]
+        if parts["truncation"] > self.tolerance / 2:
+            return [wider, *checks]
+        if checks:
+            return [*checks, wider]
+        if parts["step"] > max(parts["truncation"], much):
+            return [(_more(place, "step"), True), wider]
+        return [wider]
 
     def _solve(self, counts: Mapping[str, int], keep: bool = False) -> None:
         backend = refined(self.backend, counts)
@@ -180,27 +187,24 @@ class Refining:
             return replace(self.run, checkpoint=None)
         return self.run.part("-".join(["run", *(f"{knob}-{count}" for knob, count in counts.items() if count)]))
 
-    def _affordable(self, counts: Mapping[str, int]) -> bool:
-        """Return whether a run fits into what is left of the budget; say in `stopped` if not."""
+    def _obstacle(self, counts: Mapping[str, int]) -> str | None:
+        """Return why a run cannot be made within what is left, None if it can."""
+        if max(counts.values()) >= self.max_runs:
+            return MOST_RUNS
         try:
             plan = refined(self.backend, counts).plan(self.anneal)
         except TooLarge as error:
-            self.stopped = f"out of memory: {error}"
-            return False
+            return f"out of memory: {error}"
         seconds, spent = plan.seconds * self._pace, perf_counter() - self._began
         if self.budget.bytes is not None and plan.bytes > self.budget.bytes:
-            self.stopped = (
-                f"out of the budget: the next run needs {readable_bytes(plan.bytes)}, "
-                f"{readable_bytes(self.budget.bytes)} are allowed"
-            )
-        elif self.budget.seconds is not None and spent + seconds > self.budget.seconds:
-            self.stopped = (
+            needed, allowed = readable_bytes(plan.bytes), readable_bytes(self.budget.bytes)
+            return f"out of the budget: the next run needs {needed}, {allowed} are allowed"
+        if self.budget.seconds is not None and spent + seconds > self.budget.seconds:
+            return (
                 f"out of the budget: {spent:.3g} s are spent, the next run takes about {seconds:.3g} s, "
                 f"{self.budget.seconds:.3g} s are allowed"
             )
-        else:
-            return True
-        return False
+        return None
 
     def _has(self, counts: Mapping[str, int]) -> bool:
         wanted = {knob: count for knob, count in counts.items() if count}
