@@ -67,6 +67,7 @@ class Course:
         """Apply Z on a site."""
         self.chain.replace(kicked(self.chain.product(), site))
         self.kicks += 1
+        self.work.note(self.grid[self.steps], self.chain.energies())
 
     def step(self) -> None:
         """Go on to the next time of the grid."""
