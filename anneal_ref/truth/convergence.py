@@ -130,6 +130,11 @@ class Convergence:
         return self.law is not None and self.law.settled
 
     @property
+    def measured(self) -> bool:
+        """Whether the error of `target` was measured, in full."""
+        return not (np.isnan(self.target.zz.num).any() or np.isnan(self.target.z.num).any())
+
+    @property
     def pace(self) -> float:
         """Wall time of the largest run over what the cost model of the back-end says about it."""
         return self.best.seconds / max(self.best.planned_seconds, 1e-9)

@@ -52,7 +52,7 @@ STEP_ORDER = 2.0
 _MOST = 3.0  # what is left, in units of the last change, where nothing converges
 _TYPICAL = 0.5  # share of the typical change that every entry is given
 _WEIGHTLESS = 1e-8  # a discarded weight at which the limit of single updates takes over
-_LARGEST = 50.0  # an exponent that stands for any faster decay
+_SMALLEST, _LARGEST = 1e-9, 50.0  # exponents that stand for no decay, and for any faster one
 
 
 @dataclass(frozen=True, slots=True)
@@ -98,7 +98,10 @@ class Law:
     def bars(self, values: Sequence[Floats]) -> Floats:
         """Return the bound on what is left in the last of three arrays, entry by entry."""
         early, late = np.abs(values[1] - values[0]), np.abs(values[2] - values[1])
-        return self.left * _with_typical(np.maximum(late, self.left / (1.0 + self.left) * early))
+        before, after = np.log(self.sizes[1] / self.sizes[0]), np.log(self.sizes[2] / self.sizes[1])
+        # what the last change would be by the one before it
+        shrink = -np.expm1(-self.cautious_exponent * after) / np.expm1(self.cautious_exponent * before)
+        return self.left * _with_typical(np.maximum(late, shrink * early))
 
     def extrapolated(self, values: Sequence[Floats]) -> Floats:
         """Return the values at an infinite bond dimension."""
@@ -156,7 +159,9 @@ def exponent_of(sizes: Sequence[float], early: float, late: float) -> float:
     def excess(a: float) -> float:
         return float(np.log(-np.expm1(-a * after) / np.expm1(a * before)) - np.log(late / early))
 
-    return float(optimize.brentq(excess, 1e-9, _LARGEST)) if excess(_LARGEST) < 0 else _LARGEST
+    if excess(_LARGEST) >= 0:
+        return _LARGEST
+    return float(optimize.brentq(excess, _SMALLEST, _LARGEST)) if excess(_SMALLEST) > 0 else 0.0
 
 
 def remaining(exponent: float, before: float, last: float) -> float:

@@ -63,9 +63,10 @@ class Prediction:
         text = f"{self.quantity.replace('_', ' ')} {self.error:.2g}: "
         if self.basis == UNSETTLED:
             return text + "the ladder has not settled and says nothing about it; add larger bond dimensions"
+        step = "the step as given" if self.halvings == 0 else f"1/{2**self.halvings} of the step"
         text += (
-            f"bond dimension {math.ceil(self.bond_dimension)}, {self.halvings} halvings of the step, about "
-            f"{self.seconds:.2g} s and {readable_bytes(self.bytes)} ({self.basis})"
+            f"bond dimension {math.ceil(self.bond_dimension)}, {step}, about {self.seconds:.2g} s and "
+            f"{readable_bytes(self.bytes)} ({self.basis})"
         )
         return text + ("; the error of the step was not measured" if math.isnan(self.step_error) else "")
 
@@ -171,10 +172,9 @@ def _extrapolated(convergence: Convergence, wanted: float, quantity: str) -> tup
     law, best = convergence.law, convergence.best
     if law is None or not law.settled:
         return math.nan, UNSETTLED
-    bond = convergence.own_error(quantity)[0]
-    if convergence.reference is not None and convergence.resolved(quantity)[-1]:
-        bond = max(bond, float(convergence.error(quantity)[-1]))
-    size = best.bond_dimension * max(1.0, bond / wanted) ** (1 / law.cautious_exponent)
+    known = convergence.reference is not None and convergence.resolved(quantity)[-1]
+    last = float(convergence.error(quantity)[-1]) if known else convergence.own_error(quantity)[0]
+    size = best.bond_dimension * max(1.0, last / wanted) ** (1 / law.cautious_exponent)
     full = full_dimension(convergence.anneal.n_sites)
     spacing = law.sizes[2] / law.sizes[1]
     return min(size, full), OUTSIDE if min(size, full) <= best.bond_dimension * spacing else BEYOND

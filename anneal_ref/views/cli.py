@@ -1,4 +1,4 @@
-"""The command line: `anneal-ref demo | plan | reference | assess | compare | audit`, thin layers over the library.
+"""The command line: `anneal-ref demo | plan | reference | assess | converge | compare | audit`, thin over the library.
 
 Exit codes
 ----------
@@ -135,6 +135,45 @@ def _assess(options: argparse.Namespace) -> int:
     return {"accept": OK, "reject": REJECTED, "inconclusive": INCONCLUSIVE}[verdict.outcome] if options.strict else OK
 
 
+def _converge(options: argparse.Namespace) -> int:
+    from anneal_ref.base.run import Run
+    from anneal_ref.judgement.matching import matching_bond_dimension
+    from anneal_ref.studies.archive import Archive
+    from anneal_ref.studies.study import Study
+    from anneal_ref.truth.convergence import converge
+
+    study = Study.read(options.study)
+    archive = Archive(_archive(options), create=False)
+    cases = [case for case in study.cases if options.instance in (None, case.name)]
+    if not cases:
+        names = ", ".join(dict.fromkeys(case.name for case in study.cases))
+        raise InputError(f"--instance must be one of {names}; got {options.instance}")
+    done = []
+    for case in cases:
+        truth = archive.find(case.anneal, study.table.truth.tolerance)
+        convergence = converge(
+            case.anneal, options.bond_dimensions, options.steps, reference=truth, run=Run(threads=options.threads)
+        )
+        done.append((case, convergence))
+        print(f"{case.label}\n{convergence}")
+        for error in options.error:
+            print(f"  {convergence.predict(error)}")
+        if options.plots:
+            from anneal_ref.views.convergence_plots import convergence_figure
+
+            options.plots.mkdir(parents=True, exist_ok=True)
+            picture = options.plots / f"{case.name}_{case.anneal.duration:g}.png"
+            convergence_figure(convergence, case.label).savefig(picture, dpi=150)
+            print(f"  picture: {picture}")
+        print(flush=True)
+    for duration in sorted({case.anneal.duration for case, _ in done}):
+        pairs = [(case, one) for case, one in done if case.anneal.duration == duration]
+        if all(case.files and one.measured for case, one in pairs):
+            matching = matching_bond_dimension([one for _, one in pairs], [case.samples() for case, _ in pairs])
+            print(f"duration {duration:g}: {matching}\n")
+    return OK
+
+
 def _compare(options: argparse.Namespace) -> int:
     from anneal_ref.judgement.compare import compare
     from anneal_ref.studies.archive import read_reference
@@ -229,7 +268,11 @@ def _parser() -> argparse.ArgumentParser:
     reference.set_defaults(command=_reference)
     assess = commands.add_parser("assess", help="judge a processor's samples: references, comparison, verdict, page")
     assess.set_defaults(command=_assess)
-    for command in (plan, reference, assess):
+    converge = commands.add_parser(
+        "converge", help="matrix product states at several bond dimensions: errors, and where they match the samples"
+    )
+    converge.set_defaults(command=_converge)
+    for command in (plan, reference, assess, converge):
         command.add_argument("study", metavar="STUDY", help="study file (TOML)")
         command.add_argument("--archive", metavar="DIR", help="folder of references (default: truth/ beside the study)")
     assess.add_argument(
@@ -237,6 +280,18 @@ def _parser() -> argparse.ArgumentParser:
     )
     assess.add_argument("--no-page", action="store_true", help="print the table only")
     assess.add_argument("--strict", action="store_true", help="exit 1 on reject and 3 on inconclusive")
+
+    converge.add_argument(
+        "--bond-dimensions", metavar="D", type=int, nargs="+", default=[16, 32, 64, 128], help="default: 16 32 64 128"
+    )
+    converge.add_argument(
+        "--steps", metavar="K", type=int, nargs="+", default=[0, 1], help="halvings of the time step (default: 0 1)"
+    )
+    converge.add_argument(
+        "--error", metavar="E", type=float, nargs="+", default=[1e-2, 1e-3], help="correlation errors to predict for"
+    )
+    converge.add_argument("--instance", metavar="NAME", help="one instance of the study alone")
+    converge.add_argument("--plots", metavar="DIR", type=Path, help="folder for a picture of every case")
 
     compare = commands.add_parser("compare", help="compare samples with one archived reference")
     compare.add_argument("reference", metavar="REFERENCE.h5")
@@ -255,7 +310,7 @@ def _parser() -> argparse.ArgumentParser:
     )
     audit.add_argument("--seed", type=int, default=0, help="which ones are drawn")
     audit.set_defaults(command=_audit)
-    for command in (reference, assess, audit):
+    for command in (reference, assess, converge, audit):
         command.add_argument("--threads", type=int, default=1, metavar="N", help="threads of the back-end (default: 1)")
     return parser
 

@@ -20,10 +20,19 @@ from anneal_ref.base.checks import finite
 from anneal_ref.base.errors import InputError
 from anneal_ref.base.estimate import Estimate, Score
 from anneal_ref.judgement.equivalence import outcome_of
+from anneal_ref.views.convergence_plots import (
+    bond_dimension_growth,
+    convergence_errors,
+    convergence_figure,
+    matching_bond_dimensions,
+)
 from anneal_ref.views.lattice_plot import deviations
 from anneal_ref.views.style import INK, LIMIT, PROCESSOR, QUIET, SHADE, dressed, figure_of, new_axes
 
-__all__ = ["against_duration", "correlation_errors", "correlations", "deviations", "new_axes"]
+__all__ = [
+    "against_duration", "bond_dimension_growth", "convergence_errors", "convergence_figure", "correlation_errors",
+    "correlations", "deviations", "matching_bond_dimensions", "new_axes",
+]  # fmt: skip
 
 CROWD = 600
 """Points beyond which error bars turn into a density."""
