@@ -16,7 +16,7 @@ import numpy as np
 from numba import njit
 
 from anneal_ref.backends.mps.blas import ADJOINT, PLAIN, multiply
-from anneal_ref.backends.mps.effective import combined, field_of
+from anneal_ref.backends.mps.effective import add_blocks, add_scaled, combined, field_of
 
 
 @njit
@@ -38,7 +38,6 @@ def absorb(hx, hz, operators, a, mix, near, weight, field, de, ne, even):  # typ
     the block on the new site; `de` and `ne` the numbers of even states of the old and of the new bond.
     """
     matrices, d, n = a.shape
-    real = a.real.dtype.type
     count = len(operators)
     kept = combined(mix[:count].T, operators)
     new_hx, new_hz = np.empty((n, n), a.dtype), np.empty((n, n), a.dtype)
@@ -50,11 +49,7 @@ def absorb(hx, hz, operators, a, mix, near, weight, field, de, ne, even):  # typ
         for rows in (slice(0, de), slice(de, None)):
             multiply(tx[rows], hx[rows, rows], m[rows])
         multiply(tz, energy, m)
-        w = real(weight)
-        tx[:de, :ne] -= w * m[:de, :ne]
-        tx[de:, ne:] -= w * m[de:, ne:]
-        tx[:de, ne:] += w * m[:de, ne:]
-        tx[de:, :ne] += w * m[de:, :ne]
+        add_blocks(tx, m, de, ne, (-weight, weight, weight, -weight))
         new_hx[:] = 0
         new_hz[:] = 0
         for columns in (slice(0, ne), slice(ne, None)):
@@ -65,7 +60,7 @@ def absorb(hx, hz, operators, a, mix, near, weight, field, de, ne, even):  # typ
         for k in range(mix.shape[1]):
             multiply(t[:de], kept[k], m[de:, ne:])
             multiply(t[de:], kept[k], m[:de, ne:], ADJOINT)
-            t += real(mix[count, k]) * m[:, ne:]
+            add_scaled(t, m[:, ne:], mix[count, k])
             multiply(new[k], m[:, :ne], t, ADJOINT)
     else:
         new = np.empty((mix.shape[1], n, n), a.dtype)
@@ -75,14 +70,14 @@ def absorb(hx, hz, operators, a, mix, near, weight, field, de, ne, even):  # typ
             energy = hz.copy()
             field_of(near, operators, sign, even, energy)
             multiply(tx, hx, m)
-            tx -= real(weight) * a[1 - b]
+            add_scaled(tx, a[1 - b], -weight)
             multiply(tz, energy, m)
-            tz += real(sign * field) * m
+            add_scaled(tz, m, sign * field)
             multiply(new_hx, m, tx, ADJOINT, PLAIN, 1.0, float(b))
             multiply(new_hz, m, tz, ADJOINT, PLAIN, 1.0, float(b))
             for k in range(mix.shape[1]):
                 multiply(tx, kept[k], m)
-                tx += real(sign * mix[count, k]) * m
+                add_scaled(tx, m, sign * mix[count, k])
                 multiply(new[k], m, tx, ADJOINT, PLAIN, 1.0, float(b))
     _hermitian(new_hx)
     _hermitian(new_hz)

@@ -79,9 +79,32 @@ def _kept(first, second, most, truncation):  # type: ignore[no-untyped-def]
 
 
 @njit
-def _decomposed(matrix):  # type: ignore[no-untyped-def]
-    u, s, v = np.linalg.svd(matrix, False)
-    return u, s, v
+def copy_into(out, matrix):  # type: ignore[no-untyped-def]
+    """Copy the leading part of a matrix that fits; plain loops compile faster than slices."""
+    for i in range(out.shape[0]):
+        for j in range(out.shape[1]):
+            out[i, j] = matrix[i, j]
+
+
+@njit
+def _scaled_rows(out, factors, matrix):  # type: ignore[no-untyped-def]
+    """Set the rows of `out` to the leading ones of a matrix, each times its factor."""
+    for i in range(out.shape[0]):
+        for j in range(out.shape[1]):
+            out[i, j] = factors[i] * matrix[i, j]
+
+
+@njit
+def _normalised(first, second):  # type: ignore[no-untyped-def]
+    """Return two lists of singular values as one, with squares that add up to 1."""
+    joined = np.empty(len(first) + len(second), first.dtype)
+    total = 0.0
+    for i in range(len(joined)):
+        joined[i] = first[i] if i < len(first) else second[i - len(first)]
+        total += float(joined[i]) ** 2
+    for i in range(len(joined)):
+        joined[i] = joined[i] / np.sqrt(total)
+    return joined
 
 
 @njit
@@ -98,33 +121,38 @@ def divide(theta, most, truncation, even):  # type: ignore[no-untyped-def]
     rows, columns = theta.shape[1:]
     if even:
         _rotate(theta)
-        u0, s0, v0 = _decomposed(theta[0])
-        u1, s1, v1 = _decomposed(theta[1])
+        u0, s0, v0 = np.linalg.svd(theta[0], False)
+        u1, s1, v1 = np.linalg.svd(theta[1], False)
         k0, k1, dropped = _kept(s0, s1, most, truncation)
+        singular = _normalised(s0[:k0], s1[:k1])
         a = np.empty((1, rows, k0 + k1), theta.dtype)
         b = np.empty((1, k0 + k1, columns), theta.dtype)
-        a[0, :, :k0], a[0, :, k0:] = u0[:, :k0], u1[:, :k1]
-        singular = np.concatenate((s0[:k0], s1[:k1]))
-        singular = (singular / np.sqrt((singular.astype(np.float64) ** 2).sum())).astype(s0.dtype)
-        for i in range(k0):
-            b[0, i] = singular[i] * v0[i]
-        for i in range(k1):
-            b[0, k0 + i] = singular[k0 + i] * v1[i]
+        copy_into(a[0, :, :k0], u0)
+        copy_into(a[0, :, k0:], u1)
+        _scaled_rows(b[0, :k0], singular[:k0], v0)
+        _scaled_rows(b[0, k0:], singular[k0:], v1)
         return a, b, k0, k1, dropped, singular
-    matrix = np.empty((2, rows, 2, columns), theta.dtype)
+    matrix = np.empty((2 * rows, 2 * columns), theta.dtype)
     for first in range(2):
         for second in range(2):
-            matrix[first, :, second] = theta[2 * first + second]
-    u, s, v = _decomposed(matrix.reshape(2 * rows, 2 * columns))
+            block = matrix[first * rows : (first + 1) * rows, second * columns : (second + 1) * columns]
+            copy_into(block, theta[2 * first + second])
+    u, s, v = np.linalg.svd(matrix, False)
     k0, k1, dropped = _kept(s, s[:0], most, truncation)
-    singular = (s[:k0] / np.sqrt((s[:k0].astype(np.float64) ** 2).sum())).astype(s.dtype)
+    singular = _normalised(s[:k0], s[:0])
     a = np.empty((2, rows, k0), theta.dtype)
     b = np.empty((2, k0, columns), theta.dtype)
     for first in range(2):
-        a[first] = u[first * rows : (first + 1) * rows, :k0]
-        for i in range(k0):
-            b[first, i] = singular[i] * v[i, first * columns : (first + 1) * columns]
+        copy_into(a[first], u[first * rows : (first + 1) * rows])
+        _scaled_rows(b[first], singular, v[:, first * columns : (first + 1) * columns])
     return a, b, k0, k1, dropped, singular
+
+
+@njit
+def _triangular(block):  # type: ignore[no-untyped-def]
+    contiguous = np.empty(block.shape, block.dtype)
+    copy_into(contiguous, block)
+    return np.linalg.qr(contiguous)
 
 
 @njit
@@ -132,18 +160,23 @@ def orthogonalise(a, n_even, even):  # type: ignore[no-untyped-def]
     """Return a site tensor as an isometry times a bond matrix (1, D', D) with its sectors' new dimensions."""
     matrices, rows, columns = a.shape
     if not even:
-        q, r = np.linalg.qr(np.ascontiguousarray(a.reshape(matrices * rows, columns)))
+        q, r = _triangular(a.reshape(matrices * rows, columns))
         k = q.shape[1]
-        return np.ascontiguousarray(q).reshape(matrices, rows, k), np.ascontiguousarray(r).reshape(1, k, columns), k, 0
+        out, bond = np.empty((matrices, rows, k), a.dtype), np.empty((1, k, columns), a.dtype)
+        copy_into(out.reshape(matrices * rows, k), q)
+        copy_into(bond[0], r)
+        return out, bond, k, 0
     k0, k1 = min(rows, n_even), min(rows, columns - n_even)
     out = np.empty((1, rows, k0 + k1), a.dtype)
     bond = np.zeros((1, k0 + k1, columns), a.dtype)
     if k0 > 0:
-        q, r = np.linalg.qr(np.ascontiguousarray(a[0, :, :n_even]))
-        out[0, :, :k0], bond[0, :k0, :n_even] = q, r
+        q, r = _triangular(a[0, :, :n_even])
+        copy_into(out[0, :, :k0], q)
+        copy_into(bond[0, :k0, :n_even], r)
     if k1 > 0:
-        q, r = np.linalg.qr(np.ascontiguousarray(a[0, :, n_even:]))
-        out[0, :, k0:], bond[0, k0:, n_even:] = q, r
+        q, r = _triangular(a[0, :, n_even:])
+        copy_into(out[0, :, k0:], q)
+        copy_into(bond[0, k0:, n_even:], r)
     return out, bond, k0, k1
 
 

@@ -79,9 +79,10 @@ def side(hx, hz, operators, near, far, inner, transverse, problem, sites, mirror
     real = hx.real.dtype.type
     count = (1, 1, 2)[sites] if even else (1, 2, 4)[sites]
     out = np.empty((count, d, d), hx.dtype)
-    block = real(transverse) * hx + real(problem) * hz
     for b in range(count):
-        out[b] = block
+        out[b] = 0
+        add_scaled(out[b], hx, transverse)
+        add_scaled(out[b], hz, problem)
         energy = real(problem * inner[b])
         for a in range(d):
             out[b, a, a] += energy
@@ -146,35 +147,39 @@ def right_stacks(operators, even):  # type: ignore[no-untyped-def]
 
 
 @njit
-def _flips_even(theta, out, de, re, flips, sites):  # type: ignore[no-untyped-def]
-    real = out.real.dtype.type
-    if sites == 1:
-        x = real(flips[0])
-        out[0, :de, :re] -= x * theta[0, :de, :re]
-        out[0, de:, re:] -= x * theta[0, de:, re:]
-        out[0, :de, re:] += x * theta[0, :de, re:]
-        out[0, de:, :re] += x * theta[0, de:, :re]
-        return
-    both, difference = real(flips[0] + flips[1]), real(flips[0] - flips[1])
-    for b in range(2):
-        out[b, :de, :re] -= both * theta[1 - b, :de, :re]
-        out[b, de:, re:] += both * theta[1 - b, de:, re:]
-        if difference != 0:
-            out[b, :de, re:] -= difference * theta[1 - b, :de, re:]
-            out[b, de:, :re] += difference * theta[1 - b, de:, :re]
+def add_scaled(out, matrix, factor):  # type: ignore[no-untyped-def]
+    """Add factor times a matrix. Plain loops, here and below, compile many times faster than expressions of slices."""
+    c = out.real.dtype.type(factor)
+    for i in range(out.shape[0]):
+        for j in range(out.shape[1]):
+            out[i, j] += c * matrix[i, j]
 
 
 @njit
-def _flips_dense(theta, out, flips, sites):  # type: ignore[no-untyped-def]
-    real = out.real.dtype.type
-    if sites == 1:
-        x = real(flips[0])
-        out[0] -= x * theta[1]
-        out[1] -= x * theta[0]
-        return
-    first, second = real(flips[0]), real(flips[1])
-    for b in range(4):
-        out[b] -= first * theta[b ^ 2] + second * theta[b ^ 1]
+def add_blocks(out, matrix, de, re, factors):  # type: ignore[no-untyped-def]
+    """Add a matrix whose four blocks even-even, even-odd, odd-even, odd-odd are multiplied by a factor each."""
+    for i in range(out.shape[0]):
+        for j in range(out.shape[1]):
+            c = factors[(0 if i < de else 2) + (0 if j < re else 1)]
+            out[i, j] += out.real.dtype.type(c) * matrix[i, j]
+
+
+@njit
+def _flips(theta, out, de, re, flips, sites, even):  # type: ignore[no-untyped-def]
+    first, second = flips[0], flips[1]
+    if even and sites == 1:
+        add_blocks(out[0], theta[0], de, re, (-first, first, first, -first))
+    elif even:
+        both, difference = first + second, first - second
+        for b in range(2):
+            add_blocks(out[b], theta[1 - b], de, re, (-both, -difference, difference, both))
+    elif sites == 1:
+        for b in range(2):
+            add_scaled(out[b], theta[1 - b], -first)
+    else:
+        for b in range(4):
+            add_scaled(out[b], theta[b ^ 2], -first)
+            add_scaled(out[b], theta[b ^ 1], -second)
 
 
 @njit
@@ -230,10 +235,7 @@ def apply(theta, out, kl, kr, lefts, rights, count, de, re, flips, sites, even, 
             multiply(out[b], kl[b], theta[b])
             multiply(out[b], theta[b], kr[b], PLAIN, TRANSPOSED, 1.0, 1.0)
     if sites > 0:
-        if even:
-            _flips_even(theta, out, de, re, flips, sites)
-        else:
-            _flips_dense(theta, out, flips, sites)
+        _flips(theta, out, de, re, flips, sites, even)
     if count > 0:
         if even:
             _channels_even(theta, out, lefts, rights, count, de, re, sites, buffer)
