@@ -39,7 +39,7 @@ def convergence_text(convergence: Convergence) -> str:
     floor = convergence.floor()
     if not resolved[: len(rungs) - own].all():
         what = "last run" if own else "reference"
-        lines.append(f"  ~ less than twice the error of the {what} itself, {floor:.1e}: known to be small, no more")
+        lines.append(f"  ~ less than twice the error of the {what} itself, {floor:.1e}: not told apart from it")
     bond_error, step_error = convergence.own_error()
     lines.append(
         f"  correlation error of the last run: {_known(bond_error, 'bond dimension', 'three bond dimensions')}, "

@@ -164,7 +164,7 @@ def test_runs_about_as_good_as_the_target_are_marked():
     np.testing.assert_array_equal(study.resolved(), study.error() >= 2 * bond)
     assert list(study.resolved()[1::2]) == [True, True, False, False]
     assert "~" in str(study)
-    assert "known to be small" in str(study)
+    assert "not told apart" in str(study)
     better = converge(anneal(), (8, 16, 32, 40), backend=Known(exponent=3.0), reference=exact_truth(1e-9))
     assert better.resolved().all()
     assert "~" not in str(better)
