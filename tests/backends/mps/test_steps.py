@@ -66,6 +66,22 @@ def test_halvings_cut_every_step_in_two():
     np.testing.assert_allclose(np.diff(fine).reshape(-1, 4), np.diff(coarse)[:, None] / 4 * np.ones(4), rtol=1e-9)
 
 
+def test_a_problem_part_at_once_starts_with_small_steps():
+    constant = ar.Schedule.linear((1.0, 1.0), (1.0, 1.0))
+    with pytest.warns(ar.AnnealRefWarning):
+        quench = ar.Anneal(anneal().instance, constant, 2.0)
+    grid = step_ends(quench, phase_mesh(quench), 1.0, [])
+    steps = np.diff(grid)
+    assert steps[0] == steps[1] < steps[-1] / 60
+    np.testing.assert_allclose(steps[2:7] / steps[1:6], 2.0)
+    np.testing.assert_allclose(steps[7:], grid[7] - grid[0])
+    # a start that is entangled already, or a problem part that comes by and by, has no need of it
+    ground = ar.Anneal(quench.instance, constant, 2.0, start="ground")
+    assert len(step_ends(ground, phase_mesh(ground), 1.0, [])) == len(grid) - 6
+    slow = np.diff(step_ends(anneal(), phase_mesh(anneal()), 1.0, []))
+    assert slow[0] > slow.max() / 10
+
+
 @pytest.mark.parametrize("marks", [(0.6, np.nextafter(0.6, 1)), (0.7, 1.2200000000000002, 1.22), (2.0 - 2e-16, 2.0)])
 def test_marks_that_differ_by_rounding_share_a_step_end(marks):
     case = anneal(waveform=WAVEFORM)
