@@ -33,7 +33,6 @@ from anneal_ref.backends.mps.wiring import Floats
 from anneal_ref.backends.phase import Mesh, halved
 from anneal_ref.model.anneal import Anneal
 
-
 # the first step under a problem part at once is cut in half so often towards its beginning
 _GRADES = 6
 
