@@ -32,6 +32,8 @@ Strengths = tuple[float, float]
 """Transverse and problem strength, G and P."""
 
 _NONE = np.zeros(1)
+# what is asked of the second state of a pair, of which only the energy counts
+_SECOND_STATE = 1e-3
 _TWO_SPINS = np.array([1.0, -1.0, -1.0, 1.0])
 _FIRST, _SECOND = np.array([1.0, 1.0, -1.0, -1.0]), np.array([1.0, -1.0, 1.0, -1.0])
 
@@ -135,6 +137,37 @@ class Chain:
                 if p == last - 1:
                     self._evolve_site(last, tau, strengths)
 
+    def relax(self, strengths: Strengths, tolerance: float, look_up: bool = False) -> float:
+        """Move the centre from the first to the last site, each pair on the way taken to its lowest state.
+
+        Parameters
+        ----------
+        strengths : (float, float)
+        tolerance : float
+            Residual of a local state, relative to the spread of its Hamiltonian.
+        look_up : bool
+            Look for the second state of every pair as well.
+
+        Returns
+        -------
+        float
+            The smallest energy between the first and the second state of a pair; infinite unless looked for.
+        """
+        gap, last = np.inf, self.n_sites - 1
+        for p in range(max(last, 1)):
+            sites = min(2, self.n_sites)
+            theta = self._joined(p) if sites == 2 else self.tensors[p]
+            theta, energy = self._lowest(theta, p, sites, strengths, tolerance, theta[None][:0])
+            if look_up and theta.size > 1:
+                other = np.random.default_rng(p).normal(size=theta.shape).astype(theta.dtype)
+                second = self._lowest(other, p, sites, strengths, _SECOND_STATE, theta[None])[1]
+                gap = min(gap, second - energy)
+            if sites == 2:
+                self._part(p, theta)
+            else:
+                self.tensors[p] = theta
+        return gap
+
     def flip(self) -> None:
         """Turn the chain round, so that its last site becomes the first."""
         self.tensors = [np.ascontiguousarray(tensor.swapaxes(1, 2)) for tensor in self.tensors[::-1]]
@@ -172,17 +205,33 @@ class Chain:
     def _evolved(self, theta: Tensor, p: int, sites: int, tau: float, strengths: Strengths) -> Tensor:
         """Return the tensor of `sites` open sites from position p on, evolved by tau."""
         right = p + sites
-        evens = (self.dims[p][0], self.dims[right][0])
-        weights = np.zeros(2)
-        weights[:sites] = self.weights[p:right]
-        out: Tensor
         out, vectors = compiled.evolve(
             theta, tau, self.limits.krylov, self.left[p], self.right[right], self.wiring.wires[sites][p],
-            self._inner(p, sites), weights, strengths, evens, sites, self.symmetric,
+            self._inner(p, sites), self._flips(p, sites), strengths, (self.dims[p][0], self.dims[right][0]), sites,
+            self.symmetric,
         )  # fmt: skip
         self.exponentials += 1
         self.vectors += vectors
-        return out
+        return np.asarray(out)
+
+    def _lowest(
+        self, theta: Tensor, p: int, sites: int, strengths: Strengths, tolerance: float, avoided: Tensor
+    ) -> tuple[Tensor, float]:
+        """Return the lowest state of `sites` open sites from position p on, orthogonal to some, and its energy."""
+        right = p + sites
+        out, energy, _ = compiled.lowest(
+            theta, tolerance, avoided,
+            self.left[p], self.right[right], self.wiring.wires[sites][p],
+            self._inner(p, sites), self._flips(p, sites), strengths, (self.dims[p][0], self.dims[right][0]), sites,
+            self.symmetric,
+        )  # fmt: skip
+        return out, energy
+
+    def _flips(self, p: int, sites: int) -> Floats:
+        """Return the transverse weights of the open spins, filled up to two."""
+        weights = np.zeros(2)
+        weights[:sites] = self.weights[p : p + sites]
+        return weights
 
     def _inner(self, p: int, sites: int) -> Floats:
         """Return the problem energies of the open spins alone, one for every matrix of the tensor."""
@@ -195,9 +244,14 @@ class Chain:
             return np.asarray(self.fields[p] * _SECOND[:2])
         return _NONE
 
+    def _joined(self, p: int) -> Tensor:
+        return np.asarray(compiled.join(self.tensors[p], self.tensors[p + 1], self.dims[p + 1][0], self.symmetric))
+
     def _evolve_pair(self, p: int, tau: float, strengths: Strengths) -> None:
-        theta = compiled.join(self.tensors[p], self.tensors[p + 1], self.dims[p + 1][0], self.symmetric)
-        theta = self._evolved(theta, p, 2, tau, strengths)
+        self._part(p, self._evolved(self._joined(p), p, 2, tau, strengths))
+
+    def _part(self, p: int, theta: Tensor) -> None:
+        """Divide the tensor of positions p and p + 1, the centre going to the latter."""
         limits = self.limits
         a, b, even, odd, dropped, singular = compiled.divide(
             theta, limits.bond_dimension, limits.truncation, self.symmetric

@@ -18,18 +18,31 @@ def _entries(stamp: int) -> tuple[Any, ...]:
     def evolve(theta, tau, tolerance, left, right, wires, inner, flips, strengths, evens, sites, even):  # type: ignore[no-untyped-def]
         """Return exp(-i tau H) theta and the number of Lanczos vectors, H made of the blocks on both sides."""
         stamp  # noqa: B018
-        lhx, lhz, lops = left
-        rhx, rhz, rops = right
-        left_near, left_far, right_near, right_far, cross_left, cross_right = wires
-        transverse, problem = strengths
+        kl, kr, lefts, rights, count = effective.assembled(left, right, wires, inner, strengths, sites, even)
         de, re = evens
-        kl = effective.side(lhx, lhz, lops, left_near, left_far, inner, transverse, problem, sites, False, even)
-        kr = effective.side(rhx, rhz, rops, right_near, right_far, 0.0 * inner, transverse, problem, sites, True, even)
-        count = len(cross_left)
-        lefts = effective.left_stacks(effective.combined(cross_left, lops), even, problem)
-        rights = effective.right_stacks(effective.combined(cross_right, rops), even)
         return krylov.exponential(
-            theta, tau, tolerance, kl, kr, lefts, rights, count, de, re, transverse * flips, sites, even
+            theta, tau, tolerance, kl, kr, lefts, rights, count, de, re, strengths[0] * flips, sites, even
+        )
+
+    @njit(cache=True, nogil=True)
+    def lowest(theta, tolerance, avoided, left, right, wires, inner, flips, strengths, evens, sites, even):  # type: ignore[no-untyped-def]
+        """Return the lowest state, its energy and the number of products, H made of the blocks on both sides."""
+        stamp  # noqa: B018
+        kl, kr, lefts, rights, count = effective.assembled(left, right, wires, inner, strengths, sites, even)
+        return krylov.lowest(
+            theta,
+            tolerance,
+            avoided,
+            kl,
+            kr,
+            lefts,
+            rights,
+            count,
+            evens[0],
+            evens[1],
+            strengths[0] * flips,
+            sites,
+            even,
         )
 
     @njit(cache=True, nogil=True)
@@ -63,7 +76,7 @@ def _entries(stamp: int) -> tuple[Any, ...]:
         stamp  # noqa: B018
         return dividing.attach(bond, b, k_even, n_even, even)
 
-    return evolve, absorb, join, divide, orthogonalise, attach
+    return evolve, lowest, absorb, join, divide, orthogonalise, attach
 
 
-evolve, absorb, join, divide, orthogonalise, attach = _entries(stamp_of(Path(__file__).parent, KERNELS))
+evolve, lowest, absorb, join, divide, orthogonalise, attach = _entries(stamp_of(Path(__file__).parent, KERNELS))

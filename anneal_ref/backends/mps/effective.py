@@ -241,3 +241,17 @@ def apply(theta, out, kl, kr, lefts, rights, count, de, re, flips, sites, even, 
             _channels_even(theta, out, lefts, rights, count, de, re, sites, buffer)
         else:
             _channels_dense(theta, out, lefts, rights, count, buffer)
+
+
+@njit
+def assembled(left, right, wires, inner, strengths, sites, even):  # type: ignore[no-untyped-def]
+    """Return what `apply` needs of the blocks on both sides: K of either, the stacks of the channels, their number."""
+    lhx, lhz, lops = left
+    rhx, rhz, rops = right
+    left_near, left_far, right_near, right_far, cross_left, cross_right = wires
+    transverse, problem = strengths
+    kl = side(lhx, lhz, lops, left_near, left_far, inner, transverse, problem, sites, False, even)
+    kr = side(rhx, rhz, rops, right_near, right_far, 0.0 * inner, transverse, problem, sites, True, even)
+    lefts = left_stacks(combined(cross_left, lops), even, problem)
+    rights = right_stacks(combined(cross_right, rops), even)
+    return kl, kr, lefts, rights, len(cross_left)

@@ -1,4 +1,4 @@
-r"""Kernels: the exponential of an effective Hamiltonian on a tensor, by Lanczos vectors of adaptive number.
+r"""Kernels: the exponential of an effective Hamiltonian on a tensor, and its lowest state, by Lanczos vectors.
 
     exp(-i tau H) v  ~  |v| V exp(-i tau T) e_1
 
@@ -6,6 +6,9 @@ T is the tridiagonal matrix of the Lanczos recursion. The vector that the last p
 though it is not multiplied itself: its diagonal element is guessed to be that of the one before, which is wrong at an
 order in tau higher than leaving it out. The number of vectors grows until the last coefficient of exp(-i tau T) e_1,
 times tau and the spread of the elements of T, is below the tolerance.
+
+The lowest state is that of T as well, y, with the residual |(H - energy) V y| = |beta_k y_k| from the last off-diagonal
+element; after a number of vectors the recursion starts again from it. These vectors are kept orthogonal by force.
 
 References
 ----------
@@ -23,6 +26,8 @@ MOST = 40
 """Lanczos vectors at most; a step that needs more is far too long."""
 
 _TERMS = 24
+
+_AT_ONCE, _ROUNDS = 16, 6
 
 
 @njit(fastmath=True)
@@ -131,3 +136,70 @@ def exponential(  # type: ignore[no-untyped-def]
         for i in range(n):
             flat_out[i] += c * vectors[j, i]
     return out, k
+
+
+@njit(fastmath=True)
+def _without(w, v):  # type: ignore[no-untyped-def]
+    """Take from w its component along the unit vector v."""
+    real = imaginary = 0.0
+    for i in range(w.size):
+        real += v[i].real * w[i].real + v[i].imag * w[i].imag
+        imaginary += v[i].real * w[i].imag - v[i].imag * w[i].real
+    c = real + 1j * imaginary
+    for i in range(w.size):
+        w[i] -= c * v[i]
+
+
+@njit
+def lowest(  # type: ignore[no-untyped-def]
+    theta, tolerance, avoided, kl, kr, lefts, rights, count, de, re, flips, sites, even
+):
+    """Return the lowest state of H orthogonal to the `avoided` ones, its energy, and the number of products it took.
+
+    The search begins with theta and ends when the residual is below `tolerance`, in units of the largest off-diagonal
+    element of T, or below rounding. In double precision only.
+    """
+    n, locked = theta.size, len(avoided)
+    others = avoided.reshape(locked, n)
+    most = min(_AT_ONCE, n - locked)
+    basis = np.empty((most + 1,) + theta.shape, theta.dtype)
+    vectors = basis.reshape(most + 1, n)
+    buffer = np.empty(n * count, theta.dtype)
+    found, w = theta.copy(), np.zeros_like(theta)
+    flat, flat_w = found.reshape(n), w.reshape(n)
+    energy, spread, products = 0.0, 0.0, 0
+    for _ in range(_ROUNDS):
+        for v in others:
+            _without(flat, v)
+        _scaled(vectors[0], flat, 1 / np.sqrt(_overlap(flat, flat)))
+        matrix = np.zeros((most, most))
+        k, done = 0, False
+        while True:
+            apply(basis[k], w, kl, kr, lefts, rights, count, de, re, flips, sites, even, buffer)
+            products += 1
+            matrix[k, k] = _overlap(vectors[k], flat_w)
+            # twice: what is left may be small, and must be orthogonal all the same
+            for _ in range(2):
+                for v in others:
+                    _without(flat_w, v)
+                for v in vectors[: k + 1]:
+                    _without(flat_w, v)
+            off = np.sqrt(_overlap(flat_w, flat_w))
+            spread = max(spread, off)
+            k += 1
+            values, states = np.linalg.eigh(matrix[:k, :k])
+            energy = values[0]
+            left = off * abs(states[k - 1, 0])
+            done = left <= max(tolerance * spread, 1e-14 * abs(energy)) or k == n - locked
+            if done or k == most:
+                break
+            matrix[k, k - 1] = matrix[k - 1, k] = off
+            _scaled(vectors[k], flat_w, 1 / off)
+        flat[:] = 0
+        for j in range(k):
+            c = states[j, 0]
+            for i in range(n):
+                flat[i] += c * vectors[j, i]
+        if done:
+            break
+    return found, energy, products
