@@ -49,7 +49,7 @@ class Saved:
         Local exponentials, their Lanczos vectors, largest bond so far.
     discarded : ndarray, shape (N + 1,), optional
         Weight discarded at every bond, the outer ones included; none by default.
-    times, parts : ndarrays, shapes (steps + 1,) and (steps + 1, 2)
+    times, parts : ndarrays, shapes (notes,) and (notes, 2)
         The energies noted so far (see `Work`); empty before the first of them.
     seconds : float
         Wall time so far.

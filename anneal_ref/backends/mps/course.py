@@ -35,13 +35,15 @@ class Course:
         Where it is taken up; the tensors are taken over.
     threads : int
         Of the matrix products.
+    began : float
+        Reading of `perf_counter` when the work began, that on the start included.
     """
 
-    def __init__(self, anneal: Anneal, grid: Floats, limits: Limits, saved: Saved, threads: int = 1) -> None:
+    def __init__(self, anneal: Anneal, grid: Floats, limits: Limits, saved: Saved, threads: int, began: float) -> None:
         self.anneal, self.grid, self.threads = anneal, grid, threads
         self.steps, self.two_site_steps, self.kicks = saved.steps, saved.two_site_steps, saved.kicks
         self.start = saved.start
-        self._began = perf_counter() - saved.seconds
+        self._began = began - saved.seconds
         self.chain = chain = Chain(saved.product, anneal.instance, limits)
         chain.exponentials, chain.vectors, chain.largest = saved.exponentials, saved.vectors, saved.largest
         if saved.discarded is not None:

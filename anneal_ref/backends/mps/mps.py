@@ -12,12 +12,14 @@ from typing import Any, Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from anneal_ref.backends.blas_threads import blas_threads
 from anneal_ref.backends.contract import Kick, Plan, check_anneal, check_kicks, check_times, refuse_checkpoint
 from anneal_ref.backends.memory import require_memory
 from anneal_ref.backends.mps.chain import Limits
 from anneal_ref.backends.mps.checkpoint import Checkpoint, Saved, subject_of
 from anneal_ref.backends.mps.costs import bond_limits, cost_of
 from anneal_ref.backends.mps.course import REFRESH, Course
+from anneal_ref.backends.mps.ground_start import ground_cost, ground_product
 from anneal_ref.backends.mps.ordering import best_order, cut_ranks
 from anneal_ref.backends.mps.start import plus_state
 from anneal_ref.backends.mps.state import MPSState
@@ -205,8 +207,8 @@ class MPS:
         if run.checkpoint is not None:
             checkpoint = Checkpoint(Path(run.checkpoint), run.every, subject_of(anneal, self, stops[-1], kicks))
             saved = checkpoint.read()
-        begun = Saved(self._start(anneal, order), seconds=perf_counter() - began) if saved is None else saved
-        course = Course(anneal, grid, self._limits, begun, run.threads)
+        begun = self._start(anneal, order, run.threads) if saved is None else saved
+        course = Course(anneal, grid, self._limits, begun, run.threads, began)
         if checkpoint is not None and saved is None:
             checkpoint.write(course.saved())
         with run.track(last, f"{anneal.n_sites} spins") as bar:
@@ -229,8 +231,13 @@ class MPS:
         krylov = max(1e-2 * self.truncation**0.5, _KRYLOV[self.precision])
         return Limits(self.bond_dimension, self.truncation, krylov)
 
-    def _start(self, anneal: Anneal, order: NDArray[np.intp]) -> Any:
-        return plus_state(anneal.instance, order, not anneal.instance.has_fields, _DTYPES[self.precision])
+    def _start(self, anneal: Anneal, order: NDArray[np.intp], threads: int) -> Saved:
+        if anneal.start == "plus":
+            return Saved(plus_state(anneal.instance, order, not anneal.instance.has_fields, _DTYPES[self.precision]))
+        with blas_threads(threads):
+            ground = ground_product(anneal, order, self._limits)
+        tensors = [tensor.astype(_DTYPES[self.precision]) for tensor in ground.product.tensors]
+        return Saved(replace(ground.product, tensors=tensors), start=ground.ledger())
 
     def _order(self, anneal: Anneal) -> NDArray[np.intp]:
         n = anneal.n_sites
@@ -254,12 +261,16 @@ class MPS:
     def _require(self, anneal: Anneal, order: NDArray[np.intp], steps: int) -> tuple[int, float]:
         """Return bytes and seconds of a run, or raise `TooLarge`."""
         cost = cost_of(anneal.instance, order, self.bond_dimension, self.precision, 1 / REFRESH)
+        needed, seconds = cost.bytes, cost.seconds * steps
+        if anneal.start == "ground":
+            search = ground_cost(anneal.instance, order, self.bond_dimension)
+            needed, seconds = max(needed, search.bytes), seconds + search.seconds
         smaller = max(1, self.bond_dimension // 2)
         require_memory(
-            cost.bytes, f"a matrix product state of {len(order)} spins with bond dimension {self.bond_dimension}",
+            needed, f"a matrix product state of {len(order)} spins with bond dimension {self.bond_dimension}",
             (f"MPS(bond_dimension={smaller})", "precision='single'", "a machine with more memory"),
         )  # fmt: skip
-        return cost.bytes, cost.seconds * steps
+        return needed, seconds
 
 
 @lru_cache(maxsize=256)

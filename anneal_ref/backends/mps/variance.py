@@ -79,9 +79,7 @@ def energy_variance(
         problem * finite("fields", fields, (n,))[order],
         number("transverse", transverse) * finite("weights", weights, (n,))[order],
     )
-    rank = max(len(term.stop) for term in terms)
-    # the operators of all bonds, and a few sets of overlaps
-    need = 16 * max(product.bond_dimensions, default=1) ** 2 * (n * (rank + 2) + 6 * rank**2)
+    need = variance_bytes(n, max(product.bond_dimensions, default=1), max(len(term.stop) for term in terms))
     require_memory(need, "the energy variance", ("a smaller bond dimension",))
 
     tensors, right = _from_the_right(product, terms)
@@ -98,6 +96,11 @@ def energy_variance(
         variance += float(np.sum(np.abs(w[0] + np.sum(w[1:] @ beyond, axis=0)) ** 2))
         overlaps += _products(w[1:])
     return float(left[0, 0, 0].real), variance
+
+
+def variance_bytes(n_sites: int, bond: int, rank: int) -> int:
+    """Return the bytes at the peak of `energy_variance`: the operators of all bonds, and a few sets of overlaps."""
+    return 16 * bond**2 * (n_sites * (rank + 2) + 6 * rank**2)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
