@@ -89,17 +89,17 @@ class Course:
         chain = self.chain
         return Saved(
             chain.product(),
-            self.steps,
-            self.two_site_steps,
-            self.kicks,
-            chain.exponentials,
-            chain.vectors,
-            chain.largest,
-            chain.discarded.copy(),
-            np.array(self.work.times),
-            np.array(self.work.parts),
-            self.seconds,
-            self.start,
+            steps=self.steps,
+            two_site_steps=self.two_site_steps,
+            kicks=self.kicks,
+            exponentials=chain.exponentials,
+            vectors=chain.vectors,
+            largest=chain.largest,
+            discarded=chain.discarded.copy(),
+            times=np.array(self.work.times),
+            parts=np.array(self.work.parts),
+            seconds=self.seconds,
+            start=self.start,
         )
 
     def note(self) -> str:
