@@ -93,8 +93,9 @@ def test_the_finest_step_of_the_largest_bond_is_reported():
 
 
 def test_the_best_pair_tells_the_step_error():
+    # a heavily truncated pair of runs differs by more than the step does
     runs, _ = series(0.2, step=1e-4)
-    zz = runs[3].moments.zz.value + 0.05 * (1 - np.eye(N))  # a heavily truncated pair that differs by more than the step
+    zz = runs[3].moments.zz.value + 0.05 * (1 - np.eye(N))
     runs[3] = Evolution(Moments.of(np.zeros(N), zz), runs[3].ledger, runs[3].refined)
     before = measured_moments(anneal(), runs, errors_of(anneal(), runs))[1]["step"]
     more, _ = series(0.2, step=1e-4, extra=[(3, 0, 0), (2, 1, 0)])

@@ -295,7 +295,7 @@ def test_identity_names_the_anneal_and_every_setting_that_changes_digits():
 def test_it_reads_well_and_survives_a_pickle():
     truth = reference(anneal(), backend=Plain())
     text = str(truth)
-    words = ("4 spins", "converged", "Plain(steps=40", "reordered", "step / 4", "error by source: step", "ground energy")
+    words = ("4 spins", "converged", "Plain(steps=40", "reordered", "step / 4", "by source: step", "ground energy")
     for word in words:
         assert word in text
     assert max(map(len, text.splitlines())) < 140

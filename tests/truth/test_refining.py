@@ -114,9 +114,9 @@ def test_a_wrong_second_back_end_is_an_outcome(monkeypatch):
     class Tilted(ar.MPS):
         """Solves an anneal of another duration."""
 
-        def evolve(self, problem, at=1.0, kicks=(), run=ar.Run()):
+        def evolve(self, problem, at=1.0, kicks=(), run=None):
             other = ar.Anneal(problem.instance, problem.schedule, 1.03 * problem.duration)
-            return super().evolve(other, at, kicks, run)
+            return super().evolve(other, at, kicks)
 
     monkeypatch.setattr(choosing, "default_mps", lambda tolerance: Tilted(bond_dimension=8))
     truth = ar.reference(CUBE, tolerance=1e-3, samples=1, independent=True)
