@@ -1,7 +1,7 @@
 """Are the error bars of a reference by matrix product states honest, and useful?
 
     python benchmarks/coverage.py --quick      24 anneals, minutes
-    python benchmarks/coverage.py --full       216 anneals and a few of 25 spins, an hour or more; --part k/n for a share
+    python benchmarks/coverage.py --full       216 anneals and a few of 25 spins, an hour or more; --part k/n: a share
 
 Anneals with known answers (state vector at 1e-10, free fermions for chains) are referenced by `MPS` at tolerances of
 1e-2 and 1e-3. Counted are all entries of <Z>, <ZZ> and <X> that symmetry does not fix: how many errors lie within their
@@ -104,7 +104,7 @@ class Result:
 
 
 def solve(anneal: ar.Anneal, tolerance: float, budget: float) -> Result:
-    """Reference one anneal, and compare with what is known."""
+    """Make the reference of one anneal, and compare it with what is known."""
     chain = anneal.n_sites > 25
     exact = (ar.FreeFermions(tolerance=1e-9) if chain else ar.StateVector(tolerance=1e-10)).evolve(anneal).moments()
     truth = ar.reference(anneal, tolerance, backend=default_mps(tolerance), samples=1, budget=budget)
@@ -112,7 +112,7 @@ def solve(anneal: ar.Anneal, tolerance: float, budget: float) -> Result:
     bars = [free_entries(anneal, _bars(found))]
     errors = [np.abs(free_entries(anneal, found) - free_entries(anneal, exact))]
     ground = float(truth.ground.value)
-    derived, known = [], []
+    derived = []
     for f in (
         lambda moments: ar.observables.problem_energy(moments, anneal.instance) / anneal.n_sites,
         lambda moments: (ar.observables.problem_energy(moments, anneal.instance) - ground) / anneal.n_sites,
@@ -120,7 +120,6 @@ def solve(anneal: ar.Anneal, tolerance: float, budget: float) -> Result:
     ):
         estimate = truth.estimate(f)
         derived.append((abs(float(estimate.value) - float(f(exact))), float(estimate.num)))
-        known.append(f(exact))
     return Result(
         f"{anneal.instance.name}, {anneal.duration:g}", tolerance, truth.outcome, np.concatenate(errors),
         np.concatenate(bars), np.array([d[0] for d in derived]), np.array([d[1] for d in derived]),
