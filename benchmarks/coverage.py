@@ -1,4 +1,4 @@
-"""Are the error bars of a reference by matrix product states honest, and useful?
+"""Error bars of references by matrix product states: whether they are honest, and useful.
 
     python benchmarks/coverage.py --quick      24 anneals, minutes
     python benchmarks/coverage.py --full       216 anneals and a few of 25 spins, an hour or more; --part k/n: a share
