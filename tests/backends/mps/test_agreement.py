@@ -50,10 +50,10 @@ def test_every_lattice_at_full_bond_dimension(apart, family, kind, duration):
 
 
 @pytest.mark.slow
-@pytest.mark.parametrize("kind", ["plain", "fields and weights"])
 @pytest.mark.parametrize("family", FAMILIES)
-def test_long_anneals_at_full_bond_dimension(apart, family, kind):
-    anneal = ar.Anneal(instance(FAMILIES[family], kind, seed=1), SCHEDULE, 20.0)
+def test_long_anneals_at_full_bond_dimension(apart, family):
+    kind = ("plain", "fields and weights")[list(FAMILIES).index(family) % 2]
+    anneal = ar.Anneal(instance(FAMILIES[family], kind, seed=1), SCHEDULE, 10.0)
     assert apart(FULL.evolve(anneal), EXACT.evolve(anneal)) < 1e-6
 
 
@@ -229,29 +229,30 @@ LARGE = {
 }
 
 
-def falls_with_the_cap(apart, anneal, exact, caps, **settings):
-    """The error falls from cap to cap down to the floor of the step, and the floor falls with the step."""
-    coarse = [ar.MPS(bond_dimension=cap, **settings).evolve(anneal) for cap in caps]
-    errors = np.array([apart(state, exact) for state in coarse])
-    floor = errors[-1]
-    finer = apart(ar.MPS(bond_dimension=caps[-1], halvings=2, truncation=1e-15).evolve(anneal), exact)
-    weights = np.array([state.ledger["discarded_weight"] for state in coarse])
-    above = errors > 3 * floor
-    assert above[0]
-    assert (errors[1:][above[1:]] < errors[:-1][above[1:]]).all()
-    assert (np.diff(weights) <= 0).all()
-    assert finer < floor / 30
-    return errors, finer
-
-
 @pytest.mark.slow
-@pytest.mark.parametrize("duration", [0.5, 2.0], ids=["fast", "slow"])
+@pytest.mark.parametrize("duration", [0.3, 1.0], ids=["fast", "slow"])
 @pytest.mark.parametrize("family", LARGE)
 def test_error_against_the_cap(apart, family, duration):
     case = ar.draw_instance(LARGE[family], ar.disorder.gaussian(), seed=7)
     anneal = ar.Anneal(case, SCHEDULE, duration)
     exact = ar.StateVector(tolerance=1e-9).evolve(anneal)
-    falls_with_the_cap(apart, anneal, exact, (8, 16, 32, 64, 128, 256))
+    # bonds of the biclique need all of their room
+    caps = (16, 64, 256) if family == "biclique" else (8, 16, 32, 64, 128)
+    states = [ar.MPS(bond_dimension=cap, truncation=1e-14).evolve(anneal) for cap in caps]
+    errors = np.array([apart(state, exact) for state in states])
+    weights = np.array([state.ledger["discarded_weight"] for state in states])
+    # the error falls from cap to cap until only that of the step is left
+    floor = errors[-1]
+    falling = errors[1:] > 3 * floor
+    assert errors[0] > 2 * floor
+    assert (errors[1:][falling] < errors[:-1][falling]).all()
+    assert floor < 1e-3
+    # what is discarded goes on falling, down to what the truncation allows
+    assert (np.diff(weights)[weights[1:] > 1e-9] < 0).all()
+    assert weights[-1] < 1e-9
+    # and the floor falls with the fourth power of the step
+    finer = ar.MPS(bond_dimension=caps[-1], truncation=1e-14, halvings=1).evolve(anneal)
+    assert apart(finer, exact) < floor / 10
 
 
 @pytest.mark.nightly
@@ -265,15 +266,15 @@ def test_error_against_the_cap_on_25_spins(apart):
 
 
 @pytest.mark.nightly
-def test_36_spins_go_through():
+def test_36_spins_go_through(apart):
     case = ar.draw_instance(lattices.square(6, 6, (False, True)), ar.disorder.plus_minus(), seed=7)
     anneal = ar.Anneal(case, SCHEDULE, 5.0)
-    small, large = (ar.MPS(bond_dimension=cap).evolve(anneal) for cap in (32, 64))
+    small, middle, large = (ar.MPS(bond_dimension=cap).evolve(anneal) for cap in (16, 32, 64))
     assert large.ledger["largest_bond"] == 64
-    assert large.ledger["discarded_weight"] < small.ledger["discarded_weight"]
+    assert small.ledger["discarded_weight"] > middle.ledger["discarded_weight"] > large.ledger["discarded_weight"]
     assert abs(large.ledger["norm_drift"]) < 1e-11
-    # the better of two truncations of one evolution has the lower energy on a slow anneal
-    assert large.energy() < small.energy()
-    samples = large.sample(2000, seed=1)
-    zz, wanted = samples.moments().zz, large.moments().zz
-    assert (np.abs(zz.value - wanted.value) < 6 * np.sqrt((1 - wanted.value**2) / 2000) + 5e-3).all()
+    assert apart(middle, large) < apart(small, large)
+    samples, moments = large.sample(2000, seed=1), large.moments()
+    # a normal bound at 1e-4 over 630 pairs
+    spread = np.sqrt((1 - moments.zz.value**2) / 2000)
+    assert (np.abs(samples.moments().zz.value - moments.zz.value) < 5.2 * spread + 5e-3).all()
