@@ -7,8 +7,9 @@ A reference is refined in one knob or in several, each separately, and every sou
   scheme is two;
 - *truncation*: from three runs with the bond dimension doubled from one to the next. Their changes shrink by a
   measured ratio, and what is left is the rest of the geometric series. The ratio of the discarded weights is a second
-  opinion about it, and the worse of the two counts. A discarded weight alone would be no error, and a drop by more than
-  a factor of ten is not relied on: it says little about the next;
+  opinion about it, and the worse of the two counts. A discarded weight alone would be no error; a drop by more than a
+  factor of ten is not relied on, since it says little about the next; and a ladder that begins far off is no series
+  yet, whatever its ratio;
 - *rounding*: with one knob, from the coarsest run solved with its sites in another order; with several, from one run
   with tighter local exponentials and truncation, or in double precision if the others are in single.
 
@@ -30,7 +31,7 @@ from anneal_ref.base.estimate import Estimate
 from anneal_ref.model.anneal import Anneal
 from anneal_ref.observe.moments import Moments
 from anneal_ref.truth.evolutions import Evolution, fixed_by_symmetry, free_entries
-from anneal_ref.truth.refinement import SAFETY, UNSETTLED, Decay, measure_decay
+from anneal_ref.truth.refinement import FAR_OFF, SAFETY, UNSETTLED, Decay, measure_decay
 
 Floats = NDArray[np.float64]
 
@@ -226,7 +227,7 @@ def _grid(runs: Sequence[Evolution], entries: Sequence[Floats]) -> Errors:
     # changes of the size of what an update may discard are noise, and do not shrink
     noise = float(runs[c].ledger.get("truncation", 0.0)) ** 0.5
     early, late = _rms(entries[b] - entries[a]), max(_rms(entries[c] - entries[b]) - noise, 0.0)
-    ratios = [_LEAST_RATIO, late / early if early > 0 else (np.inf if late > 0 else 0.0)]
+    ratios = [_LEAST_RATIO, FAR_OFF * early, late / early if early > 0 else (np.inf if late > 0 else 0.0)]
     before, after = (float(runs[k].ledger.get("discarded_weight", 0.0)) for k in (b, c))
     # where next to nothing is discarded the ratio is one of roundings
     if after > 1e-8:

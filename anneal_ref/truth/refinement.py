@@ -40,7 +40,9 @@ SAFETY = 2.0
 UNSETTLED = 0.5
 """A measured decay above this is no convergence."""
 
-_SECOND_ORDER = 3.0  # decay per unit of the first change
+FAR_OFF = 3.0
+"""Least decay in units of the first change: a change that is not small brings companions of its own square."""
+
 _MOST = 3.0  # bar in units of the last difference where the series does not converge
 _ULP = float(np.finfo(np.float64).eps)
 
@@ -123,7 +125,7 @@ def measure_decay(
     first, second = _rms(values[1] - values[0]), _rms(values[2] - values[1])
     beyond = max(second - SAFETY * rounding, 0.0)
     measured = beyond / first if first > 0 else (np.inf if beyond > 0 else 0.0)
-    return Decay(max(measured, 2.0**-order, _SECOND_ORDER * first), rounding, growth)
+    return Decay(max(measured, 2.0**-order, FAR_OFF * first), rounding, growth)
 
 
 def _rms(values: NDArray[np.float64]) -> float:
