@@ -14,7 +14,7 @@ X rotations merged, so that a step costs one layer of ZZ gates. That layer is ap
 
 - gate by gate: `CircuitMPS`, distant pairs swapped together and back;
 - at once: a diagonal matrix product operator for half of the layer, compressed by successive randomised compression
-  (Camano, Epperly and Tropp 2025, as quimb has it), one or two spins a tensor;
+  (Camano, Epperly and Tropp 2025, as quimb has it), two spins a tensor;
 - column by column: the four spins of a ring are one tensor, so that no gate is long-range. The fastest here, but the
   tensor that it splits holds 256 D^2 numbers: on 4x4 that is the whole state vector, on wider cylinders out of reach.
 """
@@ -132,7 +132,7 @@ def diagonal_operator(edges: Sequence[tuple[int, int, float]], n: int, spins: in
     return operator
 
 
-def layer_at_once(case: Case, bond: int, layers: int, cutoff: float, spins: int) -> qtn.MatrixProductState:
+def layer_at_once(case: Case, bond: int, layers: int, cutoff: float, spins: int = 2) -> qtn.MatrixProductState:
     n = case.anneal.instance.n_sites
     # half of the couplings along the cylinder apart: two operators of smaller bonds cost less than one
     halves = [[edge for edge in case.edges if (edge[1] == edge[0] + RING and edge[0] % 4 > 1) == far] for far in (0, 1)]
@@ -180,8 +180,7 @@ def column_by_column(case: Case, bond: int, layers: int, cutoff: float, method: 
 
 PEERS: dict[str, Callable[[Case, int, int, float], qtn.MatrixProductState]] = {
     "gate by gate": gate_by_gate,
-    "layer at once": partial(layer_at_once, spins=1),
-    "layer at once, pairs": partial(layer_at_once, spins=2),
+    "layer at once": layer_at_once,
     "column by column": partial(column_by_column, method="svd"),
     "column by column, eigh": partial(column_by_column, method="svd:eig"),
 }
