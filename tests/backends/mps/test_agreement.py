@@ -256,6 +256,7 @@ def test_error_against_the_cap(apart, family, duration):
 
 
 @pytest.mark.nightly
+@pytest.mark.timeout(3600)
 def test_error_against_the_cap_on_25_spins(apart):
     case = ar.draw_instance(lattices.square(5, 5, (False, True)), ar.disorder.plus_minus(), seed=7)
     anneal = ar.Anneal(case, SCHEDULE, 5.0)
