@@ -225,13 +225,14 @@ def tuned(measure: Measure, target: float, limit: float, least: int, first: int)
     """
     best = (np.inf, 0, 0, np.inf)
     for bond in (bond for bond in BONDS if bond >= least):
-        rung, before = best[2] - 1, np.inf
+        rung = best[2] - 1
         if best[0] == np.inf:
-            rung = first
+            rung, lowest, idle = first, np.inf, 0
             seconds, error = measure(bond, rung)
-            # until the error falls no further: the floor of this bond dimension
-            while target < error < 0.9 * before and rung < len(STEPS) - 1:
-                before = error
+            # it may rise by chance at coarse steps; where it twice falls no further, the bond dimension limits it
+            while error > target and idle < 2 and rung < len(STEPS) - 1:
+                idle = 0 if error < 0.9 * lowest else idle + 1
+                lowest = min(lowest, error)
                 # where the order is four a rung halves the error
                 rung = min(rung + max(1, int(np.log2(error / target))), len(STEPS) - 1)
                 seconds, error = measure(bond, rung)
